@@ -1,0 +1,6 @@
+"""Ties -> parties with integer ids -> compressed adjacency on disk. No string survives past this room."""
+
+from isthmus.graph.adjacency import Graph
+from isthmus.graph.parties import describe
+
+__all__ = ["Graph", "describe"]
