@@ -42,9 +42,7 @@ class Columns(Section):
 
     sender: str = _key("sender", "who contacted or paid; any string or integer type", min_length=1)
     receiver: str = _key("receiver", "who was contacted or paid; any string or integer type", min_length=1)
-    time: str = _key(
-        "time", "when: a timestamp of any unit or zone, or a date; without a zone it is UTC", min_length=1
-    )
+    time: str = _key("time", "when: a timestamp of any unit or zone, or a date; without a zone it is UTC", min_length=1)
     amount: str = _key("", "what it was worth, 0 or more; empty: the log has no amounts")
     id: str = _key("", "identifies a row, so that one delivered twice counts once; empty: no such column")
 
@@ -52,9 +50,7 @@ class Columns(Section):
 class Log(Section):
     """Where the rows come from."""
 
-    path: str = _key(
-        ..., "folder or glob of Parquet files; a folder may hold date partitions such as dt=2026-11-30"
-    )
+    path: str = _key(..., "folder or glob of Parquet files; a folder may hold date partitions such as dt=2026-11-30")
     kind: Literal["plain"] = _key("plain", "how the rows are to be understood")
     columns: Columns = Field(default_factory=Columns)
 
@@ -86,9 +82,7 @@ class Score(Section):
         0.95, "probability that the intervals of all parties hold at once", "share", gt=0.5, lt=1.0
     )
     samples: int = _key(0, "how many to draw; 0: as many as the limits below allow", "samples", ge=0)
-    half_width: float = _key(
-        0.0, "stop once every interval is at least this narrow; 0: off", "betweenness", ge=0, lt=1
-    )
+    half_width: float = _key(0.0, "stop once every interval is at least this narrow; 0: off", "betweenness", ge=0, lt=1)
     top: int = _key(100, "the K of the column `top`: who is surely among the first K", "parties", ge=0)
     minutes: float = _key(30.0, "time that scoring may take", "minutes", gt=0)
     max_hops: int = _key(0, "paths of more arcs do not count; 0: no limit", "arcs", ge=0)

@@ -36,7 +36,9 @@ def describe(graph: Graph, ties: pl.DataFrame) -> pl.DataFrame:
         .with_columns(
             pl.col(counted).fill_null(0),
             *(
-                pl.col(f"amount_{side}").fill_null(0.0) if with_amounts else pl.lit(None, pl.Float64).alias(f"amount_{side}")
+                pl.col(f"amount_{side}").fill_null(0.0)
+                if with_amounts
+                else pl.lit(None, pl.Float64).alias(f"amount_{side}")
                 for side in ("in", "out")
             ),
             first_seen=pl.min_horizontal("first_in", "first_out"),
