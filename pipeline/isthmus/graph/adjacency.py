@@ -14,7 +14,7 @@ from scipy import sparse
 
 from isthmus.errors import DataRefused, StoreError
 
-__all__ = ["LENGTH_OF_WEAKEST", "Graph"]
+__all__ = ["LENGTH_OF_WEAKEST", "Graph", "ids_of"]
 
 Ints = NDArray[np.int64]
 Ids = NDArray[np.int32]
@@ -78,11 +78,11 @@ class Graph:
         needed = {"sender", "receiver"} | ({distance} - {"hops"})
         if missing := sorted(needed - set(ties.columns)):
             raise DataRefused(f"ties lack the column {', '.join(missing)}; they have {', '.join(ties.columns)}")
-        keys = [ties[side].cast(pl.String) for side in ("sender", "receiver")]
+        keys = [ties[side] for side in ("sender", "receiver")]
         if any(key.null_count() for key in keys):
             raise DataRefused("ties hold a null sender or receiver; drop those rows first")
-        parties = pl.concat(keys).unique().sort().alias("party")
-        tail, head = (_ids(key, parties) for key in keys)
+        parties = pl.concat(key.unique().cast(pl.String) for key in keys).unique().sort().alias("party")
+        tail, head = (ids_of(key, parties) for key in keys)
         strength = None if distance == "hops" else ties[distance].cast(pl.Float64).fill_null(0.0).to_numpy()
         kept = tail != head if strength is None else (tail != head) & (strength > 0)
         if not kept.all():
@@ -144,11 +144,18 @@ class Graph:
 _ARRAYS = ("out_ptr", "out_adj", "lengths", "in_ptr", "in_adj", "in_lengths")
 
 
-def _ids(keys: pl.Series, parties: pl.Series) -> NDArray[np.int64]:
-    """Position of each key in the sorted parties."""
+def ids_of(keys: pl.Series, parties: pl.Series) -> NDArray[np.int64]:
+    """Position of each key in `parties`; every key must be there. An Enum is looked up once per category."""
+    if isinstance(keys.dtype, pl.Enum):
+        found: Ints = _lookup(keys.dtype.categories, parties).fill_null(-1).to_numpy()
+        codes: Ints = keys.to_physical().to_numpy()
+        return found[codes]
+    return _lookup(keys.cast(pl.String), parties).to_numpy()
+
+
+def _lookup(keys: pl.Series, parties: pl.Series) -> pl.Series:
     book = pl.DataFrame({"key": parties, "id": pl.int_range(len(parties), dtype=pl.Int64, eager=True)})
-    found = keys.alias("key").to_frame().join(book, on="key", how="left", maintain_order="left")
-    return found["id"].to_numpy()
+    return keys.alias("key").to_frame().join(book, on="key", how="left", maintain_order="left")["id"]
 
 
 def _rows(matrix: sparse.csr_array, weighted: bool, weakest: float) -> tuple[Ints, Ids, Ints | None]:

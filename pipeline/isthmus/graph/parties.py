@@ -8,7 +8,7 @@ from numpy.typing import NDArray
 from scipy import sparse
 from scipy.sparse.csgraph import connected_components
 
-from isthmus.graph.adjacency import Graph
+from isthmus.graph.adjacency import Graph, ids_of
 
 __all__ = ["describe"]
 
@@ -21,37 +21,31 @@ def describe(graph: Graph, ties: pl.DataFrame) -> pl.DataFrame:
     contacts_in, contacts_out (log rows), amount_in, amount_out, component (0 = largest), component_size,
     first_seen, last_seen.
     """
-    out, into = _one_side(ties, "sender", "out"), _one_side(ties, "receiver", "in")
-    both = pl.concat([ties.select("sender", "receiver"), ties.select(sender="receiver", receiver="sender")])
-    degree = both.unique().group_by(party="sender").agg(degree=pl.len().cast(pl.Int64))
+    coded = ties.with_columns(pl.Series(side, ids_of(ties[side], graph.parties)) for side in ("sender", "receiver"))
+    # sorted first, so that the float sums are added in one order whatever the number of threads
+    out = _one_side(coded.sort("sender", "receiver"), "sender", "out")
+    into = _one_side(coded.sort("receiver", "sender"), "receiver", "in")
+    ends = [coded.select(id=one, other=two) for one, two in (("sender", "receiver"), ("receiver", "sender"))]
+    degree = pl.concat(ends).unique().group_by("id").agg(degree=pl.len().cast(pl.Int64))
     component, size = _components(graph)
-    counted = ("degree", "degree_in", "degree_out", "contacts_in", "contacts_out")
-    with_amounts = ties["amount"].null_count() < ties.height
-    return (
-        graph.parties.to_frame()
-        .with_columns(component=component, component_size=size)
-        .join(degree, on="party", how="left", maintain_order="left")
-        .join(out, on="party", how="left", maintain_order="left")
-        .join(into, on="party", how="left", maintain_order="left")
-        .with_columns(
-            pl.col(counted).fill_null(0),
-            *(
-                pl.col(f"amount_{side}").fill_null(0.0)
-                if with_amounts
-                else pl.lit(None, pl.Float64).alias(f"amount_{side}")
-                for side in ("in", "out")
-            ),
-            first_seen=pl.min_horizontal("first_in", "first_out"),
-            last_seen=pl.max_horizontal("last_in", "last_out"),
-        )
-        .select("party", *counted, "amount_in", "amount_out", "component", "component_size", "first_seen", "last_seen")
-    )
+    counts = ("degree", "degree_in", "degree_out", "contacts_in", "contacts_out")
+    amounts = ("amount_in", "amount_out")
+    no_amounts = ties["amount"].null_count() == ties.height
+    described = pl.DataFrame({"id": np.arange(graph.n), "component": component, "component_size": size})
+    for side in (degree, out, into):
+        described = described.join(side, on="id", how="left", maintain_order="left")
+    return described.with_columns(
+        graph.parties,
+        pl.col(counts).fill_null(0),
+        pl.lit(None, pl.Float64).alias("amount_in") if no_amounts else pl.col("amount_in").fill_null(0.0),
+        pl.lit(None, pl.Float64).alias("amount_out") if no_amounts else pl.col("amount_out").fill_null(0.0),
+        first_seen=pl.min_horizontal("first_in", "first_out"),
+        last_seen=pl.max_horizontal("last_in", "last_out"),
+    ).select("party", *counts, *amounts, "component", "component_size", "first_seen", "last_seen")
 
 
 def _one_side(ties: pl.DataFrame, key: str, side: str) -> pl.DataFrame:
-    # sorted first, so that the float sums are added in one order whatever the number of threads
-    ordered = ties.sort("sender", "receiver")
-    return ordered.group_by(party=key, maintain_order=True).agg(
+    return ties.group_by(id=key, maintain_order=True).agg(
         pl.len().cast(pl.Int64).alias(f"degree_{side}"),
         pl.col("contacts").sum().alias(f"contacts_{side}"),
         pl.col("amount").sum().alias(f"amount_{side}"),

@@ -1,0 +1,3 @@
+from isthmus.cli import main
+
+main()

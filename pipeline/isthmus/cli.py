@@ -1,0 +1,192 @@
+"""Words in, words out: the command `isthmus`."""
+
+from __future__ import annotations
+
+import os
+import sys
+import traceback
+from datetime import date
+from pathlib import Path
+from typing import Annotated
+
+import click
+import typer
+
+from isthmus import reports
+from isthmus.console import Console
+from isthmus.errors import IsthmusError
+
+__all__ = ["app", "main"]
+
+USAGE, INTERNAL, INTERRUPTED = 64, 70, 130
+LAST_DAY = date(2026, 11, 30)  # of the demo
+
+app = typer.Typer(
+    name="isthmus",
+    no_args_is_help=True,
+    add_completion=False,
+    rich_markup_mode=None,
+    pretty_exceptions_enable=False,
+    context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100},
+    help="""Who lies between the others? Reads Parquet logs of who contacted or paid whom, measures how much of the
+    traffic between everyone else has to pass through each party (betweenness centrality), says how sure it is of
+    every number, and publishes tables that a warehouse reads.
+
+    Start with `isthmus demo`: it makes an invented log and runs the whole job on it.
+
+    \b
+    Exit codes
+      0   published (or: the check found nothing wrong)
+      64  the command line is wrong
+      65  the log was refused or a gate stopped the night; what was published before stays
+      70  a fault of isthmus itself
+      74  a folder or file cannot be read or written
+      75  not now; the same command works later
+      78  the settings are wrong
+      130 interrupted from the keyboard""",
+)
+
+Config = Annotated[Path, typer.Argument(metavar="CONFIG", help="the log's settings, a TOML file")]
+AsOf = Annotated[
+    str | None,
+    typer.Option("--as-of", metavar="DATE", help="last day of the window, YYYY-MM-DD  [default: yesterday, UTC]"),
+]
+Json = Annotated[bool, typer.Option("--json", help="put one JSON object on stdout")]
+
+
+def _day(text: str | None) -> date | None:
+    try:
+        return date.fromisoformat(text) if text else None
+    except ValueError:
+        raise click.BadParameter(f"{text!r} is not a date like 2026-11-30", param_hint="--as-of") from None
+
+
+@app.command()
+def score(config: Config, as_of: AsOf = None, as_json: Json = False) -> None:
+    """One night: read the window, measure, publish.
+
+    Safe to repeat: the same night replaces its own files and nothing else.
+
+    \b
+    Examples
+      isthmus score configs/payments.toml
+      isthmus score configs/payments.toml --as-of 2026-11-30 --json > run.json
+    """
+    from isthmus.nightly import run_night, yesterday
+    from isthmus.settings import load
+
+    console = Console(as_json=as_json)
+    settings = load(config)
+    with console.watch() as watch:
+        outcome = run_night(settings, _day(as_of) or yesterday(), watch)
+    reports.night(console, outcome)
+    console.answer(outcome.manifest)
+
+
+@app.command()
+def check(
+    config: Config,
+    as_of: AsOf = None,
+    as_json: Json = False,
+    show_settings: Annotated[
+        bool, typer.Option("--settings", help="print every key with its unit, default and meaning, as TOML on stdout")
+    ] = False,
+) -> None:
+    """Look at settings, log and cost; write nothing.
+
+    Shows what a night would read, how many parties and ties to expect, the method, the time and the memory.
+    """
+    from isthmus.settings import load, to_toml
+
+    settings = load(config)
+    if show_settings:
+        typer.echo(to_toml(settings), nl=False)
+        return
+    from isthmus.forecast import foresee
+    from isthmus.nightly import window_of, yesterday
+
+    console = Console(as_json=as_json)
+    forecast = foresee(settings, *window_of(settings, _day(as_of) or yesterday()))
+    reports.forecast(console, settings, forecast)
+
+
+@app.command()
+def columns(
+    table: Annotated[str | None, typer.Argument(metavar="[TABLE]", help="one table; all when left out")] = None,
+    as_json: Json = False,
+) -> None:
+    """The data dictionary: every column of every published table, its type, unit and meaning."""
+    from isthmus.tables import TABLES
+
+    if table and table not in TABLES:
+        raise click.BadParameter(f"no table {table!r}; there are {', '.join(TABLES)}", param_hint="TABLE")
+    reports.dictionary([TABLES[table]] if table else list(TABLES.values()), as_json=as_json)
+
+
+@app.command()
+def demo(
+    folder: Annotated[Path, typer.Argument(metavar="[FOLDER]", help="where to make it")] = Path("isthmus-demo"),
+    as_json: Json = False,
+) -> None:
+    """Make an invented month of payments and run the whole job on it.
+
+    Everything is written below FOLDER: the log, its settings, the warehouse. Running it again replaces them.
+    """
+    from isthmus.demo import CONFIG, make_log
+    from isthmus.nightly import run_night
+    from isthmus.settings import load
+    from isthmus.store import story
+
+    console = Console(as_json=as_json)
+    with story("write the demo"):
+        folder.mkdir(parents=True, exist_ok=True)
+        (folder / "isthmus.toml").write_text(CONFIG, encoding="utf-8")
+    with console.watch() as watch:
+        with watch.stage("invent"):
+            make_log(folder / "payments", last_day=LAST_DAY)
+        outcome = run_night(load(folder / "isthmus.toml"), LAST_DAY, watch)
+    reports.night(console, outcome)
+    reports.how_to_go_on(console, outcome, folder / "isthmus.toml")
+    console.answer(outcome.manifest)
+
+
+def main(arguments: list[str] | None = None) -> None:
+    """Run the command and leave with its exit code."""
+    sys.exit(_exit_code(arguments))
+
+
+def _exit_code(arguments: list[str] | None) -> int:
+    say = Console().say
+    try:
+        app(arguments, standalone_mode=False)
+    except click.UsageError as error:
+        error.show()
+        return USAGE
+    except click.exceptions.Exit as error:
+        return error.exit_code
+    except IsthmusError as error:
+        say(f"isthmus: {error}")
+        return error.exit_code
+    except (KeyboardInterrupt, click.Abort):
+        say("isthmus: interrupted; nothing was published, run the same command again")
+        return INTERRUPTED
+    except Exception as error:
+        say(_internal(error))
+        return INTERNAL
+    return 0
+
+
+def _internal(error: Exception) -> str:
+    """Where it happened; the message only on request, because a library's message may quote the log."""
+    places = [f"  {Path(f.filename).name}:{f.lineno} in {f.name}" for f in traceback.extract_tb(error.__traceback__)]
+    if os.environ.get("ISTHMUS_SHOW_INTERNAL"):
+        what = f"{type(error).__name__}: {error}"
+    else:
+        what = f"{type(error).__name__} (set ISTHMUS_SHOW_INTERNAL=1 to see its message, which may quote party keys)"
+    return "\n".join(
+        ("isthmus: internal error, nothing was published; please report these lines:", *places[-8:], f"  {what}")
+    )
+
+
+if __name__ == "__main__":
+    main()

@@ -1,0 +1,75 @@
+"""What a night would read and do, found out without writing a byte to the warehouse or the work folder."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from datetime import date
+from math import log
+
+from isthmus.betweenness import Plan, make_plan
+from isthmus.cluster import open_door
+from isthmus.errors import DataRefused
+from isthmus.graph import Graph
+from isthmus.ingest import Survey, sample_ties, survey
+from isthmus.settings import Settings
+
+__all__ = ["Forecast", "foresee"]
+
+# As many rows as are read in a few seconds; a window no larger than this is looked at whole.
+SAMPLE_ROWS = 2_000_000
+
+
+@dataclass(frozen=True)
+class Forecast:
+    """`sampled_rows` of `found.rows` were read; where that is less than all, parties and ties are extrapolated."""
+
+    first_day: date
+    last_day: date
+    found: Survey
+    sampled_rows: int
+    outcomes: dict[str, dict[str, int]]
+    days: tuple[date, ...]
+    parties: int
+    ties: int
+    plan: Plan
+
+    @property
+    def whole(self) -> bool:
+        return self.sampled_rows >= self.found.rows
+
+
+def foresee(settings: Settings, first_day: date, last_day: date) -> Forecast:
+    """Survey the log, read a sample of the window, and plan. Raises what a night would raise for the same faults."""
+    with open_door(threads=settings.run.threads) as door:
+        found = survey(settings.log, first_day, last_day, door)
+    sample = sample_ties(found, settings.log, first_day, last_day, SAMPLE_ROWS)
+    if sample.ties.is_empty():
+        raise DataRefused(
+            f"no usable row of {first_day}..{last_day} among {sample.rows} looked at; check --as-of and log.columns"
+        )
+    graph = Graph.from_ties(sample.ties, directed=settings.graph.directed, distance=settings.graph.distance)
+    plan = make_plan(graph, settings.score, settings.run.threads, settings.run.memory_bytes)
+    parties, ties = graph.n, graph.ties
+    if sample.rows < found.rows:
+        half = Graph.from_ties(sample.half, directed=settings.graph.directed)
+        growth = found.rows / sample.rows
+        parties, ties = _grown(half.n, graph.n, growth), _grown(half.ties, graph.ties, growth)
+        plan = _scaled(plan, (parties * ties) / (graph.n * graph.ties), ties / graph.ties)
+    return Forecast(first_day, last_day, found, sample.rows, sample.outcomes, sample.days, parties, ties, plan)
+
+
+def _grown(half: int, whole: int, growth: float) -> int:
+    """Extrapolate a number of distinct things: they grow as a power of the rows (Heaps' law), fitted to two points."""
+    power = min(1.0, max(0.0, log(whole / half, 2))) if half else 1.0
+    return int(whole * growth**power)
+
+
+def _scaled(plan: Plan, time: float, memory: float) -> Plan:
+    """The plan of the sample for the whole window. Exact grows as parties × ties, a fixed sample only as ties."""
+    slower = time if plan.method == "exact" else memory
+    return replace(
+        plan,
+        predicted_seconds=plan.predicted_seconds * slower,
+        predicted_bytes=int(plan.predicted_bytes * memory),
+        reason=f"on the rows looked at: {plan.reason}",
+    )

@@ -1,0 +1,95 @@
+"""What a night tells of itself: its id, its row of `runs`, and the rest of run.json."""
+
+from __future__ import annotations
+
+import hashlib
+import importlib.metadata
+import json
+from dataclasses import asdict
+from datetime import UTC, date, datetime
+from typing import Any
+
+import numpy as np
+
+from isthmus.betweenness import Estimate, Plan
+from isthmus.graph import Graph
+from isthmus.ingest import Reading, Survey
+from isthmus.settings import Settings
+from isthmus.tables import LAYOUT
+from isthmus.watch import Watch
+
+__all__ = ["manifest", "run_id_of", "run_row"]
+
+
+def run_id_of(settings: Settings, as_of: date, reading: Reading) -> str:
+    """The same night, settings, version and input give the same id, so that a re-run gives the same bytes."""
+    digest = hashlib.blake2b(digest_size=8)
+    told = [settings.series, str(as_of), settings.definition, _version(), reading.outcomes, settings.score.top]
+    digest.update(json.dumps(told, sort_keys=True).encode())
+    digest.update("\0".join(reading.parties).encode())
+    for column in reading.ties.iter_columns():
+        if column.null_count() < len(column):
+            digest.update(np.ascontiguousarray(column.to_physical().to_numpy()).data)
+    return f"{settings.series}-{as_of}-{digest.hexdigest()}"
+
+
+def run_row(
+    settings: Settings,
+    run_id: str,
+    first_day: date,
+    plan: Plan,
+    estimate: Estimate,
+    graph: Graph,
+    reading: Reading,
+    watch: Watch,
+    started_at: datetime,
+) -> dict[str, Any]:
+    """The columns of `runs`."""
+    widths = estimate.half_widths
+    return {
+        "run_id": run_id,
+        "window_start": first_day,
+        "definition": settings.definition,
+        "version": _version(),
+        "method": estimate.method,
+        "engine": estimate.engine,
+        "reason": plan.reason,
+        "samples": estimate.samples,
+        "seed": estimate.seed,
+        "confidence": estimate.confidence,
+        "half_width_widest": float(widths.max()),
+        "half_width_median": float(np.median(widths)),
+        "stopped_because": estimate.stopped_because,
+        "parties": graph.n,
+        "ties": graph.ties,
+        "rows_read": reading.rows_read,
+        **{f"rows_{outcome}": reading.rows(outcome) for outcome in ("used", "refused", "filtered", "duplicate")},
+        "warnings": "; ".join(watch.warnings),
+        "predicted_seconds": plan.predicted_seconds,
+        "predicted_bytes": float(plan.predicted_bytes),
+        "seconds": [{"stage": stage, "seconds": seconds} for stage, seconds in watch.seconds.items()],
+        "peak_memory_bytes": watch.peak_memory(),
+        "started_at": started_at,
+        "finished_at": datetime.now(UTC),
+    }
+
+
+def manifest(
+    settings: Settings, as_of: date, found: Survey, reading: Reading, plan: Plan, watch: Watch
+) -> dict[str, Any]:
+    """What run.json tells beyond `runs`."""
+    return {
+        "series": settings.series,
+        "as_of": as_of,
+        "layout": LAYOUT,
+        "seconds": watch.seconds,
+        "outcomes": reading.outcomes,
+        "missing_days": reading.missing_days,
+        "plan": asdict(plan),
+        "inputs": [{"file": file.name, "bytes": file.size, "rows": file.rows} for file in found.files],
+        "settings": settings.model_dump(mode="json"),
+    }
+
+
+def _version() -> str:
+    return importlib.metadata.version("isthmus")

@@ -1,0 +1,32 @@
+"""The plan of a night, kept so that a re-run repeats the plan and not the probe that it rests on."""
+
+from __future__ import annotations
+
+import json
+from dataclasses import asdict
+from pathlib import Path
+
+from isthmus.betweenness import Plan, make_plan
+from isthmus.graph import Graph
+from isthmus.settings import Settings
+from isthmus.store import Batch
+
+__all__ = ["plan_once"]
+
+
+def plan_once(path: Path, run_id: str, graph: Graph, settings: Settings) -> Plan:
+    """The plan kept in `path` if it was made for this run_id, else a new one, which is then kept.
+
+    Raises what `make_plan` raises, and StoreError when the plan cannot be kept.
+    """
+    try:
+        kept = json.loads(path.read_text())
+        if kept["run_id"] == run_id:
+            return Plan(**kept["plan"])
+    except (OSError, ValueError, KeyError, TypeError):
+        pass  # none kept, or of another version: make one
+    plan = make_plan(graph, settings.score, settings.run.threads, settings.run.memory_bytes)
+    batch = Batch()
+    batch.add(path, lambda target: target.write_text(json.dumps({"run_id": run_id, "plan": asdict(plan)})))
+    batch.commit()
+    return plan

@@ -1,0 +1,157 @@
+"""The texts that commands end in."""
+
+from __future__ import annotations
+
+import json
+import shlex
+import sys
+from pathlib import Path
+
+import typer
+
+from isthmus.console import Console, number, printable
+from isthmus.forecast import Forecast
+from isthmus.nightly import Outcome
+from isthmus.publish.queries import top_brokers
+from isthmus.settings import Settings
+from isthmus.tables import PARTITION, Table
+
+__all__ = ["dictionary", "forecast", "how_to_go_on", "night"]
+
+CAUTION = (
+    "A score says who lies between others in this log. It is not a verdict on anyone: a person decides, and local law\n"
+    "and licensed practice rule."
+)
+
+
+def night(console: Console, outcome: Outcome, first: int = 10) -> None:
+    """The night in one screen: the first parties with their intervals, the counts, where the tables are."""
+    run = outcome.manifest
+    console.say()
+    top = outcome.scores.head(first)
+    rows = [
+        [
+            printable(row["party"]),
+            str(row["rank"]),
+            f"{row['betweenness']:.6f}",
+            f"{row['lower']:.6f} .. {row['upper']:.6f}",
+            f"{row['rank_best']} .. {row['rank_worst']}",
+            number(row["degree"]),
+        ]
+        for row in top.iter_rows(named=True)
+    ]
+    console.table(
+        f"Series {outcome.night.series}, {run['window_start']} .. {outcome.night.as_of}: the first {top.height} of "
+        f"{number(run['parties'])} parties by betweenness",
+        ["party", "rank", "betweenness", "interval", "rank range", "degree"],
+        rows,
+    )
+    console.say()
+    if run["method"] == "exact":
+        console.say(f"Method: exact, so each interval is the score itself. {run['reason'].capitalize()}.")
+    else:
+        console.say(
+            f"Method: {run['method']}, {number(run['samples'])} samples, stopped because of {run['stopped_because']}. "
+            f"All intervals hold at once with probability {run['confidence']:g}; the widest is "
+            f"±{run['half_width_widest']:.2g}. {run['reason'].capitalize()}."
+        )
+    console.say(
+        f"Rows: {number(run['rows_read'])} read = {number(run['rows_used'])} used + "
+        f"{number(run['rows_refused'])} refused + {number(run['rows_filtered'])} filtered + "
+        f"{number(run['rows_duplicate'])} duplicate"
+    )
+    _reasons(console, run["outcomes"])
+    for text in filter(None, [run["warnings"]]):
+        console.say(f"Warnings: {text}")
+    console.say(f"Tables: {outcome.night.warehouse}  (run {run['run_id']})")
+    console.say(CAUTION)
+
+
+def _reasons(console: Console, outcomes: dict[str, dict[str, int]]) -> None:
+    for outcome in ("refused", "filtered"):
+        for reason, rows in outcomes.get(outcome, {}).items():
+            console.say(f"  {outcome} {number(rows):>9}  {reason}")
+
+
+def how_to_go_on(console: Console, outcome: Outcome, config: Path) -> None:
+    """One query that works when pasted, and the command that runs the night again."""
+    python = shlex.quote(sys.executable)
+    console.say("\nAsk the tables (paste this; the SQL works in any DuckDB):\n")
+    console.say(
+        f'{python} - <<\'END\'\nimport duckdb\nduckdb.sql("""\n{top_brokers(outcome.night)}\n""").show()\nEND\n'
+    )
+    console.say(f"Run the night again: isthmus score {config} --as-of {outcome.night.as_of}")
+
+
+def forecast(console: Console, settings: Settings, seen: Forecast) -> None:
+    """What a night would do, in one screen."""
+    found, plan = seen.found, seen.plan
+    days = (seen.last_day - seen.first_day).days + 1
+    about = "" if seen.whole else "about "
+    console.say(f"Series {settings.series}, window {seen.first_day} .. {seen.last_day} ({days} days)")
+    console.say(f"Log: {settings.log.path}")
+    console.say(
+        f"  would read {number(found.rows)} rows of {len(found.files)} files ({found.bytes / 2**20:,.1f} MiB), "
+        f"in {len(found.parts)} parts; {found.skipped_files} files cannot hold the window"
+    )
+    if seen.whole:
+        console.say(f"  all rows were looked at; {len(seen.days)} of {days} days have usable rows")
+    else:
+        console.say(f"  {number(seen.sampled_rows)} rows were looked at; the rest is extrapolated")
+    _reasons(console, seen.outcomes)
+    console.say(f"Graph: {about}{number(seen.parties)} parties, {about}{number(seen.ties)} ties")
+    console.say(f"Method: {plan.method} (engine {plan.engine}). {plan.reason.capitalize()}.")
+    console.say(
+        f"Scoring: about {plan.predicted_seconds:,.1f} s and {plan.predicted_bytes / 2**20:,.0f} MiB, "
+        f"of {settings.score.minutes:g} min and {settings.run.memory} allowed"
+    )
+    console.say("Nothing was written.")
+    console.answer(
+        {
+            "series": settings.series,
+            "definition": settings.definition,
+            "window_start": seen.first_day,
+            "as_of": seen.last_day,
+            "files": len(found.files),
+            "bytes": found.bytes,
+            "rows": found.rows,
+            "rows_looked_at": seen.sampled_rows,
+            "days_with_rows": len(seen.days) if seen.whole else None,
+            "outcomes": seen.outcomes,
+            "parties": seen.parties,
+            "ties": seen.ties,
+            "method": plan.method,
+            "engine": plan.engine,
+            "reason": plan.reason,
+            "predicted_seconds": plan.predicted_seconds,
+            "predicted_bytes": plan.predicted_bytes,
+        }
+    )
+
+
+def dictionary(tables: list[Table], *, as_json: bool) -> None:
+    """The data dictionary on stdout, where it can be piped."""
+    if as_json:
+        told = {
+            table.name: [
+                {"name": c.name, "type": str(c.type), "unit": c.unit, "nullable": c.nullable, "meaning": c.meaning}
+                for c in (*PARTITION, *table.columns)
+            ]
+            for table in tables
+        }
+        typer.echo(json.dumps(told, indent=2, ensure_ascii=False))
+        return
+    for table in tables:
+        typer.echo(f"{table.name}: {table.meaning}")
+        for c in (*PARTITION, *table.columns):
+            unit = f" [{c.unit}]" if c.unit else ""
+            typer.echo(
+                f"  {c.name:<20} {_sql_type(str(c.type)):<10} {c.meaning}{unit}{', may be null' if c.nullable else ''}"
+            )
+        typer.echo()
+
+
+def _sql_type(text: str) -> str:
+    if text.startswith("Datetime"):
+        return "timestamp"
+    return {"String": "string", "Int64": "int64", "Float64": "float64", "Date": "date"}.get(text, "list")
