@@ -9,17 +9,19 @@ from datetime import date
 from pathlib import Path
 from typing import Annotated
 
-import click
 import typer
 
 from isthmus import reports
 from isthmus.console import Console
-from isthmus.errors import IsthmusError
+from isthmus.errors import GateStopped, IsthmusError, StoreError
 
 __all__ = ["app", "main"]
 
 USAGE, INTERNAL, INTERRUPTED = 64, 70, 130
-LAST_DAY = date(2026, 11, 30)  # of the demo
+YEARS = range(1970, 2200)  # a row outside them is refused, so no night can end there
+
+# Typer carries a click of its own, or uses the installed one; either way this is the class of all usage errors.
+UsageError: type[Exception] = typer.BadParameter.__mro__[1]
 
 app = typer.Typer(
     name="isthmus",
@@ -46,19 +48,33 @@ app = typer.Typer(
       130 interrupted from the keyboard""",
 )
 
+
+def _day(text: str) -> date:
+    try:
+        day = date.fromisoformat(text)
+    except ValueError:
+        raise typer.BadParameter(f"{text!r} is not a date like 2026-11-30") from None
+    if day.year not in YEARS:
+        raise typer.BadParameter(f"{text!r} is not in the years {YEARS.start} to {YEARS.stop - 1}")
+    return day
+
+
+def _table(name: str) -> str:
+    from isthmus.tables import TABLES
+
+    if name not in TABLES:
+        raise typer.BadParameter(f"no table {name!r}; there are {', '.join(TABLES)}")
+    return name
+
+
 Config = Annotated[Path, typer.Argument(metavar="CONFIG", help="the log's settings, a TOML file")]
 AsOf = Annotated[
-    str | None,
-    typer.Option("--as-of", metavar="DATE", help="last day of the window, YYYY-MM-DD  [default: yesterday, UTC]"),
+    date | None,
+    typer.Option(
+        "--as-of", metavar="DATE", parser=_day, help="last day of the window, YYYY-MM-DD  [default: yesterday, UTC]"
+    ),
 ]
 Json = Annotated[bool, typer.Option("--json", help="put one JSON object on stdout")]
-
-
-def _day(text: str | None) -> date | None:
-    try:
-        return date.fromisoformat(text) if text else None
-    except ValueError:
-        raise click.BadParameter(f"{text!r} is not a date like 2026-11-30", param_hint="--as-of") from None
 
 
 @app.command()
@@ -78,7 +94,7 @@ def score(config: Config, as_of: AsOf = None, as_json: Json = False) -> None:
     console = Console(as_json=as_json)
     settings = load(config)
     with console.watch() as watch:
-        outcome = run_night(settings, _day(as_of) or yesterday(), watch)
+        outcome = run_night(settings, as_of or yesterday(), watch)
     reports.night(console, outcome)
     console.answer(outcome.manifest)
 
@@ -94,45 +110,51 @@ def check(
 ) -> None:
     """Look at settings, log and cost; write nothing.
 
-    Shows what a night would read, how many parties and ties to expect, the method, the time and the memory.
+    Shows what a night would read, how many parties and ties to expect, the method, the time and the memory, and
+    leaves with the exit code that the night would have.
     """
     from isthmus.settings import load, to_toml
 
+    console = Console(as_json=as_json)
     settings = load(config)
     if show_settings:
-        typer.echo(to_toml(settings), nl=False)
+        if as_json:
+            console.answer(settings.model_dump(mode="json"))
+        else:
+            typer.echo(to_toml(settings), nl=False)
         return
     from isthmus.forecast import foresee
     from isthmus.nightly import window_of, yesterday
 
-    console = Console(as_json=as_json)
-    forecast = foresee(settings, *window_of(settings, _day(as_of) or yesterday()))
+    forecast = foresee(settings, *window_of(settings, as_of or yesterday()))
     reports.forecast(console, settings, forecast)
+    if forecast.stopped:
+        raise GateStopped(forecast.stopped)
 
 
 @app.command()
 def columns(
-    table: Annotated[str | None, typer.Argument(metavar="[TABLE]", help="one table; all when left out")] = None,
+    table: Annotated[
+        str | None, typer.Argument(metavar="TABLE", parser=_table, help="one table; all when left out")
+    ] = None,
     as_json: Json = False,
 ) -> None:
     """The data dictionary: every column of every published table, its type, unit and meaning."""
     from isthmus.tables import TABLES
 
-    if table and table not in TABLES:
-        raise click.BadParameter(f"no table {table!r}; there are {', '.join(TABLES)}", param_hint="TABLE")
     reports.dictionary([TABLES[table]] if table else list(TABLES.values()), as_json=as_json)
 
 
 @app.command()
 def demo(
-    folder: Annotated[Path, typer.Argument(metavar="[FOLDER]", help="where to make it")] = Path("isthmus-demo"),
+    folder: Annotated[Path, typer.Argument(metavar="FOLDER", help="where to make it")] = Path("isthmus-demo"),
     as_json: Json = False,
 ) -> None:
     """Make an invented month of payments and run the whole job on it.
 
     Everything is written below FOLDER: the log, its settings, the warehouse. Running it again replaces them.
     """
-    from isthmus.demo import CONFIG, make_log
+    from isthmus.demo import AS_OF, CONFIG, make_log
     from isthmus.nightly import run_night
     from isthmus.settings import load
     from isthmus.store import story
@@ -143,8 +165,8 @@ def demo(
         (folder / "isthmus.toml").write_text(CONFIG, encoding="utf-8")
     with console.watch() as watch:
         with watch.stage("invent"):
-            make_log(folder / "payments", last_day=LAST_DAY)
-        outcome = run_night(load(folder / "isthmus.toml"), LAST_DAY, watch)
+            make_log(folder / "payments", last_day=AS_OF)
+        outcome = run_night(load(folder / "isthmus.toml"), AS_OF, watch)
     reports.night(console, outcome)
     reports.how_to_go_on(console, outcome, folder / "isthmus.toml")
     console.answer(outcome.manifest)
@@ -158,22 +180,26 @@ def main(arguments: list[str] | None = None) -> None:
 def _exit_code(arguments: list[str] | None) -> int:
     say = Console().say
     try:
-        app(arguments, standalone_mode=False)
-    except click.UsageError as error:
-        error.show()
+        # our commands return nothing; what Typer ends by itself (help, an interrupt) comes back as an exit code
+        code: int = app(arguments, prog_name="isthmus", standalone_mode=False) or 0
+        if code == INTERRUPTED:
+            raise KeyboardInterrupt
+    except UsageError as error:
+        error.show()  # type: ignore[attr-defined]
         return USAGE
-    except click.exceptions.Exit as error:
-        return error.exit_code
     except IsthmusError as error:
         say(f"isthmus: {error}")
         return error.exit_code
-    except (KeyboardInterrupt, click.Abort):
-        say("isthmus: interrupted; nothing was published, run the same command again")
+    except (KeyboardInterrupt, typer.Abort):
+        say("isthmus: interrupted; the night is published whole or not at all, run the same command again")
         return INTERRUPTED
+    except OSError as error:
+        say(f"isthmus: {error}; check that files and folders are there and may be used, and that the disk has room")
+        return StoreError.exit_code
     except Exception as error:
         say(_internal(error))
         return INTERNAL
-    return 0
+    return code
 
 
 def _internal(error: Exception) -> str:
@@ -184,7 +210,11 @@ def _internal(error: Exception) -> str:
     else:
         what = f"{type(error).__name__} (set ISTHMUS_SHOW_INTERNAL=1 to see its message, which may quote party keys)"
     return "\n".join(
-        ("isthmus: internal error, nothing was published; please report these lines:", *places[-8:], f"  {what}")
+        (
+            "isthmus: internal error; the night is published whole or not at all. Please report these lines:",
+            *places[-8:],
+            f"  {what}",
+        )
     )
 
 

@@ -15,6 +15,8 @@ from isthmus.errors import StoreError
 
 __all__ = ["Door", "open_door"]
 
+ANSWER_SECONDS = 10  # a scheduler that is there answers in one
+
 Task = TypeVar("Task")
 Result = TypeVar("Result")
 Tick = Callable[[float], None]
@@ -80,7 +82,7 @@ def open_door(*, workers: int = 0, threads: int = 0, scheduler: str = "", scratc
         from distributed import Client
 
         try:
-            client = Client(scheduler, timeout="20s", set_as_default=False)
+            client = Client(scheduler, timeout=ANSWER_SECONDS, set_as_default=False)
         except (OSError, TimeoutError, ValueError) as error:
             raise StoreError(
                 f"no Dask scheduler answers at run.scheduler = {scheduler!r} ({type(error).__name__}); start it, "

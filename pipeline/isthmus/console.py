@@ -44,7 +44,7 @@ class Console:
     def answer(self, value: dict[str, Any]) -> None:
         """The one JSON object of `--json`."""
         if self._json:
-            json.dump(value, sys.stdout, indent=2, default=str, ensure_ascii=False)
+            json.dump(value, sys.stdout, indent=2, default=str)
             sys.stdout.write("\n")
 
     @contextmanager

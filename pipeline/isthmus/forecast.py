@@ -3,15 +3,19 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
-from datetime import date
+from datetime import date, timedelta
 from math import log
+from pathlib import Path
 
+from isthmus import store
 from isthmus.betweenness import Plan, make_plan
 from isthmus.cluster import open_door
-from isthmus.errors import DataRefused
+from isthmus.errors import DataRefused, GateStopped
+from isthmus.gates import pass_gates
 from isthmus.graph import Graph
-from isthmus.ingest import Survey, sample_ties, survey
+from isthmus.ingest import Sample, Survey, sample_ties, survey
 from isthmus.settings import Settings
+from isthmus.tables import LAYOUT
 
 __all__ = ["Forecast", "foresee"]
 
@@ -21,7 +25,10 @@ SAMPLE_ROWS = 2_000_000
 
 @dataclass(frozen=True)
 class Forecast:
-    """`sampled_rows` of `found.rows` were read; where that is less than all, parties and ties are extrapolated."""
+    """`sampled_rows` of `found.rows` were read; where that is less than all, parties and ties are extrapolated.
+
+    `warnings` are the night's own, `stopped` is why a gate would stop it, empty when none would.
+    """
 
     first_day: date
     last_day: date
@@ -32,6 +39,8 @@ class Forecast:
     parties: int
     ties: int
     plan: Plan
+    warnings: tuple[str, ...]
+    stopped: str
 
     @property
     def whole(self) -> bool:
@@ -40,12 +49,16 @@ class Forecast:
 
 def foresee(settings: Settings, first_day: date, last_day: date) -> Forecast:
     """Survey the log, read a sample of the window, and plan. Raises what a night would raise for the same faults."""
+    store.examine(Path(settings.run.warehouse), LAYOUT, "run.warehouse")
+    store.examine(Path(settings.run.work) / f"series={settings.series}", LAYOUT, "run.work")
     with open_door(threads=settings.run.threads) as door:
         found = survey(settings.log, first_day, last_day, door)
     sample = sample_ties(found, settings.log, first_day, last_day, SAMPLE_ROWS)
     if sample.ties.is_empty():
+        told = [f"{rows} {reason}" for kind in sample.outcomes.values() for reason, rows in kind.items()]
         raise DataRefused(
-            f"no usable row of {first_day}..{last_day} among {sample.rows} looked at; check --as-of and log.columns"
+            f"no usable row of {first_day}..{last_day} among {sample.rows} looked at: {', '.join(told) or 'no row'}; "
+            "check --as-of, window.days and log.columns"
         )
     graph = Graph.from_ties(sample.ties, directed=settings.graph.directed, distance=settings.graph.distance)
     plan = make_plan(graph, settings.score, settings.run.threads, settings.run.memory_bytes)
@@ -55,7 +68,29 @@ def foresee(settings: Settings, first_day: date, last_day: date) -> Forecast:
         growth = found.rows / sample.rows
         parties, ties = _grown(half.n, graph.n, growth), _grown(half.ties, graph.ties, growth)
         plan = _scaled(plan, (parties * ties) / (graph.n * graph.ties), ties / graph.ties)
-    return Forecast(first_day, last_day, found, sample.rows, sample.outcomes, sample.days, parties, ties, plan)
+    warnings, stopped = _gates(settings, first_day, last_day, sample, whole=sample.rows >= found.rows)
+    return Forecast(
+        first_day, last_day, found, sample.rows, sample.outcomes, sample.days, parties, ties, plan, warnings, stopped
+    )
+
+
+def _gates(
+    settings: Settings, first_day: date, last_day: date, sample: Sample, *, whole: bool
+) -> tuple[tuple[str, ...], str]:
+    """What the gates say of the rows looked at. Days can only be missed where all rows were."""
+    days = [first_day + timedelta(days=at) for at in range((last_day - first_day).days + 1)]
+    warnings: list[str] = []
+    try:
+        pass_gates(
+            settings.gates,
+            rows_read=sum(sum(reasons.values()) for reasons in sample.outcomes.values()),
+            rows_refused=sum(sample.outcomes["refused"].values()),
+            missing_days=tuple(day for day in days if day not in sample.days) if whole else (),
+            warn=warnings.append,
+        )
+    except GateStopped as stop:
+        return tuple(warnings), str(stop)
+    return tuple(warnings), ""
 
 
 def _grown(half: int, whole: int, growth: float) -> int:

@@ -34,7 +34,9 @@ def pass_gates(
             f"gates.refused_limit allows {gates.refused_limit:.2%}",
         )
     if stops:
-        raise GateStopped("\n".join(("nothing published:", *(f"  {text}" for text in stops))))
+        raise GateStopped(
+            "\n".join(("a gate stops the night, nothing is published:", *(f"  {text}" for text in stops)))
+        )
 
 
 def _missing(days: tuple[date, ...]) -> str:

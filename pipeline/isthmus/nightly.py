@@ -46,9 +46,10 @@ def run_night(settings: Settings, as_of: date, watch: Watch) -> Outcome:
     started_at = datetime.now(UTC)
     first_day, last_day = window_of(settings, as_of)
     warehouse, work = Path(settings.run.warehouse), Path(settings.run.work) / f"series={settings.series}"
-    for folder in (warehouse, work):
-        store.claim(folder, LAYOUT)
-        store.sweep(folder)
+    store.claim(warehouse, LAYOUT, "run.warehouse")
+    store.claim(work, LAYOUT, "run.work")
+    store.sweep(warehouse, f"*/series={settings.series}/*")
+    store.sweep(work)
     run = settings.run
     with open_door(workers=run.workers, threads=run.threads, scheduler=run.scheduler, scratch=str(work)) as door:
         with watch.stage("survey"):

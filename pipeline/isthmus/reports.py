@@ -7,8 +7,6 @@ import shlex
 import sys
 from pathlib import Path
 
-import typer
-
 from isthmus.console import Console, number, printable
 from isthmus.forecast import Forecast
 from isthmus.nightly import Outcome
@@ -48,12 +46,12 @@ def night(console: Console, outcome: Outcome, first: int = 10) -> None:
     )
     console.say()
     if run["method"] == "exact":
-        console.say(f"Method: exact, so each interval is the score itself. {run['reason'].capitalize()}.")
+        console.say(f"Method: exact, so each interval is the score itself. {_sentence(run['reason'])}")
     else:
         console.say(
             f"Method: {run['method']}, {number(run['samples'])} samples, stopped because of {run['stopped_because']}. "
             f"All intervals hold at once with probability {run['confidence']:g}; the widest is "
-            f"±{run['half_width_widest']:.2g}. {run['reason'].capitalize()}."
+            f"±{run['half_width_widest']:.2g}. {_sentence(run['reason'])}"
         )
     console.say(
         f"Rows: {number(run['rows_read'])} read = {number(run['rows_used'])} used + "
@@ -65,6 +63,11 @@ def night(console: Console, outcome: Outcome, first: int = 10) -> None:
         console.say(f"Warnings: {text}")
     console.say(f"Tables: {outcome.night.warehouse}  (run {run['run_id']})")
     console.say(CAUTION)
+
+
+def _sentence(text: str) -> str:
+    """With a capital and a full stop. (str.capitalize would make small letters of the rest: GiB, names of keys.)"""
+    return f"{text[:1].upper()}{text[1:]}."
 
 
 def _reasons(console: Console, outcomes: dict[str, dict[str, int]]) -> None:
@@ -100,11 +103,13 @@ def forecast(console: Console, settings: Settings, seen: Forecast) -> None:
         console.say(f"  {number(seen.sampled_rows)} rows were looked at; the rest is extrapolated")
     _reasons(console, seen.outcomes)
     console.say(f"Graph: {about}{number(seen.parties)} parties, {about}{number(seen.ties)} ties")
-    console.say(f"Method: {plan.method} (engine {plan.engine}). {plan.reason.capitalize()}.")
+    console.say(f"Method: {plan.method} (engine {plan.engine}). {_sentence(plan.reason)}")
     console.say(
         f"Scoring: about {plan.predicted_seconds:,.1f} s and {plan.predicted_bytes / 2**20:,.0f} MiB, "
         f"of {settings.score.minutes:g} min and {settings.run.memory} allowed"
     )
+    for text in seen.warnings:
+        console.say(f"Warning: {text}")
     console.say("Nothing was written.")
     console.answer(
         {
@@ -125,6 +130,8 @@ def forecast(console: Console, settings: Settings, seen: Forecast) -> None:
             "reason": plan.reason,
             "predicted_seconds": plan.predicted_seconds,
             "predicted_bytes": plan.predicted_bytes,
+            "warnings": seen.warnings,
+            "stopped": seen.stopped,
         }
     )
 
@@ -139,16 +146,16 @@ def dictionary(tables: list[Table], *, as_json: bool) -> None:
             ]
             for table in tables
         }
-        typer.echo(json.dumps(told, indent=2, ensure_ascii=False))
+        print(json.dumps(told, indent=2, ensure_ascii=False))
         return
     for table in tables:
-        typer.echo(f"{table.name}: {table.meaning}")
+        print(f"{table.name}: {table.meaning}")
         for c in (*PARTITION, *table.columns):
             unit = f" [{c.unit}]" if c.unit else ""
-            typer.echo(
+            print(
                 f"  {c.name:<20} {_sql_type(str(c.type)):<10} {c.meaning}{unit}{', may be null' if c.nullable else ''}"
             )
-        typer.echo()
+        print()
 
 
 def _sql_type(text: str) -> str:

@@ -12,6 +12,7 @@ from __future__ import annotations
 import difflib
 import hashlib
 import json
+import os
 import tomllib
 from pathlib import Path
 from typing import Any, Literal
@@ -50,7 +51,9 @@ class Columns(Section):
 class Log(Section):
     """Where the rows come from."""
 
-    path: str = _key(..., "folder or glob of Parquet files; a folder may hold date partitions such as dt=2026-11-30")
+    path: str = _key(
+        ..., "folder or glob of Parquet files; a folder may hold date partitions such as dt=2026-11-30", min_length=1
+    )
     kind: Literal["plain"] = _key("plain", "how the rows are to be understood")
     columns: Columns = Field(default_factory=Columns)
 
@@ -98,7 +101,7 @@ class Gates(Section):
 
 
 class Run(Section):
-    """Where and with what the night runs. Nothing in this section changes a result."""
+    """Where and with what the night runs. Nothing here changes a result, as long as its method fits the memory."""
 
     warehouse: str = _key("warehouse", "folder of the published tables", min_length=1)
     work: str = _key("work", "folder of daily ties and snapshots, which readers never see", min_length=1)
@@ -106,7 +109,9 @@ class Run(Section):
     threads: int = _key(0, "per process; 0: all cores", "threads", ge=0, le=4096)
     scheduler: str = _key("", "address of a running Dask scheduler; empty: none")
     memory: str = _key(
-        "16GiB", "planned against before the work starts", pattern=r"^[1-9][0-9]*(\.[0-9]+)? ?[KMGT]i?B$"
+        "16GiB",
+        "planned against before the work starts: a number and KiB, MiB, GiB or TiB",
+        pattern=r"^[1-9][0-9]*(\.[0-9]+)? ?[KMGT]i?B$",
     )
 
     @property
@@ -122,7 +127,7 @@ class Settings(Section):
 
     series: str = _key(
         ...,
-        "names this run of nights; several series share one warehouse",
+        "names this run of nights, in small letters, digits, - and _; several series share one warehouse",
         pattern=r"^[a-z0-9][a-z0-9_-]{0,63}$",
     )
     log: Log
@@ -134,12 +139,25 @@ class Settings(Section):
 
     @model_validator(mode="after")
     def _possible_together(self) -> Settings:
+        columns = self.log.columns
+        if columns.sender == columns.receiver:
+            raise ValueError(
+                f'log.columns.sender and log.columns.receiver are both "{columns.sender}"; name the column of each side'
+            )
+        for key in ("warehouse", "work"):
+            if "://" in (value := getattr(self.run, key)):
+                raise ValueError(f'run.{key} = "{value}": only local folders are written; mount the bucket')
         if self.graph.distance == "amount" and not self.log.columns.amount:
             raise ValueError('graph.distance = "amount" needs log.columns.amount; name the column')
         if self.score.max_hops and self.score.engine == "networkit":
-            raise ValueError('score.max_hops is not known to engine = "networkit"; set max_hops = 0')
+            raise ValueError(
+                f'score.max_hops = {self.score.max_hops} is not known to engine = "networkit"; set max_hops = 0'
+            )
         if self.run.workers and self.run.scheduler:
-            raise ValueError("run.workers and run.scheduler exclude each other; keep one")
+            raise ValueError(
+                f'run.workers = {self.run.workers} and run.scheduler = "{self.run.scheduler}" exclude each other; '
+                "keep one"
+            )
         return self
 
     @property
@@ -176,7 +194,7 @@ def load(path: str | Path) -> Settings:
 
 
 def _resolve(home: Path, text: str) -> str:
-    return text if "://" in text else str(home / Path(text).expanduser())
+    return text if "://" in text else str(home / os.path.expanduser(text))
 
 
 def _explain(path: Path, error: ValidationError) -> str:
@@ -192,6 +210,8 @@ def _explain(path: Path, error: ValidationError) -> str:
             lines.append(f"{key} = {_show(fault['input'])}: unknown key; {hint}")
         elif fault["type"] == "missing":
             lines.append(f"{key}: missing; {_meaning(where)}")
+        elif fault["type"] == "model_type":
+            lines.append(f"{key} = {_show(fault['input'])}: a section, not a value; write it as [{key}]")
         elif fault["type"] == "value_error":
             lines.append(str(fault["ctx"]["error"]))
         else:
@@ -209,7 +229,8 @@ def _section(steps: list[str]) -> type[Section]:
 
 def _meaning(steps: list[str]) -> str:
     try:
-        return _section(steps[:-1]).model_fields[steps[-1]].description or ""
+        field = _section(steps[:-1]).model_fields[steps[-1]]
+        return field.description or (field.annotation.__doc__ or "").strip()
     except (KeyError, AttributeError, IndexError):
         return ""
 

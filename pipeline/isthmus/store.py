@@ -11,14 +11,16 @@ import os
 import shutil
 import uuid
 from collections.abc import Callable, Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
+from errno import EACCES, ENOTDIR
 from pathlib import Path
 
 from isthmus.errors import SettingsError, StoreError
 
-__all__ = ["Batch", "claim", "fresh", "story", "sweep"]
+__all__ = ["Batch", "claim", "examine", "fresh", "story", "sweep"]
 
 _MARK = ".unfinished-"
+_LAYOUT = "layout.json"
 
 
 @contextmanager
@@ -38,74 +40,141 @@ class Batch:
     """Files that are to appear together: all written and flushed first, then renamed one after the other.
 
     The renames follow the order in which files were added, so the last one added is the marker of completeness.
+    Used as a context manager, whatever is not committed at its end is removed again.
     """
 
     def __init__(self) -> None:
         self._pairs: list[tuple[Path, Path]] = []
 
+    def __enter__(self) -> Batch:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        for hidden, _path in self._pairs:
+            _forget(hidden)
+        self._pairs.clear()
+
     def add(self, path: Path, write: Callable[[Path], object]) -> None:
         """Have `write` fill a hidden file beside `path`. Raises StoreError."""
-        hidden = path.with_name(f"{_MARK}{uuid.uuid4().hex[:12]}-{path.name}")
+        hidden = _beside(path)
         with story("write"):
             path.parent.mkdir(parents=True, exist_ok=True)
             self._pairs.append((hidden, path))
             write(hidden)
-            descriptor = os.open(hidden, os.O_RDONLY)
-            try:
-                os.fsync(descriptor)
-            finally:
-                os.close(descriptor)
+            _flush(hidden)
 
     def commit(self) -> None:
-        """Rename everything into place. Until the last rename the night counts as incomplete."""
+        """Rename everything into place. Until the last rename the night counts as incomplete.
+
+        What stood there before is kept until then, and put back when a rename fails. Raises StoreError.
+        """
+        before = {path: _beside(path) for _, path in self._pairs}
         with story("publish"):
-            self._pairs[-1][1].unlink(missing_ok=True)
+            try:
+                for path, kept in before.items():
+                    if path.exists():
+                        _keep(path, kept)
+                self._rename(before)
+            finally:
+                for kept in before.values():
+                    _forget(kept)
+            self._pairs.clear()
+            for folder in {path.parent for path in before}:
+                _flush(folder)
+
+    def _rename(self, before: dict[Path, Path]) -> None:
+        try:
+            if len(self._pairs) > 1:
+                self._pairs[-1][1].unlink(missing_ok=True)
             for hidden, path in self._pairs:
                 os.replace(hidden, path)
-            for folder in {path.parent for _, path in self._pairs}:
-                descriptor = os.open(folder, os.O_RDONLY)
-                try:
-                    os.fsync(descriptor)
-                finally:
-                    os.close(descriptor)
-        self._pairs.clear()
-
-    def discard(self) -> None:
-        """Remove what was written and not committed."""
-        for hidden, _ in self._pairs:
-            hidden.unlink(missing_ok=True)
-        self._pairs.clear()
+        except BaseException:
+            for path, kept in before.items():
+                with suppress(OSError):
+                    _put_back(path, kept)
+            raise
 
 
-def claim(folder: Path, layout: int) -> None:
-    """Make the folder ours to write, or say why not.
-
-    Raises SettingsError when a newer isthmus wrote it, StoreError when it cannot be written.
-    """
-    marker = folder / "layout.json"
-    with story("use the folder"):
-        folder.mkdir(parents=True, exist_ok=True)
-        text = marker.read_text() if marker.exists() else ""
-    if text:
-        try:
-            found = int(json.loads(text)["layout"])
-        except (ValueError, KeyError, TypeError):
-            raise StoreError(f"{marker} is not readable as JSON with a number `layout`; restore or remove it") from None
-        if found > layout:
-            raise SettingsError(
-                f"{folder} has layout {found}, written by a newer isthmus; this one knows up to {layout}: "
-                "upgrade isthmus, or name another folder in run.warehouse"
-            )
-    batch = Batch()
-    batch.add(marker, lambda path: path.write_text(json.dumps({"layout": layout}) + "\n"))
-    batch.commit()
+def _beside(path: Path) -> Path:
+    return path.with_name(f"{_MARK}{uuid.uuid4().hex[:12]}-{path.name}")
 
 
-def sweep(folder: Path) -> int:
-    """Remove what killed runs left below the folder. Returns how many files went."""
-    leftovers = list(folder.rglob(f"{_MARK}*"))
-    for path in leftovers:
+def _flush(path: Path) -> None:
+    descriptor = os.open(path, os.O_RDONLY)
+    try:
+        os.fsync(descriptor)
+    finally:
+        os.close(descriptor)
+
+
+def _keep(path: Path, kept: Path) -> None:
+    try:
+        os.link(path, kept)
+    except OSError:  # not every file system has hard links
+        shutil.copy2(path, kept)
+
+
+def _put_back(path: Path, kept: Path) -> None:
+    """`path` as it was before: what was kept of it, or nothing."""
+    if kept.exists():
+        os.replace(kept, path)
+    else:
         path.unlink(missing_ok=True)
+
+
+def _forget(path: Path) -> None:
+    with suppress(OSError):
+        path.unlink()
+
+
+def examine(folder: Path, layout: int, key: str) -> int:
+    """The layout that the folder has (0: none yet), having found that it can be written; nothing is changed.
+
+    `key` is the setting that names the folder. Raises SettingsError when a newer isthmus wrote it, StoreError when it
+    cannot be written.
+    """
+    marker = folder / _LAYOUT
+    with story(f"use {key}"):
+        there = next(path for path in (folder, *folder.parents) if path.exists())
+        if not there.is_dir():
+            raise NotADirectoryError(ENOTDIR, "it is not a folder", str(there))
+        if not os.access(there, os.W_OK | os.X_OK):
+            raise PermissionError(EACCES, "this user may not write there", str(there))
+        text = marker.read_text(encoding="utf-8", errors="replace") if marker.exists() else ""
+    if not text:
+        return 0
+    try:
+        found = int(json.loads(text)["layout"])
+    except (ValueError, KeyError, TypeError):
+        raise StoreError(f"{marker} is not readable as JSON with a number `layout`; restore or remove it") from None
+    if found > layout:
+        raise SettingsError(
+            f"{key}: {folder} has layout {found}, written by a newer isthmus; this one knows up to {layout}: "
+            f"upgrade isthmus, or name another folder in {key}"
+        )
+    return found
+
+
+def claim(folder: Path, layout: int, key: str) -> None:
+    """Make the folder ours to write, or raise what `examine` raises."""
+    if examine(folder, layout, key) == layout:
+        for leftover in folder.glob(f"{_MARK}*-{_LAYOUT}"):
+            _forget(leftover)
+        return
+    with Batch() as batch:
+        batch.add(folder / _LAYOUT, lambda path: path.write_text(json.dumps({"layout": layout}) + "\n"))
+        batch.commit()
+
+
+def sweep(folder: Path, within: str = "**") -> int:
+    """Remove what killed runs left in the folders below `folder` that match `within`; others may be at work elsewhere.
+
+    Returns how many files went. Raises StoreError.
+    """
+    with story("sweep"):
+        leftovers = list(folder.glob(f"{within}/{_MARK}*"))
+        for path in leftovers:
+            path.unlink(missing_ok=True)
     return len(leftovers)
 
 

@@ -118,7 +118,9 @@ class Graph:
         folder.mkdir(parents=True, exist_ok=True)
         for name in _ARRAYS:
             array = getattr(self, name)
-            if array is not None and not (name.startswith("in_") and not self.directed):
+            if array is None or (name.startswith("in_") and not self.directed):
+                (folder / f"{name}.npy").unlink(missing_ok=True)  # of a graph saved here before
+            else:
                 np.save(folder / f"{name}.npy", array)
         self.parties.to_frame().write_ipc(folder / "parties.arrow")
         (folder / "graph.json").write_text(json.dumps({"directed": self.directed, "n": self.n, "arcs": self.arcs}))

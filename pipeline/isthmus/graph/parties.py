@@ -12,6 +12,9 @@ from isthmus.graph.adjacency import Graph, ids_of
 
 __all__ = ["describe"]
 
+# Sums of decimals do not depend on the order of adding, so not on the number of threads either.
+EXACT = pl.Decimal(38, 9)
+
 
 def describe(graph: Graph, ties: pl.DataFrame) -> pl.DataFrame:
     """One row per party of the graph, in id order.
@@ -22,9 +25,8 @@ def describe(graph: Graph, ties: pl.DataFrame) -> pl.DataFrame:
     first_seen, last_seen.
     """
     coded = ties.with_columns(pl.Series(side, ids_of(ties[side], graph.parties)) for side in ("sender", "receiver"))
-    # sorted first, so that the float sums are added in one order whatever the number of threads
-    out = _one_side(coded.sort("sender", "receiver"), "sender", "out")
-    into = _one_side(coded.sort("receiver", "sender"), "receiver", "in")
+    out = _one_side(coded, "sender", "out")
+    into = _one_side(coded, "receiver", "in")
     ends = [coded.select(id=one, other=two) for one, two in (("sender", "receiver"), ("receiver", "sender"))]
     degree = pl.concat(ends).unique().group_by("id").agg(degree=pl.len().cast(pl.Int64))
     component, size = _components(graph)
@@ -45,10 +47,10 @@ def describe(graph: Graph, ties: pl.DataFrame) -> pl.DataFrame:
 
 
 def _one_side(ties: pl.DataFrame, key: str, side: str) -> pl.DataFrame:
-    return ties.group_by(id=key, maintain_order=True).agg(
+    return ties.group_by(id=key).agg(
         pl.len().cast(pl.Int64).alias(f"degree_{side}"),
         pl.col("contacts").sum().alias(f"contacts_{side}"),
-        pl.col("amount").sum().alias(f"amount_{side}"),
+        pl.col("amount").cast(EXACT).sum().cast(pl.Float64).alias(f"amount_{side}"),
         pl.col("first_seen").min().alias(f"first_{side}"),
         pl.col("last_seen").max().alias(f"last_{side}"),
     )

@@ -25,8 +25,7 @@ class Kind:
 
     def agrees(self, other: Kind) -> bool:
         """Whether two files may hold these side by side: widths, time units and zone names may differ."""
-        either_empty = "empty" in (self.family, other.family)
-        return either_empty or (self.family == other.family and self.zoned == other.zoned)
+        return self.family == other.family and self.zoned == other.zoned
 
 
 _WANTED = {

@@ -129,10 +129,10 @@ def _list(path: str) -> tuple[str, list[str]]:
         fixed = Path(path).parts
         stop = next(index for index, step in enumerate(fixed) if glob.has_magic(step))
         root = str(Path(*fixed[:stop]))
-        found = [name for name in glob.glob(path, recursive=True) if os.path.isfile(name)]
-        if not found:
+        matches = glob.glob(path, recursive=True)
+        paths = [name for name in matches if os.path.isfile(name) and not _hidden(Path(name), root)]
+        if not paths:
             raise StoreError(f"log.path = {path!r} matches no file; check the pattern and that the log has arrived")
-        paths = found
     elif os.path.isfile(path):
         root, paths = str(Path(path).parent), [path]
     elif os.path.isdir(path):
@@ -237,12 +237,15 @@ _UNITS = {"milliseconds": Fraction(1000), "microseconds": Fraction(1), "nanoseco
 
 def _agree(files: Sequence[LogFile]) -> None:
     """All files must mean the same by a column; narrower and wider types of one family do."""
-    for file in files[1:]:
+    told: dict[str, tuple[str, Kind]] = {}  # by the first file whose column is not empty
+    for file in files:
         for ours, kind in file.kinds.items():
-            before = files[0].kinds[ours]
+            if kind.family == "empty":
+                continue
+            name, before = told.setdefault(ours, (file.name, kind))
             if not before.agrees(kind):
                 raise DataRefused(
-                    f"files of this log disagree on log.columns.{ours}: {files[0].name} holds {before.text}, "
+                    f"files of this log disagree on log.columns.{ours}: {name} holds {before.text}, "
                     f"{file.name} holds {kind.text}; write the column with one type"
                 )
 

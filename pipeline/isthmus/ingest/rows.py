@@ -124,6 +124,8 @@ def _plain(array: pa.ChunkedArray) -> pa.ChunkedArray:
         return array.cast(pa.timestamp(array.type.unit)).cast(pa.int64())
     if pa.types.is_date64(array.type):
         return array.cast(pa.int64())
+    if pa.types.is_decimal256(array.type):  # which Polars lacks
+        return array.cast(pa.float64())
     return array.cast(pa.int32()).cast(pa.int64()) if pa.types.is_date32(array.type) else array
 
 
@@ -177,7 +179,7 @@ def _judge(frame: pl.DataFrame, has_amount: bool) -> pl.DataFrame:
         .then(pl.lit(FILTERED))
         .otherwise(pl.lit(REFUSED))
     )
-    exact = pl.when(outcome=USED).then("value").cast(AMOUNT) if has_amount else pl.lit(None, AMOUNT)
+    exact = pl.when(outcome=USED).then("amount").cast(AMOUNT) if has_amount else pl.lit(None, AMOUNT)
     return judged.with_columns(exact.alias("amount"))
 
 

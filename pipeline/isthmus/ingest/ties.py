@@ -63,7 +63,7 @@ def add_up_to(merge: Merge) -> None:
     """Run a merge. Rows of several sources of one day are of that one day."""
     book, ties = add_up(merge.sources)
     folder = Path(merge.target)
-    folder.mkdir(parents=True)
+    folder.mkdir(parents=True, exist_ok=True)  # Dask runs a task again when its worker has died
     book.to_frame().write_ipc(folder / "parties.arrow")
     ties.with_columns(days=pl.lit(1, pl.Int64)).write_ipc(folder / "ties.arrow", compression="lz4")
 

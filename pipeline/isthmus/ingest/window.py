@@ -72,6 +72,11 @@ def read_window(
 
     Raises DataRefused when no row of the window can be used, or a file turns out damaged.
     """
+    if not found.parts:
+        raise DataRefused(
+            f"no row group of the log can hold {first_day}..{last_day}, by the times in the files' footers; check "
+            "--as-of, window.days and log.columns.time"
+        )
     columns = _mapped(log)
     window = range(day_number(first_day), day_number(last_day) + 1)
     scratch = fresh(work / "parts")
@@ -82,7 +87,7 @@ def read_window(
             results = _without_duplicates(tasks, results, window, scratch, door)
     outcomes = _count(results, window)
     if not outcomes.get(USED):
-        raise DataRefused(_nothing_used(outcomes, first_day, last_day, len(found.parts)))
+        raise DataRefused(_nothing_used(outcomes, first_day, last_day))
     with watch.stage("combine") as tick:
         days = fresh(work / "days")
         merges = [_day(day, results, days) for day in window if any(day in result.days for result in results)]
@@ -135,12 +140,7 @@ def _count(results: Sequence[PartResult], window: range) -> dict[str, dict[str, 
     return {outcome: dict(sorted(reasons.items())) for outcome, reasons in outcomes.items()}
 
 
-def _nothing_used(outcomes: dict[str, dict[str, int]], first_day: date, last_day: date, parts: int) -> str:
-    if not parts:
-        return (
-            f"no row group of the log can hold {first_day}..{last_day}, by the times in the files' footers; check "
-            "--as-of, window.days and log.columns.time"
-        )
+def _nothing_used(outcomes: dict[str, dict[str, int]], first_day: date, last_day: date) -> str:
     told = [f"{rows} {reason}" for kind in (REFUSED, FILTERED) for reason, rows in outcomes[kind].items()]
     return (
         f"no usable row in {first_day}..{last_day}: {', '.join(told) or 'the files are empty'}; check --as-of, "

@@ -64,12 +64,9 @@ def publish(
         (RUNS, conform(pl.DataFrame([run], schema=RUNS.schema), RUNS)),
     ]
     manifest = json.dumps(run | more, indent=2, default=str, ensure_ascii=False) + "\n"
-    batch = Batch()
-    try:
+    with Batch() as batch:
         for table, frame in frames:
             batch.add(night.table(table.name), lambda path, frame=frame: frame.write_parquet(path))  # type: ignore[misc]
         batch.add(night.manifest, lambda path: path.write_text(manifest, encoding="utf-8"))
         batch.commit()
-    finally:
-        batch.discard()
     return scores

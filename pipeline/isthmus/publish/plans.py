@@ -15,18 +15,19 @@ __all__ = ["plan_once"]
 
 
 def plan_once(path: Path, run_id: str, graph: Graph, settings: Settings) -> Plan:
-    """The plan kept in `path` if it was made for this run_id, else a new one, which is then kept.
+    """The plan kept in `path` if it was made for this run_id and fits the memory, else a new one, which is then kept.
 
     Raises what `make_plan` raises, and StoreError when the plan cannot be kept.
     """
     try:
         kept = json.loads(path.read_text())
-        if kept["run_id"] == run_id:
-            return Plan(**kept["plan"])
+        plan = Plan(**kept["plan"])
+        if kept["run_id"] == run_id and plan.predicted_bytes <= settings.run.memory_bytes:
+            return plan
     except (OSError, ValueError, KeyError, TypeError):
         pass  # none kept, or of another version: make one
     plan = make_plan(graph, settings.score, settings.run.threads, settings.run.memory_bytes)
-    batch = Batch()
-    batch.add(path, lambda target: target.write_text(json.dumps({"run_id": run_id, "plan": asdict(plan)})))
-    batch.commit()
+    with Batch() as batch:
+        batch.add(path, lambda target: target.write_text(json.dumps({"run_id": run_id, "plan": asdict(plan)})))
+        batch.commit()
     return plan
