@@ -25,6 +25,7 @@ import polars as pl
 from isthmus.betweenness import betweenness
 from isthmus.errors import SettingsError
 from isthmus.graph import Graph
+from isthmus.settings import Engine, Method
 from open_graphs import READERS, exact, open_graph
 
 HERE = Path(__file__).parent
@@ -34,7 +35,7 @@ KEY = ("graph", "engine", "method", "asked", "seed")
 ROUNDING = 1e-11  # exact values are themselves sums of floats
 
 
-def measure(graph: str, engine: str, method: str, samples: int, seed: int) -> dict[str, object]:
+def measure(graph: str, engine: Engine, method: Method, samples: int, seed: int) -> dict[str, object]:
     """One measurement. Both times include planning; `kept_of_top_100` is the share of the true first 100 found."""
     told: dict[str, object] = {"graph": graph, "engine": engine, "method": method, "asked": samples, "seed": seed}
     truth, opened = exact(graph), open_graph(graph)

@@ -131,7 +131,8 @@ def exact(name: str) -> NDArray[np.float64]:
         beside = kept.with_name("exact.part.npy")
         np.save(beside, np.array(raw) / pairs)
         os.replace(beside, kept)
-    return np.load(kept)
+    values: NDArray[np.float64] = np.load(kept)
+    return values
 
 
 def flights() -> Path:

@@ -20,9 +20,11 @@ import sys
 import threading
 import time
 from collections.abc import Callable
-from dataclasses import dataclass
+from contextlib import suppress
+from dataclasses import dataclass, field
 from datetime import UTC, date, datetime, timedelta
 from pathlib import Path
+from typing import Any
 
 import polars as pl
 import psutil
@@ -89,31 +91,45 @@ def prepare(log: str, minutes: float) -> Path:
     return config
 
 
-def watched(command: list[str]) -> tuple[dict[str, object], dict[str, int], float]:
-    """Run a command that puts one JSON object on stdout. Its object, peak bytes per stage, wall seconds."""
+@dataclass
+class Seen:
+    """What was seen from outside: per stage the peak of memory and the processor time, and the wall time of all."""
+
+    peak_bytes: dict[str, int] = field(default_factory=dict)
+    cpu_seconds: dict[str, float] = field(default_factory=dict)
+    wall_seconds: float = 0.0
+
+
+def watched(command: list[str]) -> tuple[dict[str, Any], Seen]:
+    """Run a command that puts one JSON object on stdout and one line per finished stage on stderr."""
     start = time.perf_counter()
     process = subprocess.Popen(command, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True)
     assert process.stdout is not None
-    assert process.stderr is not None
-    peaks, current, said = {}, [0], []
+    seen, said = Seen(), []
+    peak, spent, before = 0, 0.0, 0.0  # of the stage that runs; of the process so far; when the stage began
 
     def look() -> None:
+        nonlocal peak, spent
         own = psutil.Process(process.pid)
         while process.poll() is None:
-            try:
+            with suppress(psutil.NoSuchProcess):
                 family = [own, *own.children(recursive=True)]
-                current[0] = max(current[0], sum(member.memory_info().rss for member in family))
-            except psutil.NoSuchProcess:
-                pass
+                peak = max(peak, sum(member.memory_info().rss for member in family))
+                spent = sum(sum(member.cpu_times()[:2]) for member in family)
             time.sleep(0.01)
 
-    def listen(lines: list[str]) -> None:
-        for line in process.stderr or ():
-            lines.append(line)
-            if done := STAGE_DONE.match(line):
-                peaks[done[1]], current[0] = current[0], 0
+    def end_stage(name: str) -> None:
+        nonlocal peak, before
+        seen.peak_bytes[name], seen.cpu_seconds[name] = peak, spent - before
+        peak, before = 0, spent
 
-    threads = [threading.Thread(target=look), threading.Thread(target=listen, args=(said,))]
+    def listen() -> None:
+        for line in process.stderr or ():
+            said.append(line)
+            if done := STAGE_DONE.match(line):
+                end_stage(done[1])
+
+    threads = [threading.Thread(target=look), threading.Thread(target=listen)]
     for thread in threads:
         thread.start()
     answer = process.stdout.read()
@@ -121,17 +137,18 @@ def watched(command: list[str]) -> tuple[dict[str, object], dict[str, int], floa
         thread.join()
     if process.wait():
         sys.exit(f"{' '.join(command)} ended with {process.returncode}:\n{''.join(said)}")
-    peaks["after"] = current[0]
-    return json.loads(answer), peaks, time.perf_counter() - start
+    end_stage("after")
+    seen.wall_seconds = time.perf_counter() - start
+    return json.loads(answer), seen
 
 
-def group_by(settings: Settings, as_of: date) -> dict[str, object]:
+def group_by(settings: Settings, as_of: date) -> dict[str, Any]:
     """The least that ingest could do: read the same columns, add the window's rows up, refuse nothing."""
     columns = settings.log.columns
     first = as_of - timedelta(days=settings.window.days - 1)
     extra = [pl.col(columns.amount).sum()] if columns.amount else []
     extra += [pl.col(columns.id).max()] if columns.id else []  # so that it is read
-    start = time.perf_counter()
+    start, spent = time.perf_counter(), time.process_time()
     ties = (
         pl.scan_parquet(settings.log.path, hive_partitioning=False)
         .filter(pl.col(columns.time).dt.date().is_between(first, as_of))
@@ -144,7 +161,8 @@ def group_by(settings: Settings, as_of: date) -> dict[str, object]:
         )
         .collect(engine="streaming")
     )
-    return {"seconds": {"group-by": time.perf_counter() - start}, "ties": ties.height}
+    took, spent = time.perf_counter() - start, time.process_time() - spent
+    return {"seconds": {"group-by": took}, "cpu_seconds": {"group-by": spent}, "ties": ties.height}
 
 
 def measure(log: str, minutes: float, repeat: int) -> None:
@@ -155,54 +173,54 @@ def measure(log: str, minutes: float, repeat: int) -> None:
         bare = [sys.executable, __file__, "--log", log, "--bare"]
         score = [sys.executable, "-m", "isthmus", "score", str(config), "--as-of", as_of, "--json"]
         for what, command in (("group-by", bare), ("score", score)):
-            told, peaks, wall = watched(command)
+            told, seen = watched(command)
+            if what == "group-by":  # one stage, and its own figures leave out what loading Polars took
+                seen.peak_bytes = {what: max(seen.peak_bytes.values())}
+                seen.cpu_seconds = told["cpu_seconds"]
             line = {
                 "log": log,
                 "what": what,
                 "measured": moment,
                 "turn": turn,
-                "wall_seconds": wall,
                 "seconds": told["seconds"],
-                "peak_bytes": peaks if what == "score" else {"group-by": max(peaks.values())},
-                **{key: told.get(key) for key in ("rows_read", "parties", "ties", "method", "samples")},
+                **vars(seen),
             }
+            line |= {key: told[key] for key in ("rows_read", "parties", "ties", "method", "samples") if key in told}
             with LINES.open("a") as lines:
                 lines.write(json.dumps(line) + "\n")
             print(json.dumps(line), flush=True)
 
 
 def write_table() -> None:
-    """The last measurement of each log: median time and largest memory over its turns."""
+    """The last measurement of each log: median times and largest memory over its turns."""
     lines = [json.loads(line) for line in LINES.read_text().splitlines()]
     last = {line["log"]: line["measured"] for line in lines}
-    cells = pl.DataFrame(
-        [
-            {"log": line["log"], "stage": stage, "seconds": seconds, "bytes": line["peak_bytes"].get(stage)}
-            for line in lines
-            if line["measured"] == last[line["log"]]
-            for stage, seconds in _with_ingest(line)
-        ]
+    kept = [figures for line in lines if line["measured"] == last[line["log"]] for figures in _figures(line)]
+    names = ["log", "stage", "seconds", "cpu", "bytes"]
+    table = (
+        pl.DataFrame(kept, schema=names, orient="row")
+        .group_by("log", "stage", maintain_order=True)
+        .agg(pl.col("seconds", "cpu").median(), pl.col("bytes").max())
     )
-    table = cells.group_by("log", "stage", maintain_order=True).agg(pl.col("seconds").median(), pl.col("bytes").max())
     wide: dict[str, dict[str, str]] = {}
-    for log, stage, seconds, size in table.iter_rows():
-        wide.setdefault(stage, {})[log] = f"{seconds:.1f} s, {size / 2**20:,.0f} MiB" if size else f"{seconds:.1f} s"
+    for log, stage, seconds, cpu, size in table.iter_rows():
+        wide.setdefault(stage, {})[log] = f"{seconds:.1f} s, {cpu:.1f} CPU s, {size / 2**20:,.0f} MiB"
     logs = [log for log in SOURCES if log in last]
     rows = [f"| {stage} | {' | '.join(found.get(log, '') for log in logs)} |" for stage, found in wide.items()]
     TABLE.write_text("\n".join([f"| stage | {' | '.join(logs)} |", "|---|" + "---:|" * len(logs), *rows]) + "\n")
 
 
-def _with_ingest(line: dict[str, dict[str, float]]) -> list[tuple[str, float]]:
-    """Stages in order, the three of ingest also added up, to stand beside the bare group-by."""
-    stages = list(line["seconds"].items())
+def _figures(line: dict[str, Any]) -> list[tuple[str, str, float, float, int]]:
+    """Log, stage, seconds, processor seconds, bytes; ingest as a whole first, to stand beside the bare group-by."""
+    log, seconds, cpu, peak = line["log"], line["seconds"], line["cpu_seconds"], line["peak_bytes"]
+    each = [(log, stage, seconds[stage], cpu[stage], peak[stage]) for stage in seconds]
     if line["what"] == "group-by":
-        return stages
-    peaks = line["peak_bytes"]
-    peaks["ingest, all"] = max(peaks.get(stage, 0) for stage in INGEST)
+        return each
+    ingest = [part for part in each if part[1] in INGEST]
     return [
-        ("ingest, all", sum(line["seconds"][stage] for stage in INGEST)),
-        *stages,
-        ("start to end", line["wall_seconds"]),
+        (log, "ingest, all", sum(p[2] for p in ingest), sum(p[3] for p in ingest), max(p[4] for p in ingest)),
+        *each,
+        (log, "start to end", line["wall_seconds"], sum(cpu.values()), max(peak.values())),
     ]
 
 

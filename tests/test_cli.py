@@ -278,7 +278,10 @@ def test_check_foresees_a_log_that_it_reads_a_part_of(tmp_path: Path, monkeypatc
     assert foreseen["ties"] == pytest.approx(run["ties"], rel=0.25)
     assert "about" in said.err
     assert "the rest is extrapolated" in said.err
-    assert foreseen["days_with_rows"] is None  # days that were not looked at are not missing
+    monkeypatch.setattr(forecast, "SAMPLE_ROWS", 400)  # parts 0, 8 and 16 of 20: none of the third day
+    foreseen = json.loads(site.check("--json").out)
+    assert foreseen["rows_looked_at"] == 450
+    assert foreseen["days_with_rows"] is None  # a day that was not looked at is not missing
     assert foreseen["stopped"] == ""
 
 

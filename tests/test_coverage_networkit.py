@@ -9,7 +9,8 @@ import numpy as np
 import pytest
 from scipy.stats import binom, chi2
 
-from isthmus.betweenness import engine_networkit, make_plan, measure
+from isthmus.betweenness import make_plan, measure
+from isthmus.betweenness.engine_networkit import library as engine_networkit
 from isthmus.settings import Score
 
 SEEDS = 120

@@ -31,7 +31,7 @@ def rows_of(graph: Graph, side: str = "out") -> list[list[int]]:
 
 def lengths_of(graph: Graph, side: str = "") -> dict[tuple[int, int], int]:
     ptr, adj = (graph.in_ptr, graph.in_adj) if side else (graph.out_ptr, graph.out_adj)
-    values = graph.in_lengths if side else graph.lengths
+    values = graph.in_lengths if side else graph.out_lengths
     return {(v, int(adj[at])): int(values[at]) for v in range(graph.n) for at in range(ptr[v], ptr[v + 1])}
 
 
@@ -43,7 +43,7 @@ def test_directed_rows_and_their_reverse() -> None:
     assert graph.parties.to_list() == ["a", "b", "c", "d"]
     assert rows_of(graph) == [[1, 2], [0], [], []]
     assert rows_of(graph, "in") == [[1], [0], [0], []]
-    assert (graph.n, graph.arcs, graph.ties, graph.lengths) == (4, 3, 3, None)
+    assert (graph.n, graph.arcs, graph.ties, graph.out_lengths) == (4, 3, 3, None)
 
 
 def test_undirected_ties_stand_in_both_rows() -> None:
@@ -81,7 +81,7 @@ def test_equal_routes_have_equal_lengths() -> None:
 
 def test_strengths_of_repeated_ties_and_both_directions_add_up() -> None:
     ties = frame([("a", "b"), ("a", "b"), ("b", "a"), ("b", "c")], contacts=[1, 2, 3, 1])
-    one = Graph.from_ties(ties, distance="contacts").lengths
+    one = Graph.from_ties(ties, distance="contacts").out_lengths
     assert one is not None
     graph = Graph.from_ties(ties, directed=True, distance="contacts")
     unit = lengths_of(graph)[1, 2]
@@ -100,7 +100,7 @@ def test_a_tie_without_strength_is_left_out_and_its_parties_stay() -> None:
 
 def test_very_strong_ties_keep_a_positive_length() -> None:
     ties = frame([("a", "b"), ("b", "c")], amount=[1e-9, 1e18])
-    assert min(Graph.from_ties(ties, distance="amount").lengths) == 1
+    assert min(Graph.from_ties(ties, distance="amount").out_lengths) == 1
 
 
 def test_what_is_refused() -> None:
@@ -129,7 +129,7 @@ def test_saved_and_mapped(tmp_path: Path, name: str, directed: bool) -> None:
     opened = Graph.open(tmp_path)
     assert opened.parties.equals(saved.parties)
     assert (opened.directed, opened.n, opened.arcs) == (directed, saved.n, saved.arcs)
-    for array in ("out_ptr", "out_adj", "in_ptr", "in_adj", "lengths", "in_lengths"):
+    for array in ("out_ptr", "out_adj", "in_ptr", "in_adj", "out_lengths", "in_lengths"):
         before, after = getattr(saved, array), getattr(opened, array)
         assert (before is None) == (after is None), array
         if before is not None:
@@ -145,7 +145,7 @@ def test_a_saved_graph_replaces_the_one_before(tmp_path: Path) -> None:
     plain = Graph.from_ties(frame([("x", "y"), ("x", "z")]), directed=False)
     plain.save(tmp_path)
     opened = Graph.open(tmp_path)
-    assert opened.lengths is None
+    assert opened.out_lengths is None
     assert rows_of(opened, "in") == rows_of(plain, "in")
 
 

@@ -14,7 +14,23 @@ import pytest
 
 from isthmus.errors import DataRefused, SettingsError, StoreError
 from isthmus.ingest import files
-from logs import EPOCH, FIRST, LAST, NOON, TIME, at, column, log_of, look, pairs_of, read, refused_of, table, ties_of, write
+from logs import (
+    EPOCH,
+    FIRST,
+    LAST,
+    NOON,
+    TIME,
+    at,
+    column,
+    log_of,
+    look,
+    pairs_of,
+    read,
+    refused_of,
+    table,
+    ties_of,
+    write,
+)
 
 # ---------------------------------------------------------------- keys
 

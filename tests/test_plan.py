@@ -10,8 +10,9 @@ from dataclasses import asdict
 import numpy as np
 import pytest
 
-from isthmus.betweenness import Plan, betweenness, make_plan, measure, plan_networkit
-from isthmus.betweenness.bounds import certain_zeros, paths_bound, pivots_bound
+from isthmus.betweenness import Plan, betweenness, make_plan, measure
+from isthmus.betweenness.engine_networkit import costs as plan_networkit
+from isthmus.betweenness.engine_networkit.bounds import certain_zeros, paths_bound, pivots_bound
 from isthmus.errors import SettingsError
 from isthmus.settings import Score
 

@@ -104,6 +104,8 @@ def test_scores_mean_what_they_say(site: Site) -> None:
     assert (sender["degree"], sender["degree_in"], sender["degree_out"]) == (1, 0, 1)
     assert (sender["contacts_in"], sender["contacts_out"]) == (0, 1)
     assert (sender["amount_in"], sender["amount_out"]) == (0.0, 18.0)  # 0 is computed; null would be: not known
+    receiver = by_party["ivy@k0"]
+    assert (receiver["contacts_out"], receiver["amount_out"], receiver["amount_in"]) == (0, 0.0, 19.0)
     between = by_party[BETWEEN]
     # of the 9 · 8 ordered pairs of others: from ada, ben, cas or gil to dov, eli or fay
     assert between["pairs"] == pytest.approx(12)

@@ -7,13 +7,15 @@ functions run behind all three doors. Results come back in the order of the task
 from __future__ import annotations
 
 import os
-from collections.abc import Callable, Iterator, Sequence
+from collections import deque
+from collections.abc import Callable, Iterable, Iterator, Sequence
+from concurrent.futures import Future, ThreadPoolExecutor
 from contextlib import contextmanager
 from typing import Any, Protocol, TypeVar
 
 from isthmus.errors import StoreError
 
-__all__ = ["Door", "open_door"]
+__all__ = ["Door", "Here", "open_door"]
 
 ANSWER_SECONDS = 10  # a scheduler that is there answers in one
 
@@ -25,16 +27,36 @@ Tick = Callable[[float], None]
 class Door(Protocol):
     """Where tasks run."""
 
+    def stream(self, function: Callable[[Task], Result], tasks: Iterable[Task]) -> Iterator[Result]:
+        """function(task) in the order of the tasks, a few worked on ahead of what has been asked for.
+
+        Closing the iterator, also by an error or Ctrl-C, drops what has not begun.
+        """
+        ...
+
     def run(self, function: Callable[[Task], Result], tasks: Sequence[Task], tick: Tick | None = None) -> list[Result]:
         """function(task) for every task; `tick` hears the share done, 0..1. The first error raised ends it all."""
         ...
 
 
-class _Here:
-    """Dask's threads in this process."""
+class Here:
+    """Threads in this process."""
 
-    def __init__(self, threads: int) -> None:
-        self._threads = threads
+    def __init__(self, threads: int = 0) -> None:
+        self._threads = threads or os.cpu_count() or 1
+
+    def stream(self, function: Callable[[Task], Result], tasks: Iterable[Task]) -> Iterator[Result]:
+        pool = ThreadPoolExecutor(self._threads, thread_name_prefix="isthmus")
+        try:
+            ahead: deque[Future[Result]] = deque()
+            for task in tasks:
+                ahead.append(pool.submit(function, task))
+                if len(ahead) > self._threads:
+                    yield ahead.popleft().result()
+            while ahead:
+                yield ahead.popleft().result()
+        finally:
+            pool.shutdown(wait=True, cancel_futures=True)
 
     def run(self, function: Callable[[Task], Result], tasks: Sequence[Task], tick: Tick | None = None) -> list[Result]:
         import dask
@@ -59,17 +81,48 @@ class _Elsewhere:
     def __init__(self, client: Any) -> None:
         self._client = client
 
+    def stream(self, function: Callable[[Task], Result], tasks: Iterable[Task]) -> Iterator[Result]:
+        # two for each of the workers' threads: one at work, one on its way
+        most = 2 * max(1, sum(self._client.nthreads().values()))
+        ahead: deque[Any] = deque()
+        try:
+            for task in tasks:
+                ahead.append(self._client.submit(function, task, pure=False))
+                if len(ahead) > most:
+                    yield ahead.popleft().result()
+            while ahead:
+                yield ahead.popleft().result()
+        finally:
+            self._client.cancel(list(ahead))
+
     def run(self, function: Callable[[Task], Result], tasks: Sequence[Task], tick: Tick | None = None) -> list[Result]:
         from distributed import as_completed
 
         futures = self._client.map(function, tasks, pure=False)
         order = {future.key: index for index, future in enumerate(futures)}
         results: list[Any] = [None] * len(futures)
-        for done, (future, result) in enumerate(as_completed(futures, with_results=True), 1):
+        finished = as_completed(futures, loop=self._client.loop, with_results=True)
+        for done, (future, result) in enumerate(finished, 1):
             results[order[future.key]] = result
             if tick:
                 tick(done / len(futures))
         return results
+
+
+def _expect_answer(scheduler: str) -> None:
+    """Ask the scheduler who it is: Dask's client would wait for ever for one that is up but stopped."""
+    import asyncio
+
+    from distributed import Security
+    from distributed.core import rpc
+
+    async def ask() -> None:
+        async with asyncio.timeout(ANSWER_SECONDS):
+            async with rpc(scheduler, connection_args=Security().get_connection_args("client")) as asked:
+                await asked.identity()
+
+    with ThreadPoolExecutor(1) as aside:  # the caller may have an event loop of its own
+        aside.submit(lambda: asyncio.run(ask())).result()
 
 
 @contextmanager
@@ -82,6 +135,7 @@ def open_door(*, workers: int = 0, threads: int = 0, scheduler: str = "", scratc
         from distributed import Client
 
         try:
+            _expect_answer(scheduler)
             client = Client(scheduler, timeout=ANSWER_SECONDS, set_as_default=False)
         except (OSError, TimeoutError, ValueError) as error:
             raise StoreError(
@@ -102,7 +156,9 @@ def open_door(*, workers: int = 0, threads: int = 0, scheduler: str = "", scratc
                 threads_per_worker=1,
                 processes=True,
                 env=env,
-                dashboard_address=None,
+                # Dask serves its health page in any case: any free port, for this machine only
+                dashboard_address="127.0.0.1:0",
+                scheduler_kwargs={"dashboard": False},
                 local_directory=scratch or None,
                 silence_logs=50,
             ) as local,
@@ -110,4 +166,4 @@ def open_door(*, workers: int = 0, threads: int = 0, scheduler: str = "", scratc
         ):
             yield _Elsewhere(client)
     else:
-        yield _Here(threads or os.cpu_count() or 1)
+        yield Here(threads)

@@ -15,7 +15,7 @@ from isthmus.cluster import open_door
 from isthmus.gates import pass_gates
 from isthmus.graph import Graph, describe
 from isthmus.ingest import read_window, survey
-from isthmus.publish import Night, manifest, plan_once, publish, run_id_of, run_row
+from isthmus.publish import Night, manifest, plan_once, publish, remember, run_id_of, run_row
 from isthmus.settings import Settings
 from isthmus.tables import LAYOUT
 from isthmus.watch import Watch
@@ -55,23 +55,24 @@ def run_night(settings: Settings, as_of: date, watch: Watch) -> Outcome:
         with watch.stage("survey"):
             found = survey(settings.log, first_day, last_day, door)
         reading = read_window(found, settings.log, first_day, last_day, work, door, watch)
-    pass_gates(
-        settings.gates,
-        rows_read=reading.rows_read,
-        rows_refused=reading.rows("refused"),
-        missing_days=reading.missing_days,
-        warn=watch.warning,
-    )
-    with watch.stage("graph"):
-        built = Graph.from_ties(reading.ties, directed=settings.graph.directed, distance=settings.graph.distance)
-        built.save(store.fresh(work / "snapshot"))
-        graph = Graph.open(work / "snapshot")
-        parties = describe(graph, reading.ties)
-    run_id = run_id_of(settings, as_of, reading)
-    with watch.stage("plan"):
-        plan = plan_once(work / "plan.json", run_id, graph, settings)
-    with watch.stage("score") as tick:
-        estimate = measure(graph, plan, settings.score, threads=run.threads, progress=tick)
+        pass_gates(
+            settings.gates,
+            rows_read=reading.rows_read,
+            rows_refused=reading.rows("refused"),
+            missing_days=reading.missing_days,
+            warn=watch.warning,
+        )
+        with watch.stage("graph"):
+            built = Graph.from_ties(reading.ties, directed=settings.graph.directed, distance=settings.graph.distance)
+            built.save(store.fresh(work / "snapshot"))
+            graph = Graph.open(work / "snapshot")
+            parties = describe(graph, reading.ties)
+        run_id = run_id_of(settings, as_of, reading)
+        with watch.stage("plan"):
+            plan = plan_once(work / "plan.json", run_id, graph, settings)
+        with watch.stage("score") as tick:
+            estimate = measure(graph, plan, settings.score, run.threads, tick, door if run.elsewhere else None)
+        remember(work / "plan.json", run_id, plan, estimate)
     if graph.n < 3:
         watch.warning(f"{graph.n} parties: with fewer than three nobody can stand between others, so all scores are 0")
     night = Night(warehouse, settings.series, as_of)

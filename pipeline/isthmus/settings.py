@@ -26,7 +26,7 @@ __all__ = ["Columns", "Gates", "Graph", "Log", "Run", "Score", "Settings", "Wind
 
 Distance = Literal["hops", "contacts", "amount"]
 Method = Literal["auto", "exact", "pivots", "paths"]
-Engine = Literal["networkit"]
+Engine = Literal["numba", "networkit"]
 Gate = Literal["stop", "warn", "off"]
 
 
@@ -80,7 +80,10 @@ class Score(Section):
     method: Method = _key(
         "auto", "auto: exact if it fits `minutes`, else the sampling method that promises narrower intervals"
     )
-    engine: Engine = _key("networkit", "whose algorithms: networkit = the library's own")
+    engine: Engine = _key(
+        "numba",
+        "whose algorithms: numba = ours, an interval for each party; networkit = the library's, the reference",
+    )
     confidence: float = _key(
         0.95, "probability that the intervals of all parties hold at once", "share", gt=0.5, lt=1.0
     )
@@ -113,6 +116,11 @@ class Run(Section):
         "planned against before the work starts: a number and KiB, MiB, GiB or TiB",
         pattern=r"^[1-9][0-9]*(\.[0-9]+)? ?[KMGT]i?B$",
     )
+
+    @property
+    def elsewhere(self) -> bool:
+        """Whether work is handed to other processes."""
+        return bool(self.workers or self.scheduler)
 
     @property
     def memory_bytes(self) -> int:

@@ -12,6 +12,7 @@ from pydantic import ValidationError
 
 from isthmus.betweenness.estimate import Estimate
 from isthmus.betweenness.plan import Plan, make_plan
+from isthmus.cluster import Door
 from isthmus.errors import SettingsError
 from isthmus.graph import Graph
 from isthmus.settings import Engine, Method, Run, Score
@@ -25,7 +26,7 @@ def betweenness(
     graph: Graph,
     *,
     method: Method = "auto",
-    engine: Engine = "networkit",
+    engine: Engine = "numba",
     samples: int = 0,
     half_width: float = 0.0,
     confidence: float = 0.95,
@@ -65,13 +66,21 @@ def betweenness(
     return measure(graph, plan, score, run.threads, progress)
 
 
-def measure(graph: Graph, plan: Plan, score: Score, threads: int = 0, progress: Progress | None = None) -> Estimate:
+def measure(
+    graph: Graph,
+    plan: Plan,
+    score: Score,
+    threads: int = 0,
+    progress: Progress | None = None,
+    door: Door | None = None,
+) -> Estimate:
     """Do what `plan` says, with the seed and the confidence of `score`.
 
     `plan` must have been made for this graph, or for one with the same parties and ties. `threads` > 0 lowers the
-    plan's number of threads.
+    plan's number of threads. `door`: where blocks of work run, for an engine that cuts its work in blocks; by default
+    on threads in this process.
     """
     # by name, so that importing isthmus imports no engine
     engine = import_module(f"isthmus.betweenness.engine_{plan.engine}")
-    estimate: Estimate = engine.run(graph, plan, score, threads, progress or (lambda _: None))
+    estimate: Estimate = engine.run(graph, plan, score, threads, progress or (lambda _: None), door)
     return estimate

@@ -1,7 +1,7 @@
 """Which method, how many samples, and what that will cost: settled before the first draw.
 
-An engine X is two modules: `plan_X` with `planner(graph, score, threads, memory_bytes) -> Planner`, and `engine_X`
-with `run(graph, plan, score, threads, progress) -> Estimate`. The choice between the methods is made here and is
+An engine X is a package `engine_X` with `planner(graph, score, threads, memory_bytes) -> Planner` and
+`run(graph, plan, score, threads, progress) -> Estimate`. The choice between the methods is made here and is
 the same for all engines.
 """
 
@@ -25,7 +25,9 @@ class Plan:
 
     `samples`: sources or pairs to draw (for exact, the number of parties). `half_width`: promised to every party at
     once, on Freeman's scale, before clipping to 0..1; 0 when exact. `limit` says what set `samples`: exact, samples,
-    half_width or minutes. `blocks`: parts that the draws are made in. `reason`: one sentence for people.
+    half_width or minutes. `blocks`: parts that the draws are made in, where that is fixed beforehand. `lanes`: sources
+    worked on at once by a thread. `reached`: where the clock stopped a former run of this plan; a re-run stops there
+    again, and gives the same numbers. `reason`: one sentence for people.
     """
 
     engine: str
@@ -38,6 +40,8 @@ class Plan:
     predicted_bytes: int
     threads: int
     blocks: int
+    lanes: int = 0
+    reached: int = 0
 
 
 class Planner(Protocol):
@@ -56,7 +60,7 @@ def make_plan(graph: Graph, score: Score, threads: int, memory_bytes: int) -> Pl
     for a second or so. Raises SettingsError when nothing fits the memory or the method cannot take the graph.
     """
     # by name, so that importing isthmus imports no engine
-    home = import_module(f"isthmus.betweenness.plan_{score.engine}")
+    home = import_module(f"isthmus.betweenness.engine_{score.engine}")
     planner: Planner = home.planner(graph, score, threads or os.cpu_count() or 1, memory_bytes)
     if score.method != "auto":
         offer = {"exact": planner.exact, "pivots": planner.pivots, "paths": planner.paths}[score.method]()

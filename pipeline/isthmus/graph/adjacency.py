@@ -13,11 +13,9 @@ from numpy.typing import NDArray
 from scipy import sparse
 
 from isthmus.errors import DataRefused, StoreError
+from isthmus.graph.arrays import Arrays, Ids, Ints
 
 __all__ = ["LENGTH_OF_WEAKEST", "Graph", "ids_of"]
-
-Ints = NDArray[np.int64]
-Ids = NDArray[np.int32]
 
 # The weakest tie gets this length and a tie k times as strong gets 1/k of it, rounded to a whole number: sums of
 # whole numbers below 2**53 are exact, so two routes of equal length are equal in every engine and on every machine.
@@ -25,35 +23,15 @@ Ids = NDArray[np.int32]
 LENGTH_OF_WEAKEST = 720_720 * 2**20
 
 
-@dataclass(frozen=True, eq=False)
-class Graph:
-    """Who can reach whom in one step.
+@dataclass(frozen=True, eq=False, kw_only=True)
+class Graph(Arrays):
+    """Who can reach whom in one step. `parties` (n strings, sorted) gives party of id 0..n-1.
 
-    `parties` (n strings, sorted) gives party of id 0..n-1. Row v of the adjacency, `out_adj[out_ptr[v]:out_ptr[v+1]]`,
-    holds the ids that v leads to, ascending, without v itself and without repeats. `in_ptr`, `in_adj` are the
-    reverse; in an undirected graph every tie stands in both rows and the reverse is the same arrays.
-    `lengths` and `in_lengths`, aligned with the adjacency, are positive whole numbers, or None when each tie is
-    one hop.
+    `folder` is where the arrays are mapped from, for workers that see the same disk; None for a graph in memory.
     """
 
     parties: pl.Series
-    directed: bool
-    out_ptr: Ints
-    out_adj: Ids
-    in_ptr: Ints
-    in_adj: Ids
-    lengths: Ints | None = None
-    in_lengths: Ints | None = None
-
-    @property
-    def n(self) -> int:
-        """Number of parties."""
-        return len(self.out_ptr) - 1
-
-    @property
-    def arcs(self) -> int:
-        """Number of stored arcs; an undirected tie counts twice."""
-        return len(self.out_adj)
+    folder: Path | None = None
 
     @property
     def ties(self) -> int:
@@ -111,7 +89,16 @@ class Graph:
         back.sort_indices()
         weakest = float(out.data.min()) if strength is not None and out.nnz else 1.0
         forward, reverse = _rows(out, strength is not None, weakest), _rows(back, strength is not None, weakest)
-        return cls(parties, directed, forward[0], forward[1], reverse[0], reverse[1], forward[2], reverse[2])
+        return cls(
+            parties=parties,
+            directed=directed,
+            out_ptr=forward[0],
+            out_adj=forward[1],
+            out_lengths=forward[2],
+            in_ptr=reverse[0],
+            in_adj=reverse[1],
+            in_lengths=reverse[2],
+        )
 
     def save(self, folder: Path) -> None:
         """Write the arrays so that any process on any machine that sees the folder can map them."""
@@ -140,10 +127,10 @@ class Graph:
             raise StoreError(f"cannot map the graph in {folder}: {error}; run the night again") from None
         if not told["directed"]:
             arrays |= {f"in_{name.removeprefix('out_')}": array for name, array in arrays.items()}
-        return cls(parties=parties, directed=told["directed"], **arrays)
+        return cls(parties=parties, folder=folder, directed=told["directed"], **arrays)
 
 
-_ARRAYS = ("out_ptr", "out_adj", "lengths", "in_ptr", "in_adj", "in_lengths")
+_ARRAYS = ("out_ptr", "out_adj", "out_lengths", "in_ptr", "in_adj", "in_lengths")
 
 
 def ids_of(keys: pl.Series, parties: pl.Series) -> NDArray[np.int64]:

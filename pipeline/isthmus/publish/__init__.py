@@ -2,6 +2,6 @@
 
 from isthmus.publish.manifest import manifest, run_id_of, run_row
 from isthmus.publish.night import Night, publish
-from isthmus.publish.plans import plan_once
+from isthmus.publish.plans import plan_once, remember
 
-__all__ = ["Night", "manifest", "plan_once", "publish", "run_id_of", "run_row"]
+__all__ = ["Night", "manifest", "plan_once", "publish", "remember", "run_id_of", "run_row"]

@@ -3,15 +3,15 @@
 from __future__ import annotations
 
 import json
-from dataclasses import asdict
+from dataclasses import asdict, replace
 from pathlib import Path
 
-from isthmus.betweenness import Plan, make_plan
+from isthmus.betweenness import Estimate, Plan, make_plan
 from isthmus.graph import Graph
 from isthmus.settings import Settings
 from isthmus.store import Batch
 
-__all__ = ["plan_once"]
+__all__ = ["plan_once", "remember"]
 
 
 def plan_once(path: Path, run_id: str, graph: Graph, settings: Settings) -> Plan:
@@ -27,7 +27,17 @@ def plan_once(path: Path, run_id: str, graph: Graph, settings: Settings) -> Plan
     except (OSError, ValueError, KeyError, TypeError):
         pass  # none kept, or of another version: make one
     plan = make_plan(graph, settings.score, settings.run.threads, settings.run.memory_bytes)
+    _keep(path, run_id, plan)
+    return plan
+
+
+def remember(path: Path, run_id: str, plan: Plan, estimate: Estimate) -> None:
+    """Where the clock stopped the sampling, so that a re-run stops there too. Raises StoreError."""
+    if estimate.stopped_because == "minutes" and estimate.samples != plan.samples:
+        _keep(path, run_id, replace(plan, reached=estimate.samples))
+
+
+def _keep(path: Path, run_id: str, plan: Plan) -> None:
     with Batch() as batch:
         batch.add(path, lambda target: target.write_text(json.dumps({"run_id": run_id, "plan": asdict(plan)})))
         batch.commit()
-    return plan

@@ -5,8 +5,8 @@ from __future__ import annotations
 import math
 from functools import cached_property
 
-from isthmus.betweenness import engine_networkit as engine
-from isthmus.betweenness.bounds import Bound, certain_zeros, paths_bound, pivots_bound
+from isthmus.betweenness.engine_networkit import library as engine
+from isthmus.betweenness.engine_networkit.bounds import Bound, certain_zeros, paths_bound, pivots_bound
 from isthmus.betweenness.plan import Plan, spell_seconds
 from isthmus.errors import SettingsError
 from isthmus.graph import Graph
@@ -80,7 +80,7 @@ class _Planner:
 
     def paths(self) -> Plan:
         """Sampled shortest paths, on one thread: each thread would draw a stream of its own."""
-        if self.graph.directed and self.graph.lengths is not None:
+        if self.graph.directed and self.graph.out_lengths is not None:
             raise SettingsError(
                 'method = "paths" of engine = "networkit" cannot take a directed graph with lengths; '
                 'use method = "pivots" or "exact", or set graph.distance = "hops"'
@@ -100,7 +100,9 @@ class _Planner:
         affordable = max(self.budget - 2 * search, 0.0)
         each = self._path_seconds(search)
         samples, limit = self._samples(bound, each, most=2 * n, budget=affordable)
-        blocks = min(BLOCKS, samples, max(1, int(0.1 * samples * each / max(search, 1e-9))))
+        # Blocks fix the seeds, so nothing that is measured may set their number: a directed graph, where each would
+        # search for the diameter again from many parties, gets one.
+        blocks = 1 if self.graph.directed else min(BLOCKS, samples)
         seconds = samples * each + (blocks + 1) * search
         return self._sampled("paths", "paths", samples, limit, bound, seconds, needed, 1, blocks)
 
@@ -152,7 +154,7 @@ class _Planner:
 
         Sizes are upper bounds on what was measured on random graphs of 1-6 million arcs.
         """
-        graph, weighted = self.graph, self.graph.lengths is not None
+        graph, weighted = self.graph, self.graph.out_lengths is not None
         arc = 16 if weighted else 8
         converted = 128 * graph.n + (2 if graph.directed else 1) * arc * graph.arcs
         building = 24 * graph.arcs
@@ -197,7 +199,7 @@ class _Planner:
 
     @property
     def _nominal(self) -> float:
-        rate = NOMINAL_ARCS_PER_SECOND[self.graph.lengths is not None]
+        rate = NOMINAL_ARCS_PER_SECOND[self.graph.out_lengths is not None]
         return (self.graph.n + self.graph.arcs + 1) / rate
 
 

@@ -30,12 +30,13 @@ from weakref import WeakKeyDictionary
 import numpy as np
 from numpy.typing import NDArray
 
-from isthmus.betweenness.bounds import certain_zeros
+from isthmus.betweenness.engine_networkit.bounds import certain_zeros
 from isthmus.betweenness.estimate import Estimate
 from isthmus.graph import Graph
 
 if TYPE_CHECKING:
     from isthmus.betweenness.plan import Plan
+    from isthmus.cluster import Door
     from isthmus.settings import Score
 
 __all__ = ["path_dimension", "run", "seconds_per_path", "seconds_per_source"]
@@ -48,8 +49,11 @@ _one_at_a_time = threading.RLock()
 _converted: WeakKeyDictionary[Graph, Any] = WeakKeyDictionary()
 
 
-def run(graph: Graph, plan: Plan, score: Score, threads: int, progress: Progress) -> Estimate:
-    """Measure as planned. `threads` > 0 lowers the plan's number; `progress` hears the share done, 0..1."""
+def run(graph: Graph, plan: Plan, score: Score, threads: int, progress: Progress, door: Door | None = None) -> Estimate:
+    """Measure as planned, in this process whatever the door: the library keeps its threads to itself.
+
+    `threads` > 0 lowers the plan's number; `progress` hears the share done, 0..1.
+    """
     threads = min(plan.threads, threads) if threads else plan.threads
     zeros = certain_zeros(graph)
     progress(0.0)
@@ -213,12 +217,12 @@ def _convert(graph: Graph, *, backwards: bool = False) -> Any:
     if graph not in _converted:
         tail = np.repeat(np.arange(graph.n, dtype=np.uint64), np.diff(graph.out_ptr))
         head = graph.out_adj.astype(np.uint64)
-        length = np.ones(graph.arcs) if graph.lengths is None else graph.lengths.astype(np.float64)
+        length = np.ones(graph.arcs) if graph.out_lengths is None else graph.out_lengths.astype(np.float64)
         if not graph.directed:
             # NetworKit adds the other direction itself
             once = tail < head
             tail, head, length = tail[once], head[once], length[once]
-        weighted = graph.lengths is not None
+        weighted = graph.out_lengths is not None
         _converted[graph] = [
             nk.GraphFromCoo((length, (tail, head)), n=graph.n, weighted=weighted, directed=graph.directed)
         ]

@@ -1,0 +1,236 @@
+"""What this engine can offer for one graph: time from a short probe, memory from formulas, widths from a pilot."""
+
+from __future__ import annotations
+
+import math
+import time
+from collections.abc import Callable, Sequence
+from typing import TypeVar
+
+import numpy as np
+import polars as pl
+from scipy.special import ndtri
+
+from isthmus.betweenness.engine_numba import blocks, exact, paths, pivots
+from isthmus.betweenness.plan import Plan, spell_seconds
+from isthmus.cluster import Here
+from isthmus.errors import SettingsError
+from isthmus.graph import Graph
+from isthmus.settings import Score
+
+__all__ = ["planner"]
+
+Task = TypeVar("Task")
+
+# Below this many arc visits in all, exact takes a fraction of a second, and a probe would cost more than it tells.
+TINY = 20_000_000
+NOMINAL_ARCS_PER_SECOND = {False: 1e8, True: 5e6}
+PILOT_PAIRS = 1 << 12
+# Half-widths come out at this many z * standard error (benchmarks/README.md): pivots pay for unknown variances.
+PIVOTS_OVER_LIMIT = 1.5
+
+
+def planner(graph: Graph, score: Score, threads: int, memory_bytes: int) -> _Planner:
+    """Offers of this engine for one graph; see `plan.Planner`."""
+    return _Planner(graph, score, threads, memory_bytes)
+
+
+class _Planner:
+    """Offers of the engine `numba` for one graph."""
+
+    def __init__(self, graph: Graph, score: Score, threads: int, memory_bytes: int) -> None:
+        self.graph, self.score, self.threads, self.memory = graph, score, threads, memory_bytes
+        self.weighted = graph.out_lengths is not None
+        if self.weighted and score.max_hops:
+            raise SettingsError(
+                'score.max_hops counts arcs, so it cannot be combined with graph.distance = "contacts" or "amount"; '
+                'set max_hops = 0 or distance = "hops"'
+            )
+        self.budget = score.minutes * 60
+        self.tiny = graph.n * (graph.n + graph.arcs) <= TINY
+        self.trivial = graph.n < 3 or graph.arcs == 0
+        # two-sided normal quantile for n statements at once: no interval can be narrower than z * standard error
+        self.z = float(-ndtri((1 - score.confidence) / (2 * max(graph.n, 1))))
+
+    def exact(self) -> Plan:
+        """All sources, in lanes."""
+        n, arcs = self.graph.n, self.graph.arcs
+        lanes, threads, needed = self._fit("exact", lambda lanes: exact.bytes_per_thread(n, arcs, lanes, self.weighted))
+        if self.tiny:
+            seconds = n * (n + arcs) / NOMINAL_ARCS_PER_SECOND[self.weighted]
+        else:
+            _warm_up(self.graph, self.score)
+            job = self._job(lanes)
+            _, work = blocks.load_exact(job)
+            picks = np.unique(np.linspace(0, work.blocks - 1, min(work.blocks, 2 * threads)).astype(int)).tolist()
+            seconds = work.blocks * _seconds_each(blocks.exact_block, [(job, index) for index in picks], threads)
+        said = f"exact takes about {spell_seconds(seconds)} on {threads} thread{'s' if threads > 1 else ''}"
+        if seconds > self.budget:
+            said += f", longer than the {self.score.minutes:g} min allowed, and has no use when stopped half-way"
+        return self._plan("exact", n, 0.0, "exact", said, seconds, needed, threads, lanes)
+
+    def pivots(self) -> Plan:
+        """Sampled sources without replacement."""
+        n, arcs = self.graph.n, self.graph.arcs
+        lanes, threads, needed = self._fit(
+            "pivots", lambda lanes: pivots.bytes_per_thread(n, arcs, lanes, self.weighted)
+        )
+        if self.trivial:
+            return self._plan("pivots", n, 0.0, "exact", "there is nothing to sample", 0.0, needed, threads, lanes)
+        _warm_up(self.graph, self.score)
+        job = self._job(lanes)
+        sources = blocks.load_pivots(job)
+        draws = min(pivots.BLOCK, n)
+        each = _seconds_each(blocks.pivots_block, [(job, block, draws) for block in range(threads)], threads) / draws
+        pilot = pivots.run_block(sources, 0, draws)
+        mean = pilot.sums / draws
+        spread = np.maximum(pilot.moments[:, 9] / draws - mean**2, 0.0) * sources.scale.factor**2
+        worst = math.sqrt(float(spread.max()))
+
+        def half_width(samples: int) -> float:
+            left = 1 - samples / n
+            return PIVOTS_OVER_LIMIT * self.z * worst * math.sqrt(left / samples)
+
+        return self._sampled("pivots", "sources", n, each, half_width, needed, threads, lanes)
+
+    def paths(self) -> Plan:
+        """Sampled shortest paths."""
+        if self.weighted:
+            raise SettingsError(
+                'method = "paths" of engine = "numba" searches by hops; with graph.distance = "contacts" or "amount" '
+                'use method = "pivots" or "exact"'
+            )
+        n = self.graph.n
+        # the graph renumbered (both ways when directed), flags and rows, and what is known of each party
+        base = 4 * self.graph.arcs * (2 if self.graph.directed else 1) + 90 * n
+        _, threads, needed = self._fit("paths", lambda _: paths.bytes_per_thread(n), base)
+        if self.trivial:
+            return self._plan("paths", 1, 0.0, "exact", "there is nothing to sample", 0.0, needed, threads, 0)
+        _warm_up(self.graph, self.score)
+        job = self._job(0)
+        prepared = blocks.load_paths(job)
+        each = _seconds_each(blocks.paths_block, [(job, block, PILOT_PAIRS) for block in range(threads)], threads)
+        pilot = paths.run_block(prepared, self.score.seed, 0, PILOT_PAIRS)
+        share = (float(pilot.counts.max(initial=0)) + 1) / PILOT_PAIRS
+
+        def half_width(samples: int) -> float:
+            return self.z * math.sqrt(share * max(1 - share, 0.0) / samples) * n / (n - 2)
+
+        return self._sampled("paths", "pairs", 0, each / PILOT_PAIRS, half_width, needed, threads, 0)
+
+    def _sampled(
+        self,
+        method: str,
+        unit: str,
+        population: int,
+        each: float,
+        half_width: Callable[[int], float],
+        needed: int,
+        threads: int,
+        lanes: int,
+    ) -> Plan:
+        """How many draws to expect, which rule will end them, and what they promise."""
+        score = self.score
+        fits = max(1, int(self.budget / each))
+        wishes = [(fits, "minutes")]
+        if population:
+            wishes.append((population, "samples"))
+        if score.samples:
+            wishes.append((score.samples, "samples"))
+        if score.half_width:
+            wishes.append((_fewest(half_width, score.half_width, fits), "half_width"))
+        samples, limit = min(wishes, key=lambda wish: wish[0])
+        promised = half_width(samples)
+        why = {
+            "samples": "as asked" if score.samples else "every source there is",
+            "half_width": "enough for the half_width asked for",
+            "minutes": f"as many as fit {score.minutes:g} min",
+        }[limit]
+        sooner = f", sooner if the first {score.top} are settled" if score.top else ""
+        said = (
+            f"{samples:,} {unit} ({why}{sooner}) take about {spell_seconds(samples * each)} and promise "
+            f"±{promised:.2g} or less for every party"
+        )
+        return self._plan(method, samples, promised, limit, said, samples * each, needed, threads, lanes)
+
+    def _fit(self, method: str, each: Callable[[int], int], base: int = 0) -> tuple[int, int, int]:
+        """Lanes, threads and bytes within the memory: fewer threads first, then fewer lanes."""
+        graph = self.graph
+        arc = 12 if self.weighted else 4
+        # the graph itself and its reverse, a renumbered copy, and what building that copy takes
+        base = (
+            base or 2 * (2 if graph.directed else 1) * (arc * graph.arcs + 8 * graph.n) + 16 * graph.arcs + 80 * graph.n
+        )
+        choices: Sequence[int] = (1,) if self.weighted else (64, 32, 16, 8)
+        for lanes in choices:
+            one = max(each(lanes), 1)
+            threads = min(self.threads, (self.memory - base) // one)
+            if threads >= 1:
+                return lanes, int(threads), int(base + threads * one)
+        least = (base + each(choices[-1])) / 2**30
+        raise SettingsError(
+            f"{method} needs {least:.2f} GiB for {graph.n:,} parties and {graph.ties:,} ties, more than run.memory = "
+            f"{self.memory / 2**30:.2f} GiB; raise run.memory or shorten window.days"
+        )
+
+    def _job(self, lanes: int) -> blocks.Job:
+        return blocks.job_for(self.graph, lanes, self.score)
+
+    def _plan(
+        self,
+        method: str,
+        samples: int,
+        half_width: float,
+        limit: str,
+        reason: str,
+        seconds: float,
+        needed: int,
+        threads: int,
+        lanes: int,
+    ) -> Plan:
+        return Plan(
+            engine="numba",
+            method=method,
+            samples=samples,
+            half_width=half_width,
+            limit=limit,
+            reason=reason,
+            predicted_seconds=seconds,
+            predicted_bytes=needed,
+            threads=threads,
+            blocks=0,
+            lanes=lanes,
+        )
+
+
+def _seconds_each(function: Callable[[Task], object], tasks: Sequence[Task], threads: int) -> float:
+    """Measured wall seconds per task, with as many at once as in the run."""
+    start = time.perf_counter()
+    for _ in Here(threads).stream(function, tasks):
+        pass
+    return (time.perf_counter() - start) / len(tasks)
+
+
+def _fewest(half_width: Callable[[int], float], wanted: float, most: int) -> int:
+    """The fewest samples that promise the width, by bisection; `most` when even those do not."""
+    low, high = 1, most
+    while low < high:
+        middle = (low + high) // 2
+        if half_width(middle) <= wanted:
+            high = middle
+        else:
+            low = middle + 1
+    return high
+
+
+def _warm_up(graph: Graph, score: Score) -> None:
+    """Have the kernels compiled, or loaded, before the clock runs: on a path of four parties."""
+    tail, head = np.arange(3), np.arange(1, 4)
+    strength = np.ones(3) if graph.out_lengths is not None else None
+    parties = pl.Series("party", list("abcd"))
+    small = Graph.from_arcs(parties, tail, head, strength, directed=graph.directed)
+    job = blocks.job_for(small, 1 if strength is not None else 64, score)
+    blocks.exact_block((job, 0))
+    blocks.pivots_block((job, 0, 4))
+    if strength is None:
+        blocks.paths_block((job, 0, 16))

@@ -1,0 +1,119 @@
+"""From a plan to an estimate: prepares the graph, has blocks of work done behind a door, adds them up in order.
+
+A block depends on nothing but its task, so any number of threads, processes or machines gives the same bits.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator
+from typing import TypeVar
+
+import numpy as np
+
+from isthmus.betweenness.engine_numba import blocks, exact, paths, pivots
+from isthmus.betweenness.engine_numba.intervals import Bounds
+from isthmus.betweenness.engine_numba.sequences import PivotEvidence
+from isthmus.betweenness.engine_numba.stopping import Rules, Verdict, every_block, planned_looks, watch
+from isthmus.betweenness.estimate import Estimate
+from isthmus.betweenness.plan import Plan
+from isthmus.cluster import Door, Here
+from isthmus.graph import Graph
+from isthmus.settings import Score
+
+__all__ = ["run"]
+
+Progress = Callable[[float], None]
+Partial = TypeVar("Partial")
+
+
+def run(graph: Graph, plan: Plan, score: Score, threads: int, progress: Progress, door: Door | None = None) -> Estimate:
+    """Measure as planned, behind `door` or on threads here. `progress` hears the share done, 0..1."""
+    door = door or Here(min(plan.threads, threads) if threads else plan.threads)
+    progress(0.0)
+    job = blocks.job_for(graph, plan.lanes, score)
+    try:
+        if graph.n < 3 or graph.arcs == 0:
+            return _estimate(graph, plan, score, _nothing(graph.n), graph.n, "exact")
+        if plan.method == "exact":
+            return _exact(graph, plan, score, job, door, progress)
+        method = _pivots if plan.method == "pivots" else _paths
+        verdict = method(job, plan, score, door, progress)
+        reason = "exact" if verdict.stopped_because == "settled" else verdict.stopped_because
+        return _estimate(graph, plan, score, verdict.bounds, verdict.samples, reason)
+    finally:
+        blocks.forget()
+        progress(1.0)
+
+
+def _exact(graph: Graph, plan: Plan, score: Score, job: blocks.Job, door: Door, progress: Progress) -> Estimate:
+    reduced, work = blocks.load_exact(job)
+    parts = door.stream(blocks.exact_block, ((job, index) for index in range(work.blocks)))
+    pairs = exact.merge(reduced, work, parts, lambda done: progress(done / work.blocks))
+    value = np.clip(pairs / ((graph.n - 1) * (graph.n - 2)), 0.0, 1.0)
+    return _estimate(graph, plan, score, Bounds(value, value, value, np.zeros(graph.n)), graph.n, "exact")
+
+
+def _pivots(job: blocks.Job, plan: Plan, score: Score, door: Door, progress: Progress) -> Verdict:
+    sources = blocks.load_pivots(job)
+    n = sources.arrays.n
+    most = min(score.samples or n, n)
+    rules = _rules(plan, score, most)
+    alone = bool(score.samples) and not (score.half_width or score.top)
+    evidence = PivotEvidence(n, sources.scale, 1 - score.confidence, horizon=most if alone else 0)
+    tasks = ((job, block, size) for block, size in paths.plan_blocks(0, most, pivots.BLOCK))
+    partials = door.stream(blocks.pivots_block, tasks)
+
+    def add(part: pivots.PivotPartial) -> None:
+        evidence.add(part.draws, part.moments[:, :9], part.sums, part.moments[:, 9])
+
+    return watch(evidence, _each(partials, add), every_block(most, pivots.BLOCK), rules, _share(progress, most))
+
+
+def _paths(job: blocks.Job, plan: Plan, score: Score, door: Door, progress: Progress) -> Verdict:
+    prepared = blocks.load_paths(job)
+    rules = _rules(plan, score, score.samples)
+    tally = paths.Tally.empty(prepared.n)
+    evidence = paths.PathEvidence(prepared, tally, 1 - score.confidence)
+    tasks = ((job, block, size) for block, size in paths.plan_blocks(0, score.samples))
+    partials = door.stream(blocks.paths_block, tasks)
+    looks = planned_looks(rules, paths.BLOCK)
+    return watch(evidence, _each(partials, tally.add), looks, rules, _share(progress, plan.samples))
+
+
+def _rules(plan: Plan, score: Score, samples: int) -> Rules:
+    return Rules(samples, score.half_width, score.top, score.minutes, repeat=plan.reached)
+
+
+def _each(partials: Iterator[Partial], add: Callable[[Partial], None]) -> Iterator[None]:
+    """Take the partial results one at a time; closing this closes them."""
+    try:
+        for partial in partials:
+            add(partial)
+            yield
+    finally:
+        partials.close()  # type: ignore[attr-defined]
+
+
+def _share(progress: Progress, expected: int) -> Callable[[int, Bounds | None], None]:
+    return lambda taken, _: progress(taken / max(expected, taken))
+
+
+def _nothing(n: int) -> Bounds:
+    return Bounds(*np.zeros((4, n)))
+
+
+def _estimate(graph: Graph, plan: Plan, score: Score, bounds: Bounds, samples: int, reason: str) -> Estimate:
+    return Estimate(
+        parties=graph.parties,
+        directed=graph.directed,
+        betweenness=bounds.estimate,
+        lower=bounds.lower,
+        upper=bounds.upper,
+        std_error=bounds.std_error,
+        method=plan.method,
+        engine="numba",
+        samples=samples,
+        seed=score.seed,
+        confidence=1.0 if plan.method == "exact" else score.confidence,
+        stopped_because=reason,
+    )

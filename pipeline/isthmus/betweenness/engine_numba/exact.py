@@ -1,0 +1,142 @@
+"""Exact betweenness: the plan, the blocks, and the driver that runs them on threads, adding in order."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterable
+from dataclasses import dataclass
+from typing import NamedTuple
+
+import numpy as np
+
+from isthmus.betweenness.engine_numba.kernels_moments import MOMENTS
+from isthmus.betweenness.engine_numba.reductions import Reduced
+from isthmus.betweenness.engine_numba.subgraphs import Floats
+from isthmus.graph.arrays import Arrays, Ids
+
+# Work of a block, in arcs and vertices touched per batch of lanes: about a quarter of a second. It depends on
+# nothing but the graph, so the blocks, and with them the bits of the result, are the same for any threads.
+BLOCK_WORK = 2_000_000
+MOST_LANES = 64
+
+
+@dataclass(frozen=True)
+class Plan:
+    """Which sources run together: sources int32[k], weights float64[k], `block_size` of them to a block."""
+
+    sources: Ids
+    weights: Floats
+    lanes: int
+    block_size: int
+    max_hops: int = 0
+
+    @property
+    def blocks(self) -> int:
+        return -(-self.sources.size // self.block_size)
+
+    def block(self, index: int) -> slice:
+        """The places in `sources` of one block."""
+        return slice(index * self.block_size, min((index + 1) * self.block_size, self.sources.size))
+
+
+class Partial(NamedTuple):
+    """Sums over one block's sources. score, reached: float64[r]; reach: float64[sources of the block]."""
+
+    score: Floats
+    reached: Floats
+    reach: Floats
+
+
+def make_plan(reduced: Reduced, *, lanes: int = MOST_LANES, max_hops: int = 0) -> Plan:
+    """Every vertex that can be a source, in the order of the numbering, cut in blocks of equal size."""
+    graph = reduced.arrays
+    sources = np.flatnonzero(np.diff(graph.out_ptr) > 0).astype(np.int32)
+    if graph.out_lengths is not None:
+        lanes = 1
+    return Plan(sources, reduced.source_weight[sources], lanes, block_size(graph, lanes), max_hops)
+
+
+def block_size(graph: Arrays, lanes: int) -> int:
+    """Sources per block, a multiple of the lanes; with lengths, ten for every batch of lanes."""
+    batches = BLOCK_WORK // (graph.arcs + 4 * graph.n + 1)
+    return max(1, 10 * batches) if graph.out_lengths is not None else lanes * max(1, batches)
+
+
+def lanes_within(n: int, m: int, limit: float) -> int:
+    """Most lanes whose memory per thread stays within `limit` bytes; 0 when not even 8 do."""
+    return next((lanes for lanes in (64, 32, 16, 8) if bytes_per_thread(n, m, lanes) <= limit), 0)
+
+
+def bytes_per_thread(n: int, m: int, lanes: int, weighted: bool = False) -> int:
+    """Memory in bytes that one running block takes beside the graph, n vertices and m arcs as reduced.
+
+    Rows of lanes 8 n lanes; three masks 24 n; level starts 8 n; partial sums, of which one may wait to be
+    added, 2 x 16 n; records of (level, vertex) 12 bytes each, two per vertex to start with, doubled when a
+    batch needs more (up to one per vertex and lane; below twice the vertices on social graphs, three times on
+    sparser ones), so 48 n.
+    With lengths: distances, path counts, dependencies 24 n, predecessors and order 8 n, partial sums 32 n;
+    queue entries 8 m, one per arc at worst. The ring of buckets adds up to 17 MB when lengths lie far apart;
+    the heap, where
+    it takes over, 4 m.
+    """
+    if weighted:
+        return 64 * n + 8 * m
+    return (8 * lanes + 112) * n
+
+
+def run_block(reduced: Reduced, plan: Plan, index: int) -> Partial:
+    """One block; needs nothing but its arguments, so it may run in any process."""
+    graph, place = reduced.arrays, plan.block(index)
+    score = np.zeros(graph.n)
+    reached = np.zeros(graph.n if reduced.needs_reach else 0)
+    reach = sweep(
+        graph, plan.sources[place], plan.weights[place], score, reached, np.zeros(0), np.zeros((0, MOMENTS)),
+        copies=reduced.copies, targets=reduced.target_weight, lanes=plan.lanes, max_hops=plan.max_hops,
+    )  # fmt: skip
+    return Partial(score, reached, reach)
+
+
+def sweep(
+    graph: Arrays, sources: Ids, weights: Floats, score: Floats, reached: Floats, unit: Floats, moments: Floats, *,
+    copies: Floats, targets: Floats, lanes: int, max_hops: int,
+) -> Floats:  # fmt: skip
+    """The kernel that fits the graph, imported on first use; arguments as in kernels_lanes.lanes_sweep."""
+    if graph.out_lengths is not None:
+        from isthmus.betweenness.engine_numba.kernels_weighted import weighted_sweep
+
+        return weighted_sweep(
+            graph.out_ptr, graph.out_adj, graph.out_lengths, graph.in_ptr, graph.in_adj, graph.in_lengths,
+            targets, sources, weights, score, reached, unit, moments,
+        )  # fmt: skip
+    from isthmus.betweenness.engine_numba.kernels_lanes import lanes_sweep
+
+    return lanes_sweep(
+        graph.out_ptr, graph.out_adj, graph.in_ptr, graph.in_adj, copies, targets,
+        sources, weights, lanes, max_hops, score, reached, unit, moments,
+    )  # fmt: skip
+
+
+def check_lengths(graph: Arrays, max_hops: int) -> None:
+    """Raise ValueError where the weighted sweep could not be exact or is not defined."""
+    if graph.out_lengths is None or graph.arcs == 0:
+        return
+    if max_hops:
+        raise ValueError(f"max_hops={max_hops} counts arcs and cannot be combined with lengths; set it to 0")
+    shortest, longest = int(graph.out_lengths.min()), int(graph.out_lengths.max())
+    if shortest < 1:
+        raise ValueError(f"lengths must be positive integers; the shortest is {shortest}")
+    if longest * (graph.n - 1) >= 2**62:
+        raise ValueError(f"the longest length, {longest}, is too long for {graph.n} vertices: scale the lengths down")
+
+
+def merge(reduced: Reduced, plan: Plan, parts: Iterable[Partial], done: Callable[[int], None] | None = None) -> Floats:
+    """Betweenness float64[n] in ordered pairs, from every block's partial sums in block order."""
+    r = reduced.arrays.n
+    score, reached, reach = np.zeros(r), np.zeros(r), np.zeros(r)
+    for index, part in enumerate(parts):
+        score += part.score
+        if reduced.needs_reach:
+            reached += part.reached
+            reach[plan.sources[plan.block(index)]] = part.reach
+        if done:
+            done(index + 1)
+    return reduced.expand(score, reach, reached)

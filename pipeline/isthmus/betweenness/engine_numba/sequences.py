@@ -1,0 +1,217 @@
+"""Bounds for means of values in [0, 1] drawn without replacement, valid at all times: for sampled sources.
+
+For each party a bet is made against every candidate mean m. While x_1, x_2, ... come in, the bettor against
+"m is too low" holds a capital that is multiplied by (1 + theta x) / (1 + theta m'), the one against "m is too
+high" by (1 - theta x) / (1 - theta m'), where m' = (N m - S) / (N - k) is what m makes the mean of the N - k
+values not drawn yet, S the sum of the k drawn. Under the true mean neither gains on average, so the chance
+that it ever reaches 2 / alpha is at most alpha / 2 (Ville 1939); the m that it did reach it against are
+excluded. Waudby-Smith, Ramdas (2023), Estimating means of bounded random variables by betting, sec. 5; theirs
+is (1 + lambda (x - m)), which is the same with theta = lambda / (1 - lambda m), but in this form one theta
+serves every m.
+
+What makes it cheap:
+
+- theta is fixed for a whole block of draws from what earlier blocks showed. Within a block the draws are
+  taken as if with replacement, which by Hoeffding (1963, theorem 4) errs on the safe side, for the product is
+  a convex function of a sum; so the order within a block does not matter, and a block is one addition;
+- log(1 + theta x) is concave in x, so it is bounded below by linear interpolation between the points of
+  `GRID`: each x is spread over its two neighbouring points, and a block is known by the weight at each point
+  (`spread`). This costs about one per cent of width, and keeps what sums of squares lose: how large the rare
+  large values are;
+- log(1 + theta m') is bounded above by its tangent where the bound is expected, so that the excluded m are
+  found in closed form from three numbers a side.
+
+theta is best for one number of draws, the horizon. Without one, several horizons, each twice the one before,
+share alpha.
+"""
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from isthmus.betweenness.engine_numba.intervals import Bounds, Floats
+
+GRID = 2.0 ** np.arange(-8, 1)  # and 0, whose weight is not needed
+RISES = np.geomspace(0.02, 400, 24)  # theta against too low a mean
+FALLS = 1 / (1 + 1 / np.geomspace(0.02, 60, 16))  # theta against too high a mean, < 1
+STEEPEST = 0.98
+FIRST_HORIZON = 256
+EARLY, LATE = 16, 4  # a horizon h takes part from h / EARLY to LATE * h draws
+REVIEW = 1.1  # bets are reviewed when the draws have grown by this factor
+
+
+def spread(values: Floats) -> Floats:
+    """Weights of values[..., draws] at GRID, summed over the draws: [..., 9]. The plain form of the kernel's.
+
+    A value x between neighbours a < b adds (b - x) / (b - a) at a and (x - a) / (b - a) at b; weights at 0
+    are dropped.
+    """
+    points = np.concatenate([[0.0], GRID])
+    above = np.clip(np.searchsorted(points, values, side="right"), 1, GRID.size)
+    share = (values - points[above - 1]) / (points[above] - points[above - 1])
+    at = above[..., None] == np.arange(points.size)
+    before = (above - 1)[..., None] == np.arange(points.size)
+    weights: Floats = (share[..., None] * at + (1 - share)[..., None] * before).sum(-2)[..., 1:]
+    return weights
+
+
+class Bets:
+    """The capitals of one horizon, for all parties. ell = ln(2 / alpha) is the log capital that excludes."""
+
+    def __init__(self, parties: int, population: int, horizon: int, ell: float) -> None:
+        self.population, self.horizon, self.ell = population, horizon, ell
+        self.reviewed = 0
+        # log capital against m is gain - slope * m (too low) and gain + slope * m (too high).
+        self.gain_low, self.slope_low, self.gain_high, self.slope_high = np.zeros((4, parties))
+        self.rise, self.fall = np.zeros((2, parties), np.int8)
+        self.low, self.high = np.zeros(parties), np.ones(parties)
+
+    def review(self, draws: int, weights: Floats, sums: Floats) -> None:
+        """Choose each party's theta: the narrowest bound at the horizon if all went on as so far."""
+        if draws < REVIEW * self.reviewed:
+            return
+        self.reviewed = draws
+        # Without replacement, k of N tell as much as N k / (N - k) with replacement.
+        horizon = min(max(self.horizon, draws + 1), self.population - 1)
+        cost = self.ell * (self.population - horizon) / (self.population * horizon)
+        log_rise, log_fall = np.log1p(np.outer(GRID, RISES)), np.log1p(-np.outer(GRID, FALLS))
+        chunk = 1 << 16
+        for start in range(0, sums.size, chunk):
+            part = slice(start, start + chunk)
+            seen = weights[part] / (draws + 1)  # one more, a zero, in favour of caution
+            promised = np.expm1(seen @ log_rise - cost) / RISES
+            self.rise[part] = promised.argmax(1)
+            self.low[part] = np.clip(promised.max(1), 0, sums[part] / draws)
+            promised = -np.expm1(seen @ log_fall - cost) / FALLS
+            self.fall[part] = promised.argmin(1)
+            self.high[part] = np.clip(promised.min(1), sums[part] / draws, 1)
+
+    def settle(self, draws: int, sums: Floats, size: int, weights: Floats) -> None:
+        """Book a block of `size` draws; draws, sums: before it; weights: of the block."""
+        # Each draw says more the fewer are left: m' moves N / (N - k) times as fast as m.
+        pull = self.population / (self.population - draws)
+        passed = sums / (self.population - draws)
+        rises, falls = RISES * pull, np.minimum(FALLS * pull, STEEPEST)
+        theta = rises[self.rise]
+        expected = np.clip(pull * self.low - passed, 0, 1)
+        tilt = size * theta / (1 + theta * expected)
+        self.gain_low += _across(weights, np.log1p(np.outer(GRID, rises)), self.rise)
+        self.gain_low -= size * np.log1p(theta * expected) - tilt * (passed + expected)
+        self.slope_low += tilt * pull
+        theta = falls[self.fall]
+        expected = np.clip(pull * self.high - passed, 0, 1)
+        tilt = size * theta / (1 - theta * expected)
+        self.gain_high += _across(weights, np.log1p(-np.outer(GRID, falls)), self.fall)
+        self.gain_high -= size * np.log1p(-theta * expected) + tilt * (passed + expected)
+        self.slope_high += tilt * pull
+
+    def limits(self) -> tuple[Floats, Floats]:
+        with np.errstate(divide="ignore", invalid="ignore"):
+            low = (self.gain_low - self.ell) / self.slope_low
+            high = (self.ell - self.gain_high) / self.slope_high
+        return np.nan_to_num(low, nan=0.0, neginf=0.0), np.nan_to_num(high, nan=1.0, posinf=1.0)
+
+
+def _across(weights: Floats, table: Floats, choice: NDArray[np.int8]) -> Floats:
+    """sum over g of weights[v, g] * table[g, choice[v]], one grid point at a time to spare memory."""
+    total = np.zeros(choice.size)
+    for g in range(GRID.size):
+        total += weights[:, g] * table[g, choice]
+    return total
+
+
+@dataclass(frozen=True)
+class Scale:
+    """From means to Freeman's scale: betweenness = exact + factor * mean, never above ceiling.
+
+    factor: float64[n], N R / ((n - 1)(n - 2)) for N sources whose dependencies were divided by R; exact,
+    ceiling: float64[n]; settled: bool[n], nothing left to sample.
+    """
+
+    factor: Floats
+    exact: Floats
+    ceiling: Floats
+    settled: NDArray[np.bool_]
+
+
+class PivotEvidence:
+    """Statistics of sources drawn without replacement, block by block, that may be looked at after any block.
+
+    population: the N possible sources. horizon: the number of draws intended, if `samples` is the only rule,
+    else 0. Memory: 8 * (13 + 6 * bets) bytes a party; one set of bets with a horizon, else at most 7 at a
+    time.
+    """
+
+    def __init__(self, population: int, scale: Scale, delta: float, horizon: int = 0) -> None:
+        self.population, self.scale = population, scale
+        parties = scale.factor.size
+        if horizon:
+            horizons = [horizon]
+        else:
+            first = min(FIRST_HORIZON, population)
+            horizons = [first << i for i in range(max(1, int(np.log2(population / first)) + 1))]
+        alpha = delta / max(1, int(parties - scale.settled.sum()))
+        self._ell = float(np.log(2 * len(horizons) / alpha))
+        self._waiting, self._bets = horizons, list[Bets]()
+        self._early = not horizon
+        self.draws = 0
+        self.weights = np.zeros((parties, GRID.size))
+        self.sums, self.squares = np.zeros((2, parties))
+        self._low, self._high = np.zeros(parties), np.ones(parties)
+
+    @property
+    def taken(self) -> int:
+        return self.draws
+
+    def add(self, size: int, weights: Floats, sums: Floats, squares: Floats) -> None:
+        """Take the next block of `size` sources with values x in [0, 1].
+
+        weights: float64[n, 9], see `spread`; sums, squares: float64[n], of x and of x ** 2. The blocks must
+        be consecutive parts of one random order of all sources; the order within a block is free.
+        """
+        while self._waiting and (not self._early or self._waiting[0] <= EARLY * max(self.draws, 1)):
+            self._bets.append(Bets(self.sums.size, self.population, self._waiting.pop(0), self._ell))
+        if self._early:
+            for bets in [b for b in self._bets if self.draws > LATE * b.horizon]:
+                self._bets.remove(bets)
+        for bets in self._bets:
+            if self.draws > 0:
+                bets.review(self.draws, self.weights, self.sums)
+                bets.settle(self.draws, self.sums, size, weights)
+        self.weights += weights
+        self.sums += sums
+        self.squares += squares
+        self.draws += size
+        for bets in self._bets:
+            low, high = bets.limits()
+            np.maximum(self._low, low, out=self._low)
+            np.minimum(self._high, high, out=self._high)
+
+    def bounds(self, share: float = 1.0) -> Bounds:
+        """Intervals now. share: always 1, for a sequence pays once for all looks."""
+        if share != 1.0:
+            raise ValueError("a sequence is looked at at full delta")
+        k, population, scale = self.draws, self.population, self.scale
+        mean = self.sums / k
+        low = np.clip(np.maximum(self._low, self.sums / population), 0, mean)
+        high = np.clip(np.minimum(self._high, (self.sums + (population - k)) / population), mean, 1)
+        variance = np.maximum(self.squares - self.sums * mean, 0) / max(k - 1, 1)
+        factor = np.where(scale.settled, 0.0, scale.factor)
+        estimate = np.minimum(scale.exact + factor * mean, scale.ceiling)
+        return Bounds(
+            estimate,
+            np.minimum(scale.exact + factor * low, estimate),
+            np.maximum(np.minimum(scale.exact + factor * high, scale.ceiling), estimate),
+            factor * np.sqrt(variance * (1 - k / population) / k),
+        )
+
+
+def draw_order(population: int, seed: int) -> NDArray[np.int64]:
+    """A random order of the possible sources, from raw words, so that no release of numpy changes it.
+
+    Two equal words among n would keep their order: a chance of n ** 2 / 2 ** 65, not worth a second draw.
+    """
+    words = np.random.PCG64(np.random.SeedSequence(seed)).random_raw(population)
+    order: NDArray[np.int64] = np.argsort(words, kind="stable")
+    return order
