@@ -14,7 +14,7 @@ import pytest
 from isthmus.graph import Graph
 
 # Every test of a method runs for each engine named here.
-ENGINES = ["networkit"]
+ENGINES = ["networkit", "numba"]
 
 
 @pytest.fixture(params=ENGINES)

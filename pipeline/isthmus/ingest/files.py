@@ -172,11 +172,11 @@ def _partition_day(name: str) -> date | None:
         return None
 
 
-def open_parquet(path: str, name: str, dictionaries: Sequence[str] = ()) -> pq.ParquetFile:
+def open_parquet(path: str, name: str) -> pq.ParquetFile:
     """Open a log file. Raises DataRefused when it is not whole Parquet, StoreError when it cannot be read."""
     try:
         # Old writers store times as INT96; read as nanoseconds the years before 1678 and after 2262 would wrap round.
-        return pq.ParquetFile(path, coerce_int96_timestamp_unit="us", read_dictionary=list(dictionaries))
+        return pq.ParquetFile(path, coerce_int96_timestamp_unit="us")
     except pa.ArrowInvalid as error:
         raise damaged(name, error) from None
     except OSError as error:

@@ -2,24 +2,36 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
 import polars as pl
 import pyarrow as pa
 
-__all__ = ["Coded", "positions", "shared_book", "to_codes"]
+__all__ = ["code_columns", "shared_book"]
 
 
-class Coded:
-    """One key column: `codes` point into `values`, the distinct raw keys as text; both may hold nulls."""
+def code_columns(columns: dict[str, pa.ChunkedArray]) -> tuple[pl.Series, pl.DataFrame]:
+    """The book of usable keys, and for each column its codes in that book and whether the row had none.
 
-    def __init__(self, column: pa.ChunkedArray) -> None:
-        if not pa.types.is_dictionary(column.type):
-            column = column.dictionary_encode()
-        column = column.unify_dictionaries()
-        chunks = column.chunks
-        book = chunks[0].dictionary if chunks else pa.array([], pa.string())
-        indices = pa.chunked_array([chunk.indices.cast(pa.int64()) for chunk in chunks], pa.int64())
-        self.values: pl.Series = pl.Series("key", pl.from_arrow(book)).cast(pl.String)
-        self.codes: pl.Series = pl.Series("code", pl.from_arrow(indices))
+    Returns (book, frame). The frame has, per column name, `<name>` (position in the book, null when unusable) and
+    `<name>_null` (the log has no value there).
+    """
+    arrays = [_decoded(column) for column in columns.values()]
+    if len({array.type for array in arrays}) > 1:
+        arrays = [array.cast(pa.large_string()) for array in arrays]
+    chunks = [chunk for array in arrays for chunk in array.chunks]
+    raw, codes = _encoded(pa.chunked_array(chunks, arrays[0].type))
+    clean = normalise(raw.cast(pl.String))
+    book = clean.filter(clean.str.len_bytes() > 0).unique(maintain_order=True)
+    missing = codes.is_null()
+    if len(book) < len(clean):  # some are empty, or equal once normalised
+        codes = _positions(clean, book).gather(codes)
+    coded, start = {}, 0
+    for name, array in zip(columns, arrays, strict=True):
+        coded[name] = codes.slice(start, len(array)).alias(name)
+        coded[f"{name}_null"] = missing.slice(start, len(array))
+        start += len(array)
+    return book.alias("party"), pl.DataFrame(coded)
 
 
 def normalise(values: pl.Series) -> pl.Series:
@@ -27,27 +39,30 @@ def normalise(values: pl.Series) -> pl.Series:
     return values.str.strip_chars()
 
 
-def to_codes(columns: dict[str, Coded]) -> tuple[pl.Series, pl.DataFrame]:
-    """The sorted book of usable keys, and for each column its codes in that book and whether the row had none.
-
-    Returns (book, frame). The frame has, per column name, `<name>` (position in the book, null when unusable) and
-    `<name>_null` (the log has no value there).
-    """
-    clean = {name: normalise(column.values) for name, column in columns.items()}
-    book = shared_book([keys.filter(keys.str.len_bytes() > 0) for keys in clean.values()])
-    coded = {}
-    for name, column in columns.items():
-        coded[name] = positions(clean[name], book).gather(column.codes).alias(name)
-        coded[f"{name}_null"] = clean[name].is_null().gather(column.codes).fill_null(True)
-    return book, pl.DataFrame(coded)
+def shared_book(books: Sequence[pl.Series]) -> tuple[pl.Series, list[pl.Series]]:
+    """All keys of some books, each once, and for each book the positions of its keys there (UInt32)."""
+    book, codes = _encoded(pl.concat([book.alias("party") for book in books], rechunk=False).to_arrow())
+    starts = [0]
+    for each in books:
+        starts.append(starts[-1] + len(each))
+    return book.alias("party"), [codes.slice(at, len(each)) for at, each in zip(starts, books, strict=False)]
 
 
-def shared_book(books: list[pl.Series]) -> pl.Series:
-    """All keys of some books, sorted by their bytes, each once."""
-    return pl.concat([book.alias("party") for book in books]).drop_nulls().unique().sort()
+def _encoded(column: pa.ChunkedArray | pa.Array) -> tuple[pl.Series, pl.Series]:
+    """Distinct values in the order of their first appearance, and each row's position among them; nulls stay null."""
+    if isinstance(column, pa.Array):
+        column = pa.chunked_array([column])
+    coded = column.dictionary_encode().unify_dictionaries()
+    indices = pa.chunked_array([chunk.indices for chunk in coded.chunks], pa.int32())
+    values = coded.chunk(0).dictionary if coded.num_chunks else pa.array([], column.type)
+    return pl.Series("key", pl.from_arrow(values)), pl.Series("code", pl.from_arrow(indices)).cast(pl.UInt32)
 
 
-def positions(keys: pl.Series, book: pl.Series) -> pl.Series:
+def _decoded(column: pa.ChunkedArray) -> pa.ChunkedArray:
+    return column.cast(column.type.value_type) if pa.types.is_dictionary(column.type) else column
+
+
+def _positions(keys: pl.Series, book: pl.Series) -> pl.Series:
     """Position of each key in the book (UInt32), null when it is not there."""
     index = pl.DataFrame({"key": book, "code": pl.int_range(len(book), dtype=pl.UInt32, eager=True)})
     found = keys.alias("key").to_frame().join(index, on="key", how="left", maintain_order="left")

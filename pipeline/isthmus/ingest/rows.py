@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from datetime import date, timedelta
 from pathlib import Path
 
@@ -12,10 +13,10 @@ import pyarrow as pa
 
 from isthmus.ingest.columns import DAY, PER_SECOND
 from isthmus.ingest.files import Part, damaged, open_parquet
-from isthmus.ingest.keys import Coded, to_codes
-from isthmus.ingest.ties import AMOUNT
+from isthmus.ingest.keys import code_columns
+from isthmus.ingest.ties import AMOUNT, ties_of_rows
 
-__all__ = ["AMOUNT", "EPOCH", "PartResult", "PartTask", "day_number", "read_part"]
+__all__ = ["PartResult", "PartTask", "add_up_rows", "count_rows", "day_number", "day_of", "judge_part", "read_part"]
 
 USED, REFUSED, FILTERED, DUPLICATE = "used", "refused", "filtered", "duplicate"
 SELF = "self-contact"
@@ -29,12 +30,11 @@ LARGEST_AMOUNT = 1e18
 
 @dataclass(frozen=True)
 class PartTask:
-    """Read one part into `folder`. `columns`: our name -> theirs. `drop`: a file with rows that are duplicates."""
+    """Read one part into `folder`. `columns`: our name -> theirs."""
 
     part: Part
     folder: str
     columns: Mapping[str, str]
-    drop: str = ""
 
 
 @dataclass(frozen=True)
@@ -42,7 +42,7 @@ class PartResult:
     """`counts`: (day since 1970 or None, outcome, reason) -> rows. `days`: those with a ties file in the folder."""
 
     folder: str
-    counts: dict[tuple[int | None, str, str], int] = field(default_factory=dict)
+    counts: dict[tuple[int | None, str, str], int]
     days: tuple[int, ...] = ()
 
 
@@ -57,33 +57,49 @@ def day_of(number: int) -> date:
 def read_part(task: PartTask) -> PartResult:
     """Read, judge and add up one part.
 
-    Writes into the task's folder `refused.arrow` (row, day, reason), `ids.arrow` (id hashes, row, day) where the log
-    has ids, `parties.arrow`, and per day `ties-<day>.arrow` with codes into it (see ties.py).
+    Writes into the task's folder `refused.arrow` (row, day, reason), `parties.arrow`, and per day `ties-<day>.arrow`
+    with codes into it (see ties.py). Where the log has ids, the rows are not added up yet, because other parts may
+    hold the same ones: they lie in `rows.arrow` until `add_up_rows`.
     """
     book, rows = judge_part(task)
-    if task.drop:
-        again = pl.read_ipc(task.drop)["row"].implode()
-        rows = rows.with_columns(
-            outcome=pl.when(pl.col("row").is_in(again)).then(pl.lit(DUPLICATE)).otherwise("outcome")
-        )
     folder = Path(task.folder)
     folder.mkdir(parents=True, exist_ok=True)
     rows.filter(outcome=REFUSED).select("row", "day", "reason").write_ipc(folder / "refused.arrow")
-    used = rows.filter(outcome=USED)
-    if "id" in task.columns:
-        _hashed(used).write_ipc(folder / "ids.arrow")
-    ties = used.group_by("day", "sender", "receiver").agg(
-        pl.len().cast(pl.Int64).alias("contacts"),
-        pl.col("amount").sum(),
-        pl.lit(1, pl.Int64).alias("days"),
-        pl.col("time").min().alias("first_seen"),
-        pl.col("time").max().alias("last_seen"),
-    )
     book.to_frame().write_ipc(folder / "parties.arrow")
-    days = ties.partition_by("day", as_dict=True, include_key=False)
-    for (day,), of_day in days.items():
-        of_day.write_ipc(folder / f"ties-{day}.arrow", compression="lz4")
-    return PartResult(task.folder, count_rows(rows), tuple(sorted(day for (day,) in days)))
+    used = rows.filter(outcome=USED)
+    counts = count_rows(rows)
+    if "id" in task.columns:
+        used.select("day", "sender", "receiver", "amount", "time", *_hashes()).write_ipc(folder / "rows.arrow")
+        return PartResult(task.folder, counts)
+    return PartResult(task.folder, counts, _write_ties(used, folder))
+
+
+def add_up_rows(task: tuple[PartResult, str]) -> PartResult:
+    """Add up the rows that `read_part` left. `task`: its result, and a file with the positions of duplicates."""
+    result, marks = task
+    folder = Path(result.folder)
+    rows = pl.read_ipc(folder / "rows.arrow")
+    counts = Counter(result.counts)
+    if marks:
+        duplicate = pl.int_range(len(rows), eager=True).is_in(pl.read_ipc(marks)["at"].implode())
+        for day, number in rows.filter(duplicate)["day"].value_counts().iter_rows():
+            counts[day, USED, ""] -= number
+            counts[day, DUPLICATE, ""] += number
+        rows = rows.filter(~duplicate)
+    return PartResult(result.folder, dict(counts), _write_ties(rows, folder))
+
+
+def _write_ties(rows: pl.DataFrame, folder: Path) -> tuple[int, ...]:
+    days = ties_of_rows(rows).partition_by("day", as_dict=True, include_key=False)
+    for (day,), ties in days.items():
+        ties.write_ipc(folder / f"ties-{day}.arrow", compression="lz4")
+    return tuple(sorted(day for (day,) in days))
+
+
+def _hashes() -> list[pl.Expr]:
+    """128 bits for each id, so that the whole window's ids fit in memory; both null where a row has no id."""
+    ids = pl.col("id").cast(pl.String)
+    return [pl.when(ids.is_not_null()).then(ids.hash(seed=seed)).alias(name) for name, seed in (("a", 1), ("b", 2))]
 
 
 def judge_part(task: PartTask) -> tuple[pl.Series, pl.DataFrame]:
@@ -102,13 +118,13 @@ def _load(task: PartTask) -> tuple[pl.Series, pl.DataFrame]:
     """The book of keys, and the part's rows under our names; row = position in the file."""
     part = task.part
     wanted = list(dict.fromkeys(task.columns.values()))
-    with open_parquet(part.path, part.name, dictionaries=[task.columns[side] for side in SIDES]) as parquet:
+    with open_parquet(part.path, part.name) as parquet:
         try:
             table = parquet.read_row_groups(part.groups, columns=wanted)
         except (OSError, pa.ArrowException) as error:
             raise damaged(part.name, error) from None
     arrays = {ours: table.column(theirs) for ours, theirs in task.columns.items()}
-    book, frame = to_codes({side: Coded(arrays[side]) for side in SIDES})
+    book, frame = code_columns({side: arrays[side] for side in SIDES})
     rest = [pl.Series(ours, _plain(array)) for ours, array in arrays.items() if ours not in SIDES]
     return book, frame.with_columns(*rest).with_columns(
         *_moment(pl.col("time"), _per_day(arrays["time"].type)),
@@ -181,11 +197,3 @@ def _judge(frame: pl.DataFrame, has_amount: bool) -> pl.DataFrame:
     )
     exact = pl.when(outcome=USED).then("amount").cast(AMOUNT) if has_amount else pl.lit(None, AMOUNT)
     return judged.with_columns(exact.alias("amount"))
-
-
-def _hashed(used: pl.DataFrame) -> pl.DataFrame:
-    """128 bits for each id, so that the whole window's ids fit in memory; rows without an id are never duplicates."""
-    ids = pl.col("id").cast(pl.String)
-    return used.filter(pl.col("id").is_not_null()).select(
-        ids.hash(seed=1).alias("a"), ids.hash(seed=2).alias("b"), "row", "day"
-    )

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections import Counter
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from datetime import date
 from pathlib import Path
 
@@ -20,13 +20,14 @@ from isthmus.ingest.rows import (
     USED,
     PartResult,
     PartTask,
+    add_up_rows,
     count_rows,
     day_number,
     day_of,
     judge_part,
     read_part,
 )
-from isthmus.ingest.ties import DaySource, Merge, add_up, add_up_to, as_frame
+from isthmus.ingest.ties import DaySource, Merge, add_up, merge_day
 from isthmus.settings import Log
 from isthmus.store import fresh
 from isthmus.watch import Watch
@@ -84,16 +85,16 @@ def read_window(
         tasks = [PartTask(part, str(scratch / f"{at:06d}"), columns) for at, part in enumerate(found.parts)]
         results = door.run(read_part, tasks, tick)
         if log.columns.id:
-            results = _without_duplicates(tasks, results, window, scratch, door)
+            marks = _mark_duplicates(results, window)
+            results = door.run(add_up_rows, list(zip(results, marks, strict=True)))
     outcomes = _count(results, window)
     if not outcomes.get(USED):
         raise DataRefused(_nothing_used(outcomes, first_day, last_day))
     with watch.stage("combine") as tick:
         days = fresh(work / "days")
         merges = [_day(day, results, days) for day in window if any(day in result.days for result in results)]
-        door.run(add_up_to, merges, tick)
-        whole = [DaySource(f"{merge.target}/ties.arrow", f"{merge.target}/parties.arrow") for merge in merges]
-        ties = as_frame(*add_up(whole), with_amounts=bool(log.columns.amount))
+        door.run(merge_day, merges, tick)
+        ties = add_up([merge.merged for merge in merges], with_amounts=bool(log.columns.amount))
     present = {Path(merge.target).name for merge in merges}
     missing = tuple(day_of(day) for day in window if str(day_of(day)) not in present)
     refused = _refused(found, results, window)
@@ -105,27 +106,26 @@ def _mapped(log: Log) -> dict[str, str]:
     return {ours: theirs for ours, theirs in log.columns.model_dump().items() if theirs}
 
 
-def _without_duplicates(
-    tasks: Sequence[PartTask], results: list[PartResult], window: range, scratch: Path, door: Door
-) -> list[PartResult]:
-    """Of the window's rows with one id the first counts (by file name, then row); parts that lose rows are redone."""
-    ids = pl.concat(
-        pl.scan_ipc(f"{result.folder}/ids.arrow").with_columns(part=pl.lit(at, pl.Int32))
-        for at, result in enumerate(results)
-    ).filter(pl.col("day").is_between(window.start, window.stop - 1))
-    repeated = ids.group_by("a", "b").len().filter(pl.col("len") > 1).select("a", "b").collect(engine="streaming")
+def _mark_duplicates(results: Sequence[PartResult], window: range) -> list[str]:
+    """Of the window's rows with one id the first counts (by file name, then row).
+
+    For each part a file with the positions of the others in its rows.arrow, or "" where there are none.
+    """
+    in_window = pl.col("day").is_between(window.start, window.stop - 1)
+    rows = [pl.scan_ipc(f"{result.folder}/rows.arrow").with_row_index("at") for result in results]
+    # first by one half of the hash: sorting plain numbers is the cheapest way to find the few that repeat
+    half = pl.concat([part.filter(in_window).select("a") for part in rows]).collect()["a"].drop_nulls().sort()
+    repeated = half.filter(half == half.shift(1)).unique()
     if repeated.is_empty():
-        return results
-    rows = ids.join(repeated.lazy(), on=["a", "b"], how="semi").collect(engine="streaming").sort("part", "row")
-    losers = rows.filter(~pl.struct("a", "b").is_first_distinct())
-    redo = []
-    for (at,), rows_of_part in losers.partition_by("part", as_dict=True).items():
-        drop = scratch / f"drop-{at:06d}.arrow"
-        rows_of_part.select("row").write_ipc(drop)
-        redo.append((at, replace(tasks[at], folder=f"{tasks[at].folder}-again", drop=str(drop))))
-    for (at, _), again in zip(redo, door.run(read_part, [task for _, task in redo]), strict=True):
-        results[at] = again
-    return results
+        return [""] * len(results)
+    suspects = [part.filter(in_window, pl.col("a").is_in(repeated.implode())).select("at", "a", "b") for part in rows]
+    found = pl.concat([part.with_columns(part=pl.lit(at)) for at, part in enumerate(suspects)]).collect()
+    later = found.filter(~pl.struct("a", "b").is_first_distinct())
+    marks = [""] * len(results)
+    for (part,), positions in later.partition_by("part", as_dict=True).items():
+        marks[part] = f"{results[part].folder}/duplicates.arrow"
+        positions.select("at").write_ipc(marks[part])
+    return marks
 
 
 def _count(results: Sequence[PartResult], window: range) -> dict[str, dict[str, int]]:

@@ -25,7 +25,7 @@ Task = TypeVar("Task")
 # Below this many arc visits in all, exact takes a fraction of a second, and a probe would cost more than it tells.
 TINY = 20_000_000
 NOMINAL_ARCS_PER_SECOND = {False: 1e8, True: 5e6}
-PILOT_PAIRS = 1 << 12
+PILOT_PAIRS = paths.BLOCK
 # Half-widths come out at this many z * standard error (benchmarks/README.md): pivots pay for unknown variances.
 PIVOTS_OVER_LIMIT = 1.5
 
@@ -59,10 +59,10 @@ class _Planner:
         if self.tiny:
             seconds = n * (n + arcs) / NOMINAL_ARCS_PER_SECOND[self.weighted]
         else:
-            _warm_up(self.graph, self.score)
+            _warm_up("exact", self.graph, self.score)
             job = self._job(lanes)
             _, work = blocks.load_exact(job)
-            picks = np.unique(np.linspace(0, work.blocks - 1, min(work.blocks, 2 * threads)).astype(int)).tolist()
+            picks = np.unique(np.linspace(0, work.blocks - 1, min(work.blocks, 4 * threads)).astype(int)).tolist()
             seconds = work.blocks * _seconds_each(blocks.exact_block, [(job, index) for index in picks], threads)
         said = f"exact takes about {spell_seconds(seconds)} on {threads} thread{'s' if threads > 1 else ''}"
         if seconds > self.budget:
@@ -77,7 +77,7 @@ class _Planner:
         )
         if self.trivial:
             return self._plan("pivots", n, 0.0, "exact", "there is nothing to sample", 0.0, needed, threads, lanes)
-        _warm_up(self.graph, self.score)
+        _warm_up("pivots", self.graph, self.score)
         job = self._job(lanes)
         sources = blocks.load_pivots(job)
         draws = min(pivots.BLOCK, n)
@@ -106,7 +106,7 @@ class _Planner:
         _, threads, needed = self._fit("paths", lambda _: paths.bytes_per_thread(n), base)
         if self.trivial:
             return self._plan("paths", 1, 0.0, "exact", "there is nothing to sample", 0.0, needed, threads, 0)
-        _warm_up(self.graph, self.score)
+        _warm_up("paths", self.graph, self.score)
         job = self._job(0)
         prepared = blocks.load_paths(job)
         each = _seconds_each(blocks.paths_block, [(job, block, PILOT_PAIRS) for block in range(threads)], threads)
@@ -223,14 +223,15 @@ def _fewest(half_width: Callable[[int], float], wanted: float, most: int) -> int
     return high
 
 
-def _warm_up(graph: Graph, score: Score) -> None:
-    """Have the kernels compiled, or loaded, before the clock runs: on a path of four parties."""
-    tail, head = np.arange(3), np.arange(1, 4)
+def _warm_up(method: str, graph: Graph, score: Score) -> None:
+    """Have a method's kernels compiled, or loaded, before the clock runs: on a path of four parties."""
     strength = np.ones(3) if graph.out_lengths is not None else None
     parties = pl.Series("party", list("abcd"))
-    small = Graph.from_arcs(parties, tail, head, strength, directed=graph.directed)
+    small = Graph.from_arcs(parties, np.arange(3), np.arange(1, 4), strength, directed=graph.directed)
     job = blocks.job_for(small, 1 if strength is not None else 64, score)
-    blocks.exact_block((job, 0))
-    blocks.pivots_block((job, 0, 4))
-    if strength is None:
+    if method == "exact":
+        blocks.exact_block((job, 0))
+    elif method == "pivots":
+        blocks.pivots_block((job, 0, 4))
+    else:
         blocks.paths_block((job, 0, 16))

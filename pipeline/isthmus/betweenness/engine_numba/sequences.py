@@ -67,58 +67,43 @@ class Bets:
         self.rise, self.fall = np.zeros((2, parties), np.int8)
         self.low, self.high = np.zeros(parties), np.ones(parties)
 
-    def review(self, draws: int, weights: Floats, sums: Floats) -> None:
-        """Choose each party's theta: the narrowest bound at the horizon if all went on as so far."""
+    def review(self, parties: NDArray[np.int64], draws: int, weights: Floats, sums: Floats) -> None:
+        """Choose each party's theta: the one that promises the narrowest bound at the horizon if all went on so."""
+        from isthmus.betweenness.engine_numba import kernels_bets
+
         if draws < REVIEW * self.reviewed:
             return
         self.reviewed = draws
         # Without replacement, k of N tell as much as N k / (N - k) with replacement.
         horizon = min(max(self.horizon, draws + 1), self.population - 1)
         cost = self.ell * (self.population - horizon) / (self.population * horizon)
-        log_rise, log_fall = np.log1p(np.outer(GRID, RISES)), np.log1p(-np.outer(GRID, FALLS))
-        chunk = 1 << 16
-        for start in range(0, sums.size, chunk):
-            part = slice(start, start + chunk)
-            seen = weights[part] / (draws + 1)  # one more, a zero, in favour of caution
-            promised = np.expm1(seen @ log_rise - cost) / RISES
-            self.rise[part] = promised.argmax(1)
-            self.low[part] = np.clip(promised.max(1), 0, sums[part] / draws)
-            promised = -np.expm1(seen @ log_fall - cost) / FALLS
-            self.fall[part] = promised.argmin(1)
-            self.high[part] = np.clip(promised.min(1), sums[part] / draws, 1)
+        kernels_bets.review(
+            parties, draws, weights, sums, np.log1p(np.outer(GRID, RISES)), np.log1p(-np.outer(GRID, FALLS)), RISES,
+            FALLS, cost, self.rise, self.fall, self.low, self.high,
+        )  # fmt: skip
 
-    def settle(self, draws: int, sums: Floats, size: int, weights: Floats) -> None:
-        """Book a block of `size` draws; draws, sums: before it; weights: of the block."""
+    def settle(
+        self,
+        parties: NDArray[np.int64],
+        draws: int,
+        sums: Floats,
+        size: int,
+        weights: Floats,
+        lowest: Floats,
+        highest: Floats,
+    ) -> None:
+        """Book a block of `size` draws; draws, sums: before it; weights: of the block. Tightens lowest and highest."""
+        from isthmus.betweenness.engine_numba import kernels_bets
+
         # Each draw says more the fewer are left: m' moves N / (N - k) times as fast as m.
-        pull = self.population / (self.population - draws)
-        passed = sums / (self.population - draws)
+        left = self.population - draws
+        pull = self.population / left
         rises, falls = RISES * pull, np.minimum(FALLS * pull, STEEPEST)
-        theta = rises[self.rise]
-        expected = np.clip(pull * self.low - passed, 0, 1)
-        tilt = size * theta / (1 + theta * expected)
-        self.gain_low += _across(weights, np.log1p(np.outer(GRID, rises)), self.rise)
-        self.gain_low -= size * np.log1p(theta * expected) - tilt * (passed + expected)
-        self.slope_low += tilt * pull
-        theta = falls[self.fall]
-        expected = np.clip(pull * self.high - passed, 0, 1)
-        tilt = size * theta / (1 - theta * expected)
-        self.gain_high += _across(weights, np.log1p(-np.outer(GRID, falls)), self.fall)
-        self.gain_high -= size * np.log1p(-theta * expected) + tilt * (passed + expected)
-        self.slope_high += tilt * pull
-
-    def limits(self) -> tuple[Floats, Floats]:
-        with np.errstate(divide="ignore", invalid="ignore"):
-            low = (self.gain_low - self.ell) / self.slope_low
-            high = (self.ell - self.gain_high) / self.slope_high
-        return np.nan_to_num(low, nan=0.0, neginf=0.0), np.nan_to_num(high, nan=1.0, posinf=1.0)
-
-
-def _across(weights: Floats, table: Floats, choice: NDArray[np.int8]) -> Floats:
-    """sum over g of weights[v, g] * table[g, choice[v]], one grid point at a time to spare memory."""
-    total = np.zeros(choice.size)
-    for g in range(GRID.size):
-        total += weights[:, g] * table[g, choice]
-    return total
+        kernels_bets.settle(
+            parties, float(size), weights, sums / left, pull, np.log1p(np.outer(GRID, rises)),
+            np.log1p(-np.outer(GRID, falls)), rises, falls, self.rise, self.fall, self.low, self.high,
+            self.gain_low, self.slope_low, self.gain_high, self.slope_high, self.ell, lowest, highest,
+        )  # fmt: skip
 
 
 @dataclass(frozen=True)
@@ -159,6 +144,7 @@ class PivotEvidence:
         self.weights = np.zeros((parties, GRID.size))
         self.sums, self.squares = np.zeros((2, parties))
         self._low, self._high = np.zeros(parties), np.ones(parties)
+        self._open = np.flatnonzero(~scale.settled)
 
     @property
     def taken(self) -> int:
@@ -177,16 +163,12 @@ class PivotEvidence:
                 self._bets.remove(bets)
         for bets in self._bets:
             if self.draws > 0:
-                bets.review(self.draws, self.weights, self.sums)
-                bets.settle(self.draws, self.sums, size, weights)
+                bets.review(self._open, self.draws, self.weights, self.sums)
+                bets.settle(self._open, self.draws, self.sums, size, weights, self._low, self._high)
         self.weights += weights
         self.sums += sums
         self.squares += squares
         self.draws += size
-        for bets in self._bets:
-            low, high = bets.limits()
-            np.maximum(self._low, low, out=self._low)
-            np.minimum(self._high, high, out=self._high)
 
     def bounds(self, share: float = 1.0) -> Bounds:
         """Intervals now. share: always 1, for a sequence pays once for all looks."""
