@@ -10,7 +10,8 @@ from decimal import Decimal
 
 EPOCH = datetime(1970, 1, 1)
 # the blanks of Unicode, which the log's writers may leave around a key
-BLANKS = "\t\n\x0b\x0c\r \x85\xa0\u1680\u2000\u2001\u2002\u2003\u2004\u2005\u2006\u2007\u2008\u2009\u200a\u2028\u2029\u202f\u205f\u3000"
+BLANKS = "\t\n\x0b\x0c\r \x85\xa0\u1680\u2000\u2001\u2002\u2003\u2004\u2005\u2006\u2007"
+BLANKS += "\u2008\u2009\u200a\u2028\u2029\u202f\u205f\u3000"
 
 Key = str | int | None
 

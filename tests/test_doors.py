@@ -27,9 +27,7 @@ def free_port() -> int:
 @contextlib.contextmanager
 def process(*arguments: str) -> Iterator[subprocess.Popen[bytes]]:
     """A Dask command that is surely gone afterwards."""
-    started = subprocess.Popen(
-        [sys.executable, "-m", *arguments], stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL
-    )
+    started = subprocess.Popen([sys.executable, "-m", *arguments], stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL)
     try:
         yield started
     finally:
@@ -48,9 +46,7 @@ def scheduler(tmp_path_factory: pytest.TempPathFactory) -> Iterator[str]:
     here = ("--host", "127.0.0.1", "--no-dashboard")
     home = tmp_path_factory.mktemp("dask")
     with contextlib.ExitStack() as stack:
-        stack.enter_context(
-            process("distributed.cli.dask_scheduler", "--port", address.rpartition(":")[2], *here)
-        )
+        stack.enter_context(process("distributed.cli.dask_scheduler", "--port", address.rpartition(":")[2], *here))
         for number in range(2):
             worker = ("distributed.cli.dask_worker", address, "--nthreads", "1", "--no-nanny", *here)
             stack.enter_context(process(*worker, "--local-directory", str(home / str(number))))

@@ -347,7 +347,9 @@ def test_row_groups_that_cannot_hold_the_window_are_not_read(tmp_path: Path, typ
     starts = [EDGES[0] - 2 * minute, EDGES[0] - minute, EDGES[0], EDGES[1] - 2 * minute, EDGES[1]]
     if pa.types.is_date32(type_):
         day = 24 * 60 * minute
-        pairs = [(s // day * day + step, s // day * day + step) for s, step in zip(starts, (0, day, day, 0, 0))]
+        pairs = [
+            (s // day * day + step, s // day * day + step) for s, step in zip(starts, (0, day, day, 0, 0), strict=False)
+        ]
         pairs[0] = (EDGES[0] - day, EDGES[0] - day)
         pairs[1] = (EDGES[0] - day, EDGES[0])
     else:
@@ -621,7 +623,7 @@ def test_amounts_of_any_type(tmp_path: Path, values: pa.Array, expected: float |
         assert total(reading) == expected
         assert reading.rows("used") == len(values)
     else:
-        assert [reason for _, _, reason in refused_of(reading)][0].startswith(f"amount is {expected}")
+        assert next(reason for _, _, reason in refused_of(reading)).startswith(f"amount is {expected}")
         assert reading.rows("used") == 1
 
 

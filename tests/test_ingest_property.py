@@ -123,11 +123,11 @@ def test_reading_agrees_with_the_oracle(log: tuple[list[File], dict]) -> None:
         root = Path(folder) / "log"
         root.mkdir()
         asked = write(root, found, how)
-        try:
-            reading = read_window(survey(asked, FIRST, LAST, door), asked, FIRST, LAST, root / "work", door, Watch())
-        except DataRefused as error:
-            assert not expected.ties, error
+        if not expected.ties:
+            with pytest.raises(DataRefused):
+                read_window(survey(asked, FIRST, LAST, door), asked, FIRST, LAST, root / "work", door, Watch())
             return
+        reading = read_window(survey(asked, FIRST, LAST, door), asked, FIRST, LAST, root / "work", door, Watch())
         refused = list(reading.refused.iter_rows())
         ties = list(reading.ties.iter_rows())
     assert {outcome: reading.rows(outcome) for outcome in reading.outcomes if reading.rows(outcome)} == dict(
@@ -179,8 +179,8 @@ def test_a_night_agrees_with_the_oracle(log: tuple[list[File], dict], directed: 
     assert dict(scores.select("party", "betweenness").iter_rows()) == pytest.approx(value, rel=1e-12, abs=1e-15)
     ranked = scores.sort("rank").select("betweenness", "party").rows()
     assert all((-a, party) < (-b, other) for (a, party), (b, other) in pairwise(ranked))
-    for side, column in ((0, "contacts_out"), (1, "contacts_in")):
+    for side, counts in ((0, "contacts_out"), (1, "contacts_in")):
         counted = dict.fromkeys(parties, 0)
         for pair, tie in expected.ties.items():
             counted[pair[side]] += tie.contacts
-        assert dict(scores.select("party", column).iter_rows()) == counted
+        assert dict(scores.select("party", counts).iter_rows()) == counted

@@ -112,7 +112,7 @@ def test_threads_and_the_cut_change_nothing(tmp_path: Path) -> None:
         frame.write_parquet(site.file(day), row_group_size=500)
     published = []
     for threads, most in ((1, 2_000_000), (2, 700)):
-        site.settings("[score]\nmethod = \"exact\"\n")
+        site.settings('[score]\nmethod = "exact"\n')
         site.config.write_text(site.config.read_text().replace("threads = 1", f"threads = {threads}"))
         environment = os.environ | {"POLARS_MAX_THREADS": str(threads)}
         program = PROGRAM.format(as_of=AS_OF)

@@ -161,6 +161,11 @@ class Settings(Section):
             raise ValueError(
                 f'score.max_hops = {self.score.max_hops} is not known to engine = "networkit"; set max_hops = 0'
             )
+        if self.score.max_hops and self.graph.distance != "hops":
+            raise ValueError(
+                f"score.max_hops = {self.score.max_hops} counts arcs, so it cannot be combined with graph.distance = "
+                f'"{self.graph.distance}"; set max_hops = 0 or distance = "hops"'
+            )
         if self.run.workers and self.run.scheduler:
             raise ValueError(
                 f'run.workers = {self.run.workers} and run.scheduler = "{self.run.scheduler}" exclude each other; '

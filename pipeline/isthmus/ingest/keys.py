@@ -21,11 +21,13 @@ def code_columns(columns: dict[str, pa.ChunkedArray]) -> tuple[pl.Series, pl.Dat
         arrays = [array.cast(pa.large_string()) for array in arrays]
     chunks = [chunk for array in arrays for chunk in array.chunks]
     raw, codes = _encoded(pa.chunked_array(chunks, arrays[0].type))
-    clean = normalise(raw.cast(pl.String))
-    book = clean.filter(clean.str.len_bytes() > 0).unique(maintain_order=True)
     missing = codes.is_null()
-    if len(book) < len(clean):  # some are empty, or equal once normalised
-        codes = _positions(clean, book).gather(codes)
+    book = raw.cast(pl.String)
+    clean = normalise(book)
+    usable = clean.str.len_bytes() > 0
+    if not (usable & (clean == book)).all():  # some are empty, or not yet as they count
+        book, places = _encoded(clean.set(~usable, None).to_arrow())
+        codes = places.gather(codes)
     coded, start = {}, 0
     for name, array in zip(columns, arrays, strict=True):
         coded[name] = codes.slice(start, len(array)).alias(name)
@@ -60,10 +62,3 @@ def _encoded(column: pa.ChunkedArray | pa.Array) -> tuple[pl.Series, pl.Series]:
 
 def _decoded(column: pa.ChunkedArray) -> pa.ChunkedArray:
     return column.cast(column.type.value_type) if pa.types.is_dictionary(column.type) else column
-
-
-def _positions(keys: pl.Series, book: pl.Series) -> pl.Series:
-    """Position of each key in the book (UInt32), null when it is not there."""
-    index = pl.DataFrame({"key": book, "code": pl.int_range(len(book), dtype=pl.UInt32, eager=True)})
-    found = keys.alias("key").to_frame().join(index, on="key", how="left", maintain_order="left")
-    return found["code"]

@@ -16,10 +16,20 @@ from isthmus.ingest.files import Part, damaged, open_parquet
 from isthmus.ingest.keys import code_columns
 from isthmus.ingest.ties import AMOUNT, ties_of_rows
 
-__all__ = ["PartResult", "PartTask", "add_up_rows", "count_rows", "day_number", "day_of", "judge_part", "read_part"]
+__all__ = [
+    "PartResult",
+    "PartTask",
+    "add_up_rows",
+    "count_rows",
+    "day_number",
+    "day_of",
+    "judge_part",
+    "read_part",
+    "used_rows",
+]
 
 USED, REFUSED, FILTERED, DUPLICATE = "used", "refused", "filtered", "duplicate"
-SELF = "self-contact"
+NOTHING, SELF = "", "self-contact"
 SIDES = ("sender", "receiver")
 
 EPOCH = date(1970, 1, 1)
@@ -64,10 +74,10 @@ def read_part(task: PartTask) -> PartResult:
     book, rows = judge_part(task)
     folder = Path(task.folder)
     folder.mkdir(parents=True, exist_ok=True)
-    rows.filter(outcome=REFUSED).select("row", "day", "reason").write_ipc(folder / "refused.arrow")
+    refused = ~pl.col("reason").is_in([NOTHING, SELF])
+    rows.filter(refused).select("row", "day", pl.col("reason").cast(pl.String)).write_ipc(folder / "refused.arrow")
     book.to_frame().write_ipc(folder / "parties.arrow")
-    used = rows.filter(outcome=USED)
-    counts = count_rows(rows)
+    counts, used = count_rows(rows), used_rows(rows)
     if "id" in task.columns:
         used.select("day", "sender", "receiver", "amount", "time", *_hashes()).write_ipc(folder / "rows.arrow")
         return PartResult(task.folder, counts)
@@ -83,8 +93,8 @@ def add_up_rows(task: tuple[PartResult, str]) -> PartResult:
     if marks:
         duplicate = pl.int_range(len(rows), eager=True).is_in(pl.read_ipc(marks)["at"].implode())
         for day, number in rows.filter(duplicate)["day"].value_counts().iter_rows():
-            counts[day, USED, ""] -= number
-            counts[day, DUPLICATE, ""] += number
+            counts[day, USED, NOTHING] -= number
+            counts[day, DUPLICATE, NOTHING] += number
         rows = rows.filter(~duplicate)
     return PartResult(result.folder, dict(counts), _write_ties(rows, folder))
 
@@ -103,19 +113,29 @@ def _hashes() -> list[pl.Expr]:
 
 
 def judge_part(task: PartTask) -> tuple[pl.Series, pl.DataFrame]:
-    """The part's book of keys and its rows with day, outcome and reason. Raises DataRefused for a damaged file."""
-    book, frame = _load(task)
-    return book, _judge(frame, "amount" in task.columns)
+    """The part's book of keys and its rows with day and reason. Raises DataRefused for a damaged file."""
+    book, frame, per_day = _load(task)
+    return book, _judge(frame, per_day, "amount" in task.columns)
+
+
+def used_rows(rows: pl.DataFrame) -> pl.DataFrame:
+    """The rows to count, their amounts as decimals."""
+    amount = pl.col("amount") if "amount" in rows.columns else pl.lit(None)
+    return rows.filter(pl.col("reason") == NOTHING).with_columns(amount.cast(AMOUNT).alias("amount"))
 
 
 def count_rows(rows: pl.DataFrame) -> dict[tuple[int | None, str, str], int]:
     """(day, outcome, reason) -> rows."""
-    counted = rows.group_by("day", "outcome", "reason").len()
-    return {(day, outcome, reason): number for day, outcome, reason, number in counted.iter_rows()}
+    counted = rows.group_by("day", "reason").len()
+    return {(day, _outcome(reason), reason): number for day, reason, number in counted.iter_rows()}
 
 
-def _load(task: PartTask) -> tuple[pl.Series, pl.DataFrame]:
-    """The book of keys, and the part's rows under our names; row = position in the file."""
+def _outcome(reason: str) -> str:
+    return {NOTHING: USED, SELF: FILTERED}.get(reason, REFUSED)
+
+
+def _load(task: PartTask) -> tuple[pl.Series, pl.DataFrame, int]:
+    """The book of keys, the part's rows under our names, and the ticks per day of `time`; row = place in the file."""
     part = task.part
     wanted = list(dict.fromkeys(task.columns.values()))
     with open_parquet(part.path, part.name) as parquet:
@@ -126,10 +146,9 @@ def _load(task: PartTask) -> tuple[pl.Series, pl.DataFrame]:
     arrays = {ours: table.column(theirs) for ours, theirs in task.columns.items()}
     book, frame = code_columns({side: arrays[side] for side in SIDES})
     rest = [pl.Series(ours, _plain(array)) for ours, array in arrays.items() if ours not in SIDES]
-    return book, frame.with_columns(*rest).with_columns(
-        *_moment(pl.col("time"), _per_day(arrays["time"].type)),
-        pl.int_range(part.first_row, part.first_row + pl.len()).alias("row"),
-    )
+    number = pl.int_range(part.first_row, part.first_row + pl.len())
+    frame = frame.with_columns(*rest).with_columns(number.alias("row"), pl.col("time").cast(pl.Int64))
+    return book, frame, _per_day(arrays["time"].type)
 
 
 def _plain(array: pa.ChunkedArray) -> pa.ChunkedArray:
@@ -153,47 +172,38 @@ def _per_day(found: pa.DataType) -> int:
     return 86_400_000 if pa.types.is_date64(values) else 1
 
 
-def _moment(ticks: pl.Expr, per_day: int) -> list[pl.Expr]:
-    """`time` in UTC microseconds, null where it is not plausible, and `dated`: whether the log gave any time."""
-    ticks = ticks.cast(pl.Int64)
+def _judge(frame: pl.DataFrame, per_day: int, has_amount: bool) -> pl.DataFrame:
+    """Turn `time` from ticks into UTC microseconds, null where not plausible, and add day and reason.
+
+    A row gets the first reason that applies. Reasons are an Enum: a byte a row.
+    """
+    ticks, sender, receiver = pl.col("time"), pl.col("sender"), pl.col("receiver")
     lowest, highest = (day_number(day) * per_day for day in PLAUSIBLE)
     plausible = ticks.is_between(lowest, highest, closed="left")
     micro = ticks * (DAY // per_day) if per_day <= DAY else ticks // (per_day // DAY)
-    return [
-        pl.when(plausible).then(micro).cast(pl.Datetime("us", "UTC")).alias("time"),
-        ticks.is_not_null().alias("dated"),
-    ]
-
-
-def _judge(frame: pl.DataFrame, has_amount: bool) -> pl.DataFrame:
-    """Add key, day, outcome and reason. A row gets the first reason that applies."""
-    amount = pl.col("amount").cast(pl.Float64) if has_amount else pl.lit(0.0)
-    frame = frame.with_columns(amount.alias("value"))
     faults = [
         *((pl.col(f"{side}_null"), f"{side} is null") for side in SIDES),
         *((pl.col(side).is_null(), f"{side} is empty") for side in SIDES),
-        (~pl.col("dated"), "time is null"),
-        (pl.col("time").is_null(), f"time is outside {PLAUSIBLE[0].year}..{PLAUSIBLE[1].year - 1}"),
+        (ticks.is_null(), "time is null"),
+        (~plausible, f"time is outside {PLAUSIBLE[0].year}..{PLAUSIBLE[1].year - 1}"),
     ]
     if has_amount:
-        value = pl.col("value")
+        value = pl.col("amount").cast(pl.Float64)
         faults += [
             (value.is_null(), "amount is null"),
             (~value.is_finite(), "amount is not finite"),
             (value < 0, "amount is negative"),
             (value > LARGEST_AMOUNT, f"amount is above {LARGEST_AMOUNT:.0e}"),
         ]
-    reason = pl.coalesce(*(pl.when(fault).then(pl.lit(text)) for fault, text in faults)).fill_null(
-        pl.when(pl.col("sender") == pl.col("receiver")).then(pl.lit(SELF)).otherwise(pl.lit(""))
+    faults += [(sender == receiver, SELF)]
+    told = pl.Enum([NOTHING, *(text for _, text in faults)])
+    reason = pl.coalesce(*(pl.when(fault).then(pl.lit(text, told)) for fault, text in faults), pl.lit(NOTHING, told))
+    return (
+        frame.lazy()
+        .with_columns(
+            reason=reason,
+            day=pl.when(plausible).then(ticks // per_day).cast(pl.Int32),
+            time=pl.when(plausible).then(micro).cast(pl.Datetime("us", "UTC")),
+        )
+        .collect(engine="streaming")
     )
-    judged = frame.with_columns(
-        reason=reason, day=pl.col("time").dt.epoch("us").floordiv(DAY).cast(pl.Int32)
-    ).with_columns(
-        outcome=pl.when(reason="")
-        .then(pl.lit(USED))
-        .when(reason=SELF)
-        .then(pl.lit(FILTERED))
-        .otherwise(pl.lit(REFUSED))
-    )
-    exact = pl.when(outcome=USED).then("amount").cast(AMOUNT) if has_amount else pl.lit(None, AMOUNT)
-    return judged.with_columns(exact.alias("amount"))

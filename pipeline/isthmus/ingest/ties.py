@@ -42,12 +42,13 @@ class Merge:
 
 def ties_of_rows(rows: pl.DataFrame) -> pl.DataFrame:
     """Rows (day, sender, receiver, amount, time) -> ties per day: contacts, amount, first_seen, last_seen."""
-    return rows.group_by("day", "sender", "receiver").agg(
+    sums = (
         pl.len().cast(pl.Int64).alias("contacts"),
         pl.col("amount").sum(),
         pl.col("time").min().alias("first_seen"),
         pl.col("time").max().alias("last_seen"),
     )
+    return rows.lazy().group_by("day", "sender", "receiver").agg(*sums).collect(engine="streaming")
 
 
 def merge_day(merge: Merge) -> None:
@@ -58,7 +59,7 @@ def merge_day(merge: Merge) -> None:
         shutil.copyfile(merge.sources[0].parties, merge.merged.parties)
         return
     book, frames = _on_one_book(merge.sources)
-    ties = pl.concat(frames).group_by("sender", "receiver").agg(*_SUMS)
+    ties = pl.concat(frames).lazy().group_by("sender", "receiver").agg(*_SUMS).collect(engine="streaming")
     book.to_frame().write_ipc(merge.merged.parties)
     ties.write_ipc(merge.merged.ties, compression="lz4")
 

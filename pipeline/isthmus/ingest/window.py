@@ -26,6 +26,7 @@ from isthmus.ingest.rows import (
     day_of,
     judge_part,
     read_part,
+    used_rows,
 )
 from isthmus.ingest.ties import DaySource, Merge, add_up, merge_day
 from isthmus.settings import Log
@@ -189,7 +190,7 @@ def sample_ties(found: Survey, log: Log, first_day: date, last_day: date, most_r
         book, judged = judge_part(PartTask(part, "", columns))
         counts.append(PartResult("", count_rows(judged)))
         rows += part.rows
-        used = judged.filter(pl.col("outcome") == USED, pl.col("day").is_between(window.start, window.stop - 1))
+        used = used_rows(judged).filter(pl.col("day").is_between(window.start, window.stop - 1))
         keys = pl.Enum(book)
         frames.append(
             used.select(
