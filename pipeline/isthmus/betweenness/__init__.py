@@ -40,9 +40,14 @@ def betweenness(
 ) -> Estimate:
     """Betweenness of every party, with an interval that holds for all of them at once at `confidence`.
 
-    The keys mean what they mean in the settings' [score] and [run]: `half_width` in shares of pairs, 0..1,
-    `minutes` the time that scoring may take, `threads` = 0 all cores. `progress` hears the share done, 0..1.
-    Exact: Brandes 2001. Pivots: Geisberger, Sanders, Schultes 2008. Paths: Riondato, Kornaropoulos 2016.
+    The keys mean what they mean in the settings' [score] and [run]: sampling stops at the first of `samples` drawn,
+    every interval at least as narrow as `half_width` (in shares of pairs, 0..1), the first `top` parties settled, and
+    `minutes` over; 0 switches a rule off. `threads` = 0 takes all cores. `progress` hears the share done, 0..1. The
+    same seed gives the same bits for any number of threads (engine numba), unless the clock stopped the sampling.
+
+    Sources. Exact: Brandes 2001, its sources in lanes after Then et al. 2014, the graph reduced after Sariyuce et al.
+    2013. Pivots: Brandes and Pich 2007, bounded by betting (Waudby-Smith and Ramdas 2023). Paths: Riondato and
+    Kornaropoulos 2016, found from both ends (Borassi and Natale 2016), bounded by Clopper and Pearson 1934.
 
     Raises SettingsError when a value is impossible, the method cannot take the graph, or nothing fits the memory.
     """

@@ -9,9 +9,20 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-__all__ = ["rank", "rank_range", "settle"]
+__all__ = ["rank", "rank_range", "settle", "snap"]
 
 Floats = NDArray[np.float64]
+
+SIGNIFICANT_DIGITS = 11
+
+
+def snap(values: Floats) -> Floats:
+    """Round to 11 significant digits: the order in which floats were added must not decide a rank. Shape (n,)."""
+    rounded = np.zeros(len(values))
+    some = values > 0
+    scale = 10.0 ** (SIGNIFICANT_DIGITS - 1 - np.floor(np.log10(values[some])))
+    rounded[some] = np.rint(values[some] * scale) / scale
+    return rounded
 
 
 def rank(value: Floats) -> NDArray[np.int64]:

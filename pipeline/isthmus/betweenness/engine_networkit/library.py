@@ -32,6 +32,7 @@ from numpy.typing import NDArray
 
 from isthmus.betweenness.engine_networkit.bounds import certain_zeros
 from isthmus.betweenness.estimate import Estimate
+from isthmus.betweenness.ranks import snap
 from isthmus.graph import Graph
 
 if TYPE_CHECKING:
@@ -44,7 +45,6 @@ __all__ = ["path_dimension", "run", "seconds_per_path", "seconds_per_source"]
 Floats = NDArray[np.float64]
 Progress = Callable[[float], None]
 
-SIGNIFICANT_DIGITS = 11
 _one_at_a_time = threading.RLock()
 _converted: WeakKeyDictionary[Graph, Any] = WeakKeyDictionary()
 
@@ -95,7 +95,7 @@ def _exact(graph: Graph, threads: int) -> Floats:
     with _only_here(threads):
         algorithm = nk.centrality.Betweenness(_convert(graph)).run()
     # rounded as a number of pairs: those are often whole, and stay so
-    return _snap(np.asarray(algorithm.scores())) / ((graph.n - 1) * (graph.n - 2))
+    return snap(np.asarray(algorithm.scores())) / ((graph.n - 1) * (graph.n - 2))
 
 
 def _pivots(
@@ -120,7 +120,7 @@ def _pivots(
         scatter = np.maximum(squares - total**2 / drawn, 0.0) / max(len(shares) - 1, 1)
         mean += total / drawn / sides
         variance += scatter / drawn / sides**2
-    return _snap(mean), np.sqrt(variance)
+    return snap(mean), np.sqrt(variance)
 
 
 def _sources(graph: Graph, draws: int, threads: int, seed: int, *, backwards: bool) -> Floats:
@@ -255,12 +255,3 @@ def _seeds(seed: int, blocks: int) -> list[int]:
 def _shares(total: int, parts: int) -> list[int]:
     """`total` split into `parts` whole numbers that differ by at most one."""
     return [total // parts + (part < total % parts) for part in range(parts)]
-
-
-def _snap(values: Floats) -> Floats:
-    """Round to significant digits: the order in which floats were added must not decide a rank."""
-    rounded = np.zeros(len(values))
-    some = values > 0
-    scale = 10.0 ** (SIGNIFICANT_DIGITS - 1 - np.floor(np.log10(values[some])))
-    rounded[some] = np.rint(values[some] * scale) / scale
-    return rounded

@@ -39,11 +39,11 @@ def _cache_folder() -> str:
     made_of = hashlib.blake2b(f"{numba.__version__} {np.__version__} {sys.version}".encode(), digest_size=8)
     for module in sorted(Path(__file__).parent.glob("*.py")):
         made_of.update(module.read_bytes())
-    home = Path(place or os.environ.get("XDG_CACHE_HOME") or Path.home() / ".cache")
-    folder = home / "isthmus" / f"kernels-{made_of.hexdigest()}"
     try:
+        home = Path(place or os.environ.get("XDG_CACHE_HOME") or Path.home() / ".cache")
+        folder = home / "isthmus" / f"kernels-{made_of.hexdigest()}"
         folder.mkdir(parents=True, exist_ok=True)
-    except OSError:
+    except (OSError, RuntimeError):  # RuntimeError: a user without a home
         return ""
     return str(folder) if os.access(folder, os.W_OK) else ""
 

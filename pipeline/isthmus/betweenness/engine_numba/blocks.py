@@ -11,6 +11,7 @@ import threading
 from collections.abc import Callable
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any, TypeVar
+from weakref import WeakValueDictionary
 
 from isthmus.errors import SettingsError
 from isthmus.graph import Graph
@@ -37,8 +38,9 @@ class Job:
 
 
 _lock = threading.RLock()
-_graphs: dict[tuple[str, int], Graph] = {}
-_prepared: dict[tuple[str, Job], Any] = {}
+# Whoever measures a graph holds it; what was prepared holds it too, so that its name is not another graph's meanwhile.
+_graphs: WeakValueDictionary[tuple[str, int], Graph] = WeakValueDictionary()
+_prepared: dict[tuple[str, Job], tuple[Graph, Any]] = {}
 
 
 def job_for(graph: Graph, lanes: int, score: Score) -> Job:
@@ -52,11 +54,11 @@ def job_for(graph: Graph, lanes: int, score: Score) -> Job:
     return Job(name, lanes, score.max_hops, score.seed)
 
 
-def forget() -> None:
-    """Drop what this process has prepared."""
+def forget(job: Job | None = None) -> None:
+    """Drop what this process has prepared for the graph of a job, or for all; a run beside this one prepares anew."""
     with _lock:
-        _graphs.clear()
-        _prepared.clear()
+        for key in [key for key in _prepared if job is None or key[1].graph == job.graph]:
+            del _prepared[key]
 
 
 def load_exact(job: Job) -> tuple[Reduced, exact.Plan]:
@@ -128,14 +130,13 @@ def _once(method: str, job: Job, prepare: Callable[[Graph], Loaded]) -> Loaded:
     """Prepare a job's graph the first time it is asked for; a worker keeps the last one only."""
     with _lock:
         if (method, job) not in _prepared:
-            if job.graph not in _graphs:
-                _open(job)
-            _prepared[method, job] = prepare(_graphs[job.graph])
-        loaded: Loaded = _prepared[method, job]
+            graph = _graphs.get(job.graph) or _open(job)
+            _prepared[method, job] = graph, prepare(graph)
+        loaded: Loaded = _prepared[method, job][1]
         return loaded
 
 
-def _open(job: Job) -> None:
+def _open(job: Job) -> Graph:
     from pathlib import Path
 
     folder, _ = job.graph
@@ -144,4 +145,4 @@ def _open(job: Job) -> None:
             "this graph is only in memory, so other processes cannot work on it; save and open it first"
         )
     forget()
-    _graphs[job.graph] = Graph.open(Path(folder))
+    return Graph.open(Path(folder))

@@ -6,16 +6,18 @@ A block depends on nothing but its task, so any number of threads, processes or 
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator
+from dataclasses import replace
 from typing import TypeVar
 
 import numpy as np
 
 from isthmus.betweenness.engine_numba import blocks, exact, paths, pivots
-from isthmus.betweenness.engine_numba.intervals import Bounds
+from isthmus.betweenness.engine_numba.intervals import Bounds, Floats
 from isthmus.betweenness.engine_numba.sequences import PivotEvidence
 from isthmus.betweenness.engine_numba.stopping import Rules, Verdict, every_block, planned_looks, watch
 from isthmus.betweenness.estimate import Estimate
 from isthmus.betweenness.plan import Plan
+from isthmus.betweenness.ranks import snap
 from isthmus.cluster import Door, Here
 from isthmus.graph import Graph
 from isthmus.settings import Score
@@ -41,7 +43,7 @@ def run(graph: Graph, plan: Plan, score: Score, threads: int, progress: Progress
         reason = "exact" if verdict.stopped_because == "settled" else verdict.stopped_because
         return _estimate(graph, plan, score, verdict.bounds, verdict.samples, reason)
     finally:
-        blocks.forget()
+        blocks.forget(job)
         progress(1.0)
 
 
@@ -49,8 +51,7 @@ def _exact(graph: Graph, plan: Plan, score: Score, job: blocks.Job, door: Door, 
     reduced, work = blocks.load_exact(job)
     parts = door.stream(blocks.exact_block, ((job, index) for index in range(work.blocks)))
     pairs = exact.merge(reduced, work, parts, lambda done: progress(done / work.blocks))
-    value = np.clip(pairs / ((graph.n - 1) * (graph.n - 2)), 0.0, 1.0)
-    return _estimate(graph, plan, score, Bounds(value, value, value, np.zeros(graph.n)), graph.n, "exact")
+    return _estimate(graph, plan, score, _certain(pairs), graph.n, "exact")
 
 
 def _pivots(job: blocks.Job, plan: Plan, score: Score, door: Door, progress: Progress) -> Verdict:
@@ -66,7 +67,10 @@ def _pivots(job: blocks.Job, plan: Plan, score: Score, door: Door, progress: Pro
     def add(part: pivots.PivotPartial) -> None:
         evidence.add(part.draws, part.moments[:, :9], part.sums, part.moments[:, 9])
 
-    return watch(evidence, _each(partials, add), every_block(most, pivots.BLOCK), rules, _share(progress, most))
+    verdict = watch(evidence, _each(partials, add), every_block(most, pivots.BLOCK), rules, _share(progress, most))
+    if verdict.samples == n:
+        verdict = replace(verdict, bounds=_certain(verdict.bounds.estimate * ((n - 1) * (n - 2))))
+    return verdict
 
 
 def _paths(job: blocks.Job, plan: Plan, score: Score, door: Door, progress: Progress) -> Verdict:
@@ -100,6 +104,14 @@ def _share(progress: Progress, expected: int) -> Callable[[int, Bounds | None], 
 
 def _nothing(n: int) -> Bounds:
     return Bounds(*np.zeros((4, n)))
+
+
+def _certain(pairs: Floats) -> Bounds:
+    """Intervals without width, from ordered pairs. Rounded, for equal parties must not differ by the order of adding,
+    and as a number of pairs: those are often whole, and stay so."""
+    n = pairs.size
+    value = np.clip(snap(pairs) / ((n - 1) * (n - 2)), 0.0, 1.0)
+    return Bounds(value, value, value, np.zeros(n))
 
 
 def _estimate(graph: Graph, plan: Plan, score: Score, bounds: Bounds, samples: int, reason: str) -> Estimate:
