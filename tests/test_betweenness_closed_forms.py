@@ -141,7 +141,8 @@ class TestClosedForms:
         assert estimate.upper.max() <= 1
         # far closer than the bound: 6 standard errors at the worst value of the variance
         assert np.abs(estimate.betweenness - truth).max() <= 6 * 1.0 / math.sqrt(4000)
-        assert estimate.samples == 4000
+        # our engine draws no source twice, and asks nothing of a graph that needs no drawing
+        assert estimate.samples == (4000 if engine == "networkit" or method == "paths" else n)
 
 
 @pytest.mark.parametrize("method", ["exact", "pivots", "paths"])
@@ -209,7 +210,7 @@ def test_exact_is_the_oracle(build, engine, case):
 @given(graphs(), st.sampled_from(["pivots", "paths"]), st.integers(0, 2**63 - 1))
 def test_sampled_contain_the_oracle(build, engine, case, method, seed):
     n, arcs, directed, lengths = case
-    if method == "paths" and directed and engine == "networkit":
+    if method == "paths" and (directed or engine == "numba"):
         lengths = None
     graph = build(n, arcs, directed, lengths)
     got = betweenness(graph, method=method, engine=engine, samples=300, confidence=SURE, seed=seed)

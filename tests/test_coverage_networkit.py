@@ -39,10 +39,10 @@ def method(request):
 @pytest.mark.parametrize(("network", "directed"), [c[1:] for c in CASES], ids=[c[0] for c in CASES])
 def test_sampled_methods_keep_their_promise(build, method, network, directed):
     graph = build(network.number_of_nodes(), network.edges(), directed)
-    exact_score = Score(method="exact")
+    exact_score = Score(method="exact", engine="networkit")
     truth = measure(graph, make_plan(graph, exact_score, 1, 2**34), exact_score).betweenness
     # a low confidence, because its intervals leave the least room for a fault to hide in
-    score = Score(method=method, samples=SAMPLES, confidence=0.55)
+    score = Score(method=method, engine="networkit", samples=SAMPLES, confidence=0.55)
     plan = make_plan(graph, score, 1, 2**34)
     runs = [measure(graph, plan, replace_seed(score, seed)) for seed in range(SEEDS)]
 
@@ -73,7 +73,7 @@ def test_the_bound_is_not_idle(build):
     """A bound narrowed to a fifth must be caught by the test above, or the test means nothing."""
     _, network, directed = CASES[0]
     graph = build(network.number_of_nodes(), network.edges(), directed)
-    exact_score, score = Score(method="exact"), Score(method="paths", samples=SAMPLES, confidence=0.55)
+    exact_score, score = Score(method="exact", engine="networkit"), Score(method="paths", engine="networkit", samples=SAMPLES, confidence=0.55)
     truth = measure(graph, make_plan(graph, exact_score, 1, 2**34), exact_score).betweenness
     plan = make_plan(graph, score, 1, 2**34)
     narrow = replace(plan, half_width=plan.half_width / 5)

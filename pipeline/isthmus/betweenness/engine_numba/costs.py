@@ -235,3 +235,4 @@ def _warm_up(method: str, graph: Graph, score: Score) -> None:
         blocks.pivots_block((job, 0, 4))
     else:
         blocks.paths_block((job, 0, 16))
+    blocks.forget(job)
