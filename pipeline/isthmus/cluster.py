@@ -148,12 +148,12 @@ def open_door(*, workers: int = 0, threads: int = 0, scheduler: str = "", scratc
         from distributed import Client, LocalCluster
 
         each = threads or max(1, (os.cpu_count() or 1) // workers)
-        # Dask starts workers with one OpenMP thread, and Polars in every worker would take all cores: say it outright.
-        env = {name: str(each) for name in ("OMP_NUM_THREADS", "POLARS_MAX_THREADS", "NUMBA_NUM_THREADS")}
+        # A worker runs `each` tasks at once, so no library inside a task may take more than one thread by itself.
+        env = dict.fromkeys(("OMP_NUM_THREADS", "POLARS_MAX_THREADS", "NUMBA_NUM_THREADS"), "1")
         with (
             LocalCluster(
                 n_workers=workers,
-                threads_per_worker=1,
+                threads_per_worker=each,
                 processes=True,
                 env=env,
                 # Dask serves its health page in any case: any free port, for this machine only

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import shlex
+import shutil
 import sys
 from pathlib import Path
 
@@ -83,7 +84,8 @@ def how_to_go_on(console: Console, outcome: Outcome, config: Path) -> None:
     console.say(
         f'{python} - <<\'END\'\nimport duckdb\nduckdb.sql("""\n{top_brokers(outcome.night)}\n""").show()\nEND\n'
     )
-    console.say(f"Run the night again: isthmus score {config} --as-of {outcome.night.as_of}")
+    command = "isthmus" if shutil.which("isthmus") else shlex.quote(str(Path(sys.executable).with_name("isthmus")))
+    console.say(f"Run the night again: {command} score {shlex.quote(str(config))} --as-of {outcome.night.as_of}")
 
 
 def forecast(console: Console, settings: Settings, seen: Forecast) -> None:
