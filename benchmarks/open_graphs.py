@@ -56,13 +56,13 @@ def read_gt(raw: bytes) -> Arcs:
     return n, np.repeat(np.arange(n), [len(row) for row in rows]), np.concatenate(rows).astype(np.int64), directed
 
 
-def from_collection(name: str) -> Arcs:
+def collection_file(name: str) -> bytes:
     package = fetch(["apt-get", "download", "python3-graph-tool"], "python3-graph-tool_*.deb")
     tar = subprocess.run(["dpkg-deb", "--fsys-tarfile", package], check=True, capture_output=True).stdout
     with tarfile.open(fileobj=io.BytesIO(tar)) as files:
         held = files.extractfile(f"{COLLECTION}/{name}.gt.gz")
         assert held is not None
-        return read_gt(gzip.decompress(held.read()))
+        return gzip.decompress(held.read())
 
 
 def packages() -> Arcs:
@@ -97,9 +97,9 @@ def college_messages() -> Arcs:
 
 READERS: dict[str, Callable[[], Arcs]] = {
     "college-messages": college_messages,
-    "as-22july06": lambda: from_collection("as-22july06"),
-    "email-Enron": lambda: from_collection("email-Enron"),
-    "cond-mat-2005": lambda: from_collection("cond-mat-2005"),
+    "as-22july06": lambda: read_gt(collection_file("as-22july06")),
+    "email-Enron": lambda: read_gt(collection_file("email-Enron")),
+    "cond-mat-2005": lambda: read_gt(collection_file("cond-mat-2005")),
     "packages": packages,
 }
 

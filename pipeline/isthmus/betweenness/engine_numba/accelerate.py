@@ -38,7 +38,7 @@ def _cache_folder() -> str:
         return ""
     made_of = hashlib.blake2b(f"{numba.__version__} {np.__version__} {sys.version}".encode(), digest_size=8)
     for module in sorted(Path(__file__).parent.glob("*.py")):
-        made_of.update(module.read_bytes())
+        made_of.update(module.name.encode() + module.read_bytes())
     try:
         home = Path(place or os.environ.get("XDG_CACHE_HOME") or Path.home() / ".cache")
         folder = home / "isthmus" / f"kernels-{made_of.hexdigest()}"

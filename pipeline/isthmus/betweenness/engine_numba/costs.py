@@ -25,6 +25,8 @@ Task = TypeVar("Task")
 # Below this many arc visits in all, exact takes a fraction of a second, and a probe would cost more than it tells.
 TINY = 20_000_000
 NOMINAL_ARCS_PER_SECOND = {False: 1e8, True: 5e6}
+# So many times over the time allowed, one block is enough to know.
+HOPELESS = 4
 PILOT_PAIRS = paths.BLOCK
 # Half-widths come out at this many z * standard error (benchmarks/README.md): pivots pay for unknown variances.
 PIVOTS_OVER_LIMIT = 1.5
@@ -63,7 +65,10 @@ class _Planner:
             job = self._job(lanes)
             _, work = blocks.load_exact(job)
             picks = np.unique(np.linspace(0, work.blocks - 1, min(work.blocks, 4 * threads)).astype(int)).tolist()
-            seconds = work.blocks * _seconds_each(blocks.exact_block, [(job, index) for index in picks], threads)
+            tasks = [(job, index) for index in picks]
+            seconds = work.blocks * _seconds_each(blocks.exact_block, tasks[:1], 1) / threads
+            if seconds < HOPELESS * self.budget:
+                seconds = work.blocks * _seconds_each(blocks.exact_block, tasks, threads)
         said = f"exact takes about {spell_seconds(seconds)} on {threads} thread{'s' if threads > 1 else ''}"
         if seconds > self.budget:
             said += f", longer than the {self.score.minutes:g} min allowed, and has no use when stopped half-way"
@@ -88,7 +93,7 @@ class _Planner:
         worst = math.sqrt(float(spread.max()))
 
         def half_width(samples: int) -> float:
-            left = 1 - samples / n
+            left = max(1 - samples / n, 0.0)
             return PIVOTS_OVER_LIMIT * self.z * worst * math.sqrt(left / samples)
 
         return self._sampled("pivots", "sources", n, each, half_width, needed, threads, lanes)
@@ -101,8 +106,8 @@ class _Planner:
                 'use method = "pivots" or "exact"'
             )
         n = self.graph.n
-        # the graph renumbered (both ways when directed), flags and rows, and what is known of each party
-        base = 4 * self.graph.arcs * (2 if self.graph.directed else 1) + 90 * n
+        # the graph renumbered (both ways when directed), what building that takes, and what is known of each party
+        base = (4 * (2 if self.graph.directed else 1) + 16) * self.graph.arcs + 90 * n
         _, threads, needed = self._fit("paths", lambda _: paths.bytes_per_thread(n), base)
         if self.trivial:
             return self._plan("paths", 1, 0.0, "exact", "there is nothing to sample", 0.0, needed, threads, 0)

@@ -13,9 +13,10 @@ from isthmus.betweenness.engine_numba.reductions import Reduced
 from isthmus.betweenness.engine_numba.subgraphs import Floats
 from isthmus.graph.arrays import Arrays, Ids
 
-# Work of a block, in arcs and vertices touched per batch of lanes: about a quarter of a second. It depends on
-# nothing but the graph, so the blocks, and with them the bits of the result, are the same for any threads.
-BLOCK_WORK = 2_000_000
+# Work of a block, in arcs and vertices touched per batch of lanes: about an eighth of a second where neighbours are near
+# each other, up to a second in a random graph, and Ctrl-C waits for it. It depends on nothing but the graph, so the
+# blocks, and with them the bits of the result, are the same for any threads.
+BLOCK_WORK = 1_000_000
 MOST_LANES = 64
 
 
@@ -73,13 +74,13 @@ def bytes_per_thread(n: int, m: int, lanes: int, weighted: bool = False) -> int:
     added, 2 x 16 n; records of (level, vertex) 12 bytes each, two per vertex to start with, doubled when a
     batch needs more (up to one per vertex and lane; below twice the vertices on social graphs, three times on
     sparser ones), so 48 n.
-    With lengths: distances, path counts, dependencies 24 n, predecessors and order 8 n, partial sums 32 n;
-    queue entries 8 m, one per arc at worst. The ring of buckets adds up to 17 MB when lengths lie far apart;
-    the heap, where
-    it takes over, 4 m.
+    With lengths: distances, path counts, dependencies 24 n, predecessors and order 8 n, partial sums 32 n; queue
+    entries 8 bytes each, one whenever a vertex is found to be nearer than known: 1.45 per vertex on a graph of
+    co-authors, so 2 n are counted, or one per arc where that is fewer. The ring of buckets adds up to 17 MB when
+    lengths lie far apart; the heap, where it takes over, 4 bytes an entry.
     """
     if weighted:
-        return 64 * n + 8 * m
+        return 64 * n + 8 * min(m, 2 * n)
     return (8 * lanes + 112) * n
 
 
