@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import itertools
-from collections.abc import Iterable
+import math
+from collections.abc import Iterable, Iterator
 from fractions import Fraction
 
 Arc = tuple[int, int]
@@ -47,26 +48,32 @@ def shortest_paths(out: list[dict[int, int]], s: int, t: int, d: list[list[float
     ]
 
 
-def betweenness_pairs(
+def dependencies(
     n: int, arcs: Iterable[Arc], directed: bool, lengths: Iterable[int] | None = None, max_hops: int = 0
-) -> list[float]:
-    """Unnormalised betweenness by listing every shortest path of every pair; unordered pairs when undirected.
+) -> list[list[Fraction]]:
+    """table[s][v]: over all t, the shares of the shortest s-t paths with v inside, by listing every path.
 
     With `max_hops`, pairs whose shortest path has more arcs do not count (hop lengths only).
     """
     out = adjacency(n, arcs, directed, lengths)
     d = distances(out)
-    total = [Fraction(0)] * n
+    table = [[Fraction(0)] * n for _ in range(n)]
     for s, t in itertools.permutations(range(n), 2):
-        if not directed and s > t:
-            continue
         if max_hops and d[s][t] > max_hops:
             continue
         paths = shortest_paths(out, s, t, d)
         for path in paths:
             for v in path[1:-1]:
-                total[v] += Fraction(1, len(paths))
-    return [float(x) for x in total]
+                table[s][v] += Fraction(1, len(paths))
+    return table
+
+
+def betweenness_pairs(
+    n: int, arcs: Iterable[Arc], directed: bool, lengths: Iterable[int] | None = None, max_hops: int = 0
+) -> list[float]:
+    """Unnormalised betweenness; unordered pairs when undirected."""
+    table = dependencies(n, arcs, directed, lengths, max_hops)
+    return [float(sum(column) / (1 if directed else 2)) for column in zip(*table, strict=True)]
 
 
 def betweenness(
@@ -94,3 +101,135 @@ def settle(lower: list[float], upper: list[float], top: int) -> list[str]:
         ahead = sum(lower[u] > upper[v] for u in range(n) if u != v)
         said.append("in" if rivals < top else "out" if ahead >= top else "open")
     return said
+
+
+def brandes(n: int, arcs: Iterable[Arc], directed: bool, max_hops: int = 0) -> list[list[float]]:
+    """`dependencies` in hops for graphs too large to list paths: Brandes (2001), plainly."""
+    out = adjacency(n, arcs, directed)
+    table = []
+    for s in range(n):
+        distance, count, order = {s: 0}, {s: 1}, [s]
+        for u in order:
+            for w in out[u]:
+                if w not in distance:
+                    distance[w], count[w] = distance[u] + 1, 0
+                    order.append(w)
+                if distance[w] == distance[u] + 1:
+                    count[w] += count[u]
+        owed = [0.0] * n
+        for u in reversed(order):
+            for w in out[u]:
+                if distance[w] == distance[u] + 1:
+                    own = 1.0 if max_hops == 0 or distance[w] <= max_hops else 0.0
+                    owed[u] += (own + owed[w]) * count[u] / count[w]
+        owed[s] = 0.0
+        table.append(owed)
+    return table
+
+
+def certain_zeros(n: int, arcs: Iterable[Arc], directed: bool) -> list[bool]:
+    """Whether every way in and every way out of v, to another vertex, is joined by an arc of its own."""
+    out = adjacency(n, arcs, directed)
+    return [all(u == w or w in out[u] for u in range(n) if v in out[u] for w in out[v]) for v in range(n)]
+
+
+def separated(n: int, arcs: Iterable[Arc], v: int) -> int:
+    """Ordered pairs of others that are joined, but not without v (undirected)."""
+    out = adjacency(n, arcs, directed=False)
+
+    def reached(start: int, without: int) -> set[int]:
+        seen, ahead = {start}, [start]
+        while ahead:
+            fresh = {w for w in out[ahead.pop()] if w != without} - seen
+            seen |= fresh
+            ahead += fresh
+        return seen
+
+    others = reached(v, -1) - {v}
+    return sum(t not in reached(s, v) for s, t in itertools.permutations(others, 2))
+
+
+def grid(side: int) -> list[Arc]:
+    """Ties of a square grid, rows first; as arcs they lead right and down."""
+    right = [(r * side + c, r * side + c + 1) for r in range(side) for c in range(side - 1)]
+    return right + [(r * side + c, (r + 1) * side + c) for r in range(side - 1) for c in range(side)]
+
+
+def grid_shares(side: int, s: int, t: int) -> Iterator[tuple[int, float]]:
+    """(vertex, share of the shortest s-t paths of a grid that pass it), by binomials; ends included."""
+    (r0, c0), (r1, c1) = divmod(s, side), divmod(t, side)
+    down, right = abs(r1 - r0), abs(c1 - c0)
+    for i, j in itertools.product(range(down + 1), range(right + 1)):
+        row, column = r0 + (i if r1 >= r0 else -i), c0 + (j if c1 >= c0 else -j)
+        ways = math.comb(i + j, i) * math.comb(down - i + right - j, down - i)
+        yield row * side + column, ways / math.comb(down + right, down)
+
+
+class Xoshiro:
+    """xoshiro256++ of Blackman and Vigna (2021), in whole numbers without a width."""
+
+    WORD = 2**64 - 1
+
+    def __init__(self, state: list[int]) -> None:
+        self.state = state
+
+    def word(self) -> int:
+        def turned(x: int, by: int) -> int:
+            return (x << by | x >> (64 - by)) & self.WORD
+
+        a, b, c, d = self.state
+        word = (turned((a + d) & self.WORD, 23) + a) & self.WORD
+        shifted = b << 17 & self.WORD
+        c, d = c ^ a, d ^ b
+        b, a = b ^ c, a ^ d
+        self.state = [a, b, c ^ shifted, turned(d, 45)]
+        return word
+
+    def below(self, bound: int) -> int:
+        """Lemire (2019), on the upper halves of words: the multiples that would favour small numbers are redrawn."""
+        while True:
+            product = (self.word() >> 32) * bound
+            if product % 2**32 >= 2**32 % bound:
+                return product >> 32
+
+
+def spread(value: float, grid: list[float]) -> list[float]:
+    """A value as weights on its two neighbours among 0 and the ascending `grid`, that of 0 dropped."""
+    points = [0.0, *grid]
+    weights = [0.0] * len(points)
+    for i, (low, high) in enumerate(itertools.pairwise(points)):
+        if low < value <= high:
+            weights[i], weights[i + 1] = (high - value) / (high - low), (value - low) / (high - low)
+    return weights[1:]
+
+
+def best_bet(
+    draws: int, weights: list[float], total: float, grid: list[float], thetas: list[float], cost: float, sign: int
+) -> tuple[int, float]:
+    """Which theta promises the tightest limit if all went on so, and that limit: below the mean (sign 1), above (-1).
+
+    The mean m is excluded when the log capital, sum of log(1 + sign theta x) less draws * log(1 + sign theta m), has
+    reached its price, `cost` per draw.
+    """
+    promises = []
+    for theta in thetas:
+        gain = sum(w / (draws + 1) * math.log1p(sign * theta * x) for w, x in zip(weights, grid, strict=True))
+        promises.append(sign * math.expm1(gain - cost) / theta)
+    best = max(promises) if sign > 0 else min(promises)
+    mean = total / draws
+    return promises.index(best), min(max(best, 0.0), mean) if sign > 0 else min(max(best, mean), 1.0)
+
+
+def log_capital(blocks: list[tuple[list[float], float]], population: int, m: float, sign: int) -> float:
+    """Log capital against the mean m after blocks of (draws, theta), every draw booked by itself.
+
+    sign 1 bets that m is too low, -1 that it is too high. Within a block the draws are booked as with replacement.
+    """
+    capital, drawn, total = 0.0, 0, 0.0
+    for values, theta in blocks:
+        left = (population * m - total) / (population - drawn)
+        for x in values:
+            capital += math.log1p(sign * theta * x) - math.log1p(sign * theta * left)
+        drawn += len(values)
+        total += sum(values)
+    return capital

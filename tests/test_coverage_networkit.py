@@ -73,7 +73,10 @@ def test_the_bound_is_not_idle(build):
     """A bound narrowed to a fifth must be caught by the test above, or the test means nothing."""
     _, network, directed = CASES[0]
     graph = build(network.number_of_nodes(), network.edges(), directed)
-    exact_score, score = Score(method="exact", engine="networkit"), Score(method="paths", engine="networkit", samples=SAMPLES, confidence=0.55)
+    exact_score, score = (
+        Score(method="exact", engine="networkit"),
+        Score(method="paths", engine="networkit", samples=SAMPLES, confidence=0.55),
+    )
     truth = measure(graph, make_plan(graph, exact_score, 1, 2**34), exact_score).betweenness
     plan = make_plan(graph, score, 1, 2**34)
     narrow = replace(plan, half_width=plan.half_width / 5)

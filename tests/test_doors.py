@@ -3,16 +3,26 @@
 from __future__ import annotations
 
 import contextlib
+import json
 import socket
 import subprocess
 import sys
 import time
 from collections.abc import Iterator
 from pathlib import Path
+from typing import Any
 
+import numpy as np
+import polars as pl
 import pytest
 
 from isthmus import cluster
+from isthmus.betweenness import make_plan, measure
+from isthmus.betweenness.engine_numba import exact, paths, pivots, reductions
+from isthmus.cluster import open_door
+from isthmus.errors import SettingsError
+from isthmus.graph import Graph
+from isthmus.settings import Score
 from nights import DAYS, PAIRS, Site, rows
 
 MORE = '[score]\nmethod = "exact"\n[gates]\nrefused_limit = 0.5\n'
@@ -77,9 +87,57 @@ def make_site(root: Path, run: str = "") -> Site:
 
 
 @pytest.fixture(params=["workers", "scheduler"])
-def door(request: pytest.FixtureRequest) -> str:
+def keys(request: pytest.FixtureRequest) -> dict[str, Any]:
+    """The keys in [run] that open a door."""
+    return {"workers": 2} if request.param == "workers" else {"scheduler": request.getfixturevalue("scheduler")}
+
+
+@pytest.fixture
+def door(keys: dict[str, Any]) -> str:
     """The line in [run] that opens it."""
-    return "workers = 2" if request.param == "workers" else f'scheduler = "{request.getfixturevalue("scheduler")}"'
+    return "\n".join(f"{key} = {json.dumps(value)}" for key, value in keys.items())
+
+
+@pytest.fixture(scope="module")
+def graph(tmp_path_factory: pytest.TempPathFactory) -> Graph:
+    """A snapshot of some thousand parties: several blocks of work for every method."""
+    n = 6000
+    tail, head = (n * np.random.default_rng(6).random((2, 5 * n)) ** 1.3).astype(np.int64)
+    parties = pl.Series("party", [f"p{i:04d}" for i in range(n)])
+    kept = tail != head
+    folder = tmp_path_factory.mktemp("snapshot")
+    Graph.from_arcs(parties, tail[kept], head[kept], directed=True).save(folder)
+    return Graph.open(folder)
+
+
+def test_every_door_measures_the_same_bits(graph: Graph, keys: dict[str, Any]) -> None:
+    """Also where only some of the workers hold the graph, or a run is given up half-way and another begins."""
+    reduced = reductions.reduce(graph)
+    assert exact.make_plan(reduced).blocks > 2
+    scores = [
+        Score(method="exact"),
+        Score(method="pivots", samples=5 * pivots.BLOCK, top=0),
+        Score(method="paths", samples=3 * paths.BLOCK + 100, top=0),
+        Score(method="paths", samples=3 * paths.BLOCK + 100, top=0, max_hops=4, seed=9),
+    ]
+    plans = [make_plan(graph, score, 1, 2**33) for score in scores]
+    with open_door(**keys) as door:
+        with pytest.raises(ZeroDivisionError):
+            measure(graph, plans[1], scores[1], progress=lambda share: 1 / (share < 0.3), door=door)
+        for score, plan in zip(scores, plans, strict=True):
+            here, there = measure(graph, plan, score), measure(graph, plan, score, door=door)
+            assert here.samples == there.samples == (score.samples or graph.n)
+            for column in ("betweenness", "lower", "upper", "std_error"):
+                assert getattr(here, column).tobytes() == getattr(there, column).tobytes(), (score, column)
+
+
+def test_a_graph_that_is_only_in_memory_cannot_travel(keys: dict[str, Any]) -> None:
+    """The error arrives as itself, and says what to do."""
+    parties = pl.Series("party", list("abcde"))
+    alone = Graph.from_arcs(parties, np.arange(5), (np.arange(5) + 1) % 5, directed=False)
+    score = Score(method="exact")
+    with open_door(**keys) as door, pytest.raises(SettingsError, match="save and open it first"):
+        measure(alone, make_plan(alone, score, 1, 2**33), score, door=door)
 
 
 def test_every_door_publishes_the_same_bytes(tmp_path: Path, door: str) -> None:

@@ -553,12 +553,14 @@ def test_a_row_delivered_twice_counts_once(tmp_path: Path, kind: str) -> None:
     assert without.rows("used") == reading.rows("used") + 4
 
 
-def test_a_day_of_duplicates_alone_is_missing(tmp_path: Path) -> None:
-    for day in (0, 1):
-        write(tmp_path / "log" / f"{day}.parquet", table(["a"], ["b"], [at(days=day)], id=[7]))
+def test_only_rows_of_the_window_make_a_duplicate(tmp_path: Path) -> None:
+    """A first delivery before the window takes nothing from it; a day of second deliveries alone is missing."""
+    write(tmp_path / "log" / "0.parquet", table(["a", "a"], ["b", "b"], [at(days=-1), at()], id=[7, 7]))
+    write(tmp_path / "log" / "1.parquet", table(["a"], ["b"], [at(days=1)], id=[7]))
     reading = read(tmp_path / "log", tmp_path / "work", id=True, first=date(2026, 3, 2))
-    assert reading.missing_days == (date(2026, 3, 3),)
     assert ties_of(reading) == {("a", "b"): (1, None, 1, NOON, NOON)}
+    assert reading.missing_days == (date(2026, 3, 3),)
+    assert {o: reading.rows(o) for o in ("used", "filtered", "duplicate")} == {"used": 1, "filtered": 1, "duplicate": 1}
 
 
 def test_duplicates_do_not_depend_on_how_the_log_is_cut(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:

@@ -204,7 +204,11 @@ def test_probe_predicts(build, monkeypatch):
     """On a busy machine a prediction may be far off; a wrong formula would be off by orders of magnitude."""
     monkeypatch.setattr(plan_networkit, "TINY", 0)
     graph = build(1500, random_arcs(1500, 9000), True)
-    for score in (networkit(method="exact"), networkit(method="pivots", samples=1000), networkit(method="paths", samples=1000)):
+    for score in (
+        networkit(method="exact"),
+        networkit(method="pivots", samples=1000),
+        networkit(method="paths", samples=1000),
+    ):
         plan = make_plan(graph, score, 1, MEMORY)
         start = time.perf_counter()
         measure(graph, plan, score)

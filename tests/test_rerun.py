@@ -8,6 +8,7 @@ import random
 import subprocess
 import sys
 from datetime import date
+from itertools import pairwise
 from pathlib import Path
 
 import polars as pl
@@ -122,21 +123,18 @@ def test_threads_and_the_cut_change_nothing(tmp_path: Path) -> None:
 
 
 def test_the_order_and_cut_of_files_change_no_result(tmp_path: Path) -> None:
-    """The same rows under other file names, in another order, give the same scores and ties."""
-    draw = random.Random(2)
+    """The same rows in another order, cut into other files, give the same scores and ties."""
+    every = pl.concat([rows(day, PAIRS) for day in DAYS]).with_columns(value=pl.lit(0.1))
+    shuffled = every.sample(fraction=1, shuffle=True, seed=2)
+    assert not shuffled.equals(every)
     found = []
-    for name in ("one", "two"):
+    for name, frame, cuts in (("one", every, [0, 5, 32]), ("two", shuffled, [0, 20, 21, 32])):
+        (tmp_path / name / "log").mkdir(parents=True)
         site = Site(tmp_path / name, '[score]\nmethod = "exact"\n', log=False)
-        (tmp_path / name).mkdir()
-        site.settings('[score]\nmethod = "exact"\n')
-        every = pl.concat([rows(day, PAIRS) for day in DAYS]).with_columns(value=pl.lit(0.1))
-        every = every if name == "one" else every.sample(fraction=1, shuffle=True, seed=draw.randrange(9))
-        cuts = [0, 5, every.height] if name == "one" else [0, 20, 21, every.height]
-        for number in range(len(cuts) - 1):
-            site.log.mkdir(exist_ok=True)
-            part = every.slice(cuts[number], cuts[number + 1] - cuts[number])
-            part.write_parquet(site.log / f"{9 - number}.parquet")
+        for start, stop in pairwise(cuts):
+            frame[start:stop].write_parquet(site.log / f"{99 - start}.parquet")
         assert site.score().code == 0
         found.append({table: site.table(table) for table in ("scores", "ties")})
     for table in found[0]:
         assert found[0][table].equals(found[1][table])
+    assert found[0]["ties"]["amount"].to_list() == [0.4] * len(PAIRS)

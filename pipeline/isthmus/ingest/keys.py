@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 
+import numpy as np
 import polars as pl
 import pyarrow as pa
 
@@ -25,9 +26,11 @@ def code_columns(columns: dict[str, pa.ChunkedArray]) -> tuple[pl.Series, pl.Dat
     book = raw.cast(pl.String)
     clean = normalise(book)
     usable = clean.str.len_bytes() > 0
-    if not (usable & (clean == book)).all():  # some are empty, or not yet as they count
+    if (clean == book).filter(usable).all():
+        book, places = book.filter(usable), (usable.cum_sum() - 1).cast(pl.UInt32).set(~usable, None)
+    else:  # some keys are equal only once normalised
         book, places = _encoded(clean.set(~usable, None).to_arrow())
-        codes = places.gather(codes)
+    codes = places.gather(codes)
     coded, start = {}, 0
     for name, array in zip(columns, arrays, strict=True):
         coded[name] = codes.slice(start, len(array)).alias(name)
@@ -42,12 +45,14 @@ def normalise(values: pl.Series) -> pl.Series:
 
 
 def shared_book(books: Sequence[pl.Series]) -> tuple[pl.Series, list[pl.Series]]:
-    """All keys of some books, each once, and for each book the positions of its keys there (UInt32)."""
-    book, codes = _encoded(pl.concat([book.alias("party") for book in books], rechunk=False).to_arrow())
-    starts = [0]
-    for each in books:
-        starts.append(starts[-1] + len(each))
-    return book.alias("party"), [codes.slice(at, len(each)) for at, each in zip(starts, books, strict=False)]
+    """All keys of some books, sorted by their bytes, each once; and for each book where its keys are (UInt32)."""
+    keys, codes = _encoded(pl.concat([book.alias("party") for book in books], rechunk=False).to_arrow())
+    order = keys.arg_sort()
+    rank = pl.Series(np.empty(len(keys), np.uint32)).scatter(order, np.arange(len(keys), dtype=np.uint32))
+    places = rank.gather(codes)
+    ends = np.cumsum([len(book) for book in books])
+    parts = [places.slice(end - len(book), len(book)) for end, book in zip(ends, books, strict=True)]
+    return keys.gather(order).alias("party"), parts
 
 
 def _encoded(column: pa.ChunkedArray | pa.Array) -> tuple[pl.Series, pl.Series]:

@@ -102,7 +102,7 @@ def add_up_rows(task: tuple[PartResult, str]) -> PartResult:
 def _write_ties(rows: pl.DataFrame, folder: Path) -> tuple[int, ...]:
     days = ties_of_rows(rows).partition_by("day", as_dict=True, include_key=False)
     for (day,), ties in days.items():
-        ties.write_ipc(folder / f"ties-{day}.arrow", compression="lz4")
+        ties.write_ipc(folder / f"ties-{day}.arrow")
     return tuple(sorted(day for (day,) in days))
 
 

@@ -28,7 +28,7 @@ from isthmus.ingest.rows import (
     read_part,
     used_rows,
 )
-from isthmus.ingest.ties import DaySource, Merge, add_up, merge_day
+from isthmus.ingest.ties import Merge, Source, add_up, merge_day, one_book
 from isthmus.settings import Log
 from isthmus.store import fresh
 from isthmus.watch import Watch
@@ -93,11 +93,13 @@ def read_window(
         raise DataRefused(_nothing_used(outcomes, first_day, last_day))
     with watch.stage("combine") as tick:
         days = fresh(work / "days")
-        merges = [_day(day, results, days) for day in window if any(day in result.days for result in results)]
+        used = [result for result in results if any(day in window for day in result.days)]
+        book = one_book([Path(result.folder) for result in used], days / "parties.arrow")
+        present = [day for day in window if any(day in result.days for result in used)]
+        merges = [_day(day, used, days) for day in present]
         door.run(merge_day, merges, tick)
-        ties = add_up([merge.merged for merge in merges], with_amounts=bool(log.columns.amount))
-    present = {Path(merge.target).name for merge in merges}
-    missing = tuple(day_of(day) for day in window if str(day_of(day)) not in present)
+        ties = add_up(book, [merge.target for merge in merges], with_amounts=bool(log.columns.amount))
+    missing = tuple(day_of(day) for day in window if day not in present)
     refused = _refused(found, results, window)
     fresh(scratch)
     return Reading(ties, refused, outcomes, missing)
@@ -151,11 +153,11 @@ def _nothing_used(outcomes: dict[str, dict[str, int]], first_day: date, last_day
 
 def _day(day: int, results: Sequence[PartResult], days: Path) -> Merge:
     sources = tuple(
-        DaySource(f"{result.folder}/ties-{day}.arrow", f"{result.folder}/parties.arrow")
+        Source(f"{result.folder}/ties-{day}.arrow", f"{result.folder}/places.arrow")
         for result in results
         if day in result.days
     )
-    return Merge(str(days / str(day_of(day))), sources)
+    return Merge(str(days / f"{day_of(day)}.arrow"), sources)
 
 
 def _refused(found: Survey, results: Sequence[PartResult], window: range) -> pl.DataFrame:

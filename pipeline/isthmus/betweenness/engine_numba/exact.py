@@ -13,9 +13,9 @@ from isthmus.betweenness.engine_numba.reductions import Reduced
 from isthmus.betweenness.engine_numba.subgraphs import Floats
 from isthmus.graph.arrays import Arrays, Ids
 
-# Work of a block, in arcs and vertices touched per batch of lanes: about an eighth of a second where neighbours are near
-# each other, up to a second in a random graph, and Ctrl-C waits for it. It depends on nothing but the graph, so the
-# blocks, and with them the bits of the result, are the same for any threads.
+# Work of a block, in arcs and vertices touched per batch of lanes: about an eighth of a second where neighbours are
+# near each other, up to a second in a random graph, and Ctrl-C waits for it. It depends on nothing but the graph, so
+# the blocks, and with them the bits of the result, are the same for any threads.
 BLOCK_WORK = 1_000_000
 MOST_LANES = 64
 
