@@ -110,7 +110,7 @@ def write(root: Path, found: list[File], how: dict) -> Log:
 
 
 # no deadline: the machine that runs the tests may be busy with something else
-CALM = {"deadline": None, "suppress_health_check": list(HealthCheck)}
+CALM = {"deadline": None, "report_multiple_bugs": False, "suppress_health_check": list(HealthCheck)}
 
 
 @settings(max_examples=120, **CALM)

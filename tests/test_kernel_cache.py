@@ -28,7 +28,7 @@ def run(home: Path, **environment: str) -> dict[Path, int]:
     known = {key: value for key, value in os.environ.items() if key not in ("ISTHMUS_KERNEL_CACHE", "NUMBA_CACHE_DIR")}
     places = {"HOME": str(home), "XDG_CACHE_HOME": str(home / ".cache")}
     ran = subprocess.run(
-        [sys.executable, "-c", PROGRAM], env=known | places | environment, capture_output=True, text=True
+        [sys.executable, "-c", PROGRAM], cwd=home, env=known | places | environment, capture_output=True, text=True
     )
     assert ran.returncode == 0, ran.stderr
     return {path: path.stat().st_mtime_ns for path in home.rglob("*") if path.is_file()}

@@ -8,14 +8,15 @@ import subprocess
 import sys
 from pathlib import Path
 
+HERE = Path(__file__).parent
 FILES = ["test_kernels_exact.py", "test_kernels_paths.py", "test_sequences_and_stopping.py"]
 
 
 def test_kernel_tests_pass_without_the_compiler() -> None:
     """Fewer and smaller examples: see COMPILED in these files."""
     ran = subprocess.run(
-        [sys.executable, "-m", "pytest", "-p", "no:cacheprovider", "-rf", *FILES],
-        cwd=Path(__file__).parent,
+        [sys.executable, "-m", "pytest", "-p", "no:cacheprovider", "-rf", *(str(HERE / file) for file in FILES)],
+        cwd=HERE.parent,
         env=os.environ | {"NUMBA_DISABLE_JIT": "1"},
         capture_output=True,
         text=True,

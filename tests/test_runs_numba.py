@@ -115,7 +115,7 @@ def test_sampled_runs_are_what_the_parts_give(graph: Graph, score: Score) -> Non
 def test_a_night_that_the_clock_stopped_is_repeated(build: Any, monkeypatch: pytest.MonkeyPatch, method: str) -> None:
     """With the place where it was stopped kept in the plan; the second time the clock stands still, and then races."""
     graph = build(700, scattered(700, 2000, 8, 1.3), True)
-    score = Score(method=method, top=0, minutes=1.0)
+    score = Score(method=method, top=0, minutes=1.0, samples=30 * paths.BLOCK if method == "paths" else 0)
     plan = make_plan(graph, score, 2, MEMORY)
 
     def at_pace(seconds: float) -> Estimate:
