@@ -252,8 +252,12 @@ CASES = {
     "all rows refused": Case(all_refused, REFUSED, ("no usable row", "32 sender is empty", "check --as-of")),
     "an empty window": Case(all_rows_gone, REFUSED, ("2026-03-01..2026-03-04", "check --as-of")),
     "one party": Case(one_party, REFUSED, ("no usable row", "4 self-contact", "check --as-of")),
-    "odd times": Case(odd_times, REFUSED, ("2 of 32 rows were refused", "6.25%", "1.00%", '[gates] refused = "warn"')),
-    "odd amounts": Case(odd_amounts, REFUSED, ("4 of 32 rows", "12.50%", "refused_limit", 'refused = "warn"')),
+    "odd times": Case(
+        odd_times, REFUSED, ("2 of the window's 32 rows were refused", "6.25%", "1.00%", '[gates] refused = "warn"')
+    ),
+    "odd amounts": Case(
+        odd_amounts, REFUSED, ("4 of the window's 32 rows", "12.50%", "refused_limit", 'refused = "warn"')
+    ),
     "newer layout": Case(newer_layout, SETTINGS, ("run.warehouse", "layout 2", "up to 1", "upgrade isthmus")),
     "newer work folder": Case(newer_work, SETTINGS, ("run.work", "layout 7", "up to 1", "another folder in run.work")),
     "broken layout": Case(broken_layout, STORE, ("layout.json", "not readable", "restore or remove it")),
@@ -348,7 +352,7 @@ def test_several_gates_are_told_at_once(site: Site) -> None:
     said = site.score()
     assert said.code == REFUSED
     assert "3 days of the window without a usable row: 2026-03-01, 2026-03-02, 2026-03-03" in said.err
-    assert "1 of 8 rows were refused" in said.err
+    assert "1 of the window's 8 rows were refused" in said.err
 
 
 def test_odd_rows_are_listed_and_the_rest_counts(site: Site) -> None:

@@ -12,8 +12,11 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 import pytest
 
-from isthmus.errors import DataRefused, SettingsError, StoreError
-from isthmus.ingest import files
+from isthmus.cluster import open_door
+from isthmus.errors import DataRefused, SettingsError, StoreError, TryAgain
+from isthmus.ingest import files, read_window, survey
+from isthmus.settings import Log
+from isthmus.watch import Watch
 from logs import (
     EPOCH,
     FIRST,
@@ -634,3 +637,47 @@ def test_amount_widths_may_differ_between_files(tmp_path: Path) -> None:
         amount = pa.array([Decimal(2)], pa.decimal128(12, 2)).cast(type_)
         write(tmp_path / "log" / f"{number}.parquet", table(["a"], ["b"]).append_column("amount", amount))
     assert total(read(tmp_path / "log", tmp_path / "work", amount=True)) == 6.0
+
+
+def test_a_file_replaced_after_its_footer_was_read_is_not_mixed_in(tmp_path: Path) -> None:
+    """Neither silently read with half of its rows nor called damaged: the same command works later."""
+    log, rows = (
+        tmp_path / "log",
+        pl.DataFrame(
+            {
+                "sender": ["a", "b"],
+                "receiver": ["b", "c"],
+                "time": [datetime(2026, 11, 30, 12), datetime(2026, 11, 30, 13)],
+            }
+        ),
+    )
+    log.mkdir()
+    rows.write_parquet(log / "one.parquet")
+    asked, day = Log(path=str(log)), date(2026, 11, 30)
+    with open_door() as door:
+        found = survey(asked, day, day, door)
+        rows.head(1).write_parquet(log / "one.parquet")
+        with pytest.raises(TryAgain, match=r"one\.parquet was changed while it was being read"):
+            read_window(found, asked, day, day, tmp_path / "work", door, Watch())
+
+
+def test_links_are_followed_and_dead_ones_told(tmp_path: Path) -> None:
+    log, elsewhere, day = tmp_path / "log", tmp_path / "elsewhere", date(2026, 11, 30)
+    rows = pl.DataFrame({"sender": ["a"], "receiver": ["b"], "time": [datetime(2026, 11, 30, 12)]})
+    log.mkdir()
+    elsewhere.mkdir()
+    rows.write_parquet(elsewhere / "one.parquet")
+    (log / "dt=2026-11-30").symlink_to(elsewhere)
+    with open_door() as door:
+        assert survey(Log(path=str(log)), day, day, door).rows == 1
+        (log / "two.parquet").symlink_to(tmp_path / "nothing")
+        with pytest.raises(StoreError, match=r"two\.parquet is a link to nothing"):
+            survey(Log(path=str(log)), day, day, door)
+
+
+def test_two_columns_of_one_name_are_refused(tmp_path: Path) -> None:
+    table = pa.table([["a"], ["b"], ["c"], [datetime(2026, 11, 30)]], names=["sender", "sender", "receiver", "time"])
+    pq.write_table(table, tmp_path / "one.parquet")
+    day = date(2026, 11, 30)
+    with open_door() as door, pytest.raises(DataRefused, match="2 columns named 'sender'"):
+        survey(Log(path=str(tmp_path)), day, day, door)

@@ -176,7 +176,8 @@ def test_a_night_agrees_with_the_oracle(log: tuple[list[File], dict], directed: 
         scores = run_night(asked, LAST, Watch()).scores
     value = dict(zip(parties, oracles.betweenness(len(parties), arcs, directed), strict=True))
     assert set(scores["party"]) == set(parties)
-    assert dict(scores.select("party", "betweenness").iter_rows()) == pytest.approx(value, rel=1e-12, abs=1e-15)
+    # published to 11 significant digits
+    assert dict(scores.select("party", "betweenness").iter_rows()) == pytest.approx(value, rel=1e-10, abs=1e-15)
     ranked = scores.sort("rank").select("betweenness", "party").rows()
     assert all((-a, party) < (-b, other) for (a, party), (b, other) in pairwise(ranked))
     for side, counts in ((0, "contacts_out"), (1, "contacts_in")):

@@ -68,7 +68,7 @@ class TestAuto:
         # 60 s / 0.25 s = 240, rounded down to a power of two
         assert (plan.method, plan.samples, plan.limit, plan.threads) == ("paths", 128, "minutes", 1)
         assert plan.reason.startswith("exact would take 2.5 min of the 1 min allowed; 128 paths")
-        assert "pivots would promise" in plan.reason
+        assert "pivots would reach about" in plan.reason
         assert plan.predicted_seconds <= 60
 
     def test_pivots_when_many_threads_make_them_narrower(self, slow, graph, monkeypatch):

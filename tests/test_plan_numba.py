@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 import pytest
 
-from isthmus.betweenness import make_plan, measure
+from isthmus.betweenness import betweenness, make_plan, measure
 from isthmus.betweenness.engine_numba import costs, exact, paths, pivots
 from isthmus.errors import SettingsError
 from isthmus.graph import Graph
@@ -54,7 +54,7 @@ class TestAuto:
         plan = make_plan(graph, Score(minutes=0.5), 2, MEMORY)
         assert plan.reason.startswith("exact would take 5.0 min of the 0.5 min allowed")
         other = {"pivots": "paths", "paths": "pivots"}[plan.method]
-        assert f"{other} would promise" in plan.reason
+        assert f"{other} would reach about" in plan.reason
         assert plan.half_width <= make_plan(graph, Score(method=other, minutes=0.5), 2, MEMORY).half_width
 
     def test_lengths_leave_pivots(self, slow: None, build: Any) -> None:
@@ -144,3 +144,12 @@ def test_fewest_samples_by_bisection() -> None:
     for wanted in (0.5, 0.1, 0.03):
         assert costs._fewest(lambda samples: 1 / math.sqrt(samples), wanted, 10**6) == math.ceil(1 / wanted**2 - 1e-6)
     assert costs._fewest(lambda samples: 1.0, 0.5, 100) == 100
+
+
+def test_more_draws_than_sources_are_never_planned(build: Any) -> None:
+    """A width that fewer sources than all reach, and one that only all of them do."""
+    graph = build(60, [(i, (i * 7 + k) % 60) for i in range(60) for k in (1, 2, 5) if i != (i * 7 + k) % 60], True)
+    for half_width in (0.5, 1e-6):
+        estimate = betweenness(graph, method="pivots", half_width=half_width, top=0)
+        assert estimate.samples <= graph.n
+        assert estimate.half_widths.max() <= half_width

@@ -328,3 +328,18 @@ def test_check_prints_the_settings_in_force(tmp_path: Path) -> None:
     assert Settings.model_validate(tomllib.loads(said.out)) == load(tmp_path / "c.toml")
     said = isthmus("check", tmp_path / "c.toml", "--settings", "--json")
     assert json.loads(said.out) == load(tmp_path / "c.toml").model_dump()
+
+
+@pytest.mark.parametrize(
+    ("run", "words"),
+    [
+        ('warehouse = "log/tables"', "run.warehouse"),
+        ('work = "log"', "run.work"),
+        ('warehouse = "x"\nwork = "x"', "run.warehouse and run.work are both"),
+    ],
+)
+def test_what_is_written_lies_apart_from_the_log(tmp_path: Path, run: str, words: str) -> None:
+    config = tmp_path / "c.toml"
+    config.write_text(f'series = "s"\n[log]\npath = "log"\n[run]\n{run}\n')
+    with pytest.raises(SettingsError, match=words):
+        load(config)

@@ -67,7 +67,7 @@ def _table(name: str) -> str:
     return name
 
 
-Config = Annotated[Path, typer.Argument(metavar="CONFIG", help="the log's settings, a TOML file")]
+Config = Annotated[Path, typer.Argument(metavar="CONFIG", readable=False, help="the log's settings, a TOML file")]
 AsOf = Annotated[
     date | None,
     typer.Option(

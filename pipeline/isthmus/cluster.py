@@ -17,6 +17,7 @@ from isthmus.errors import StoreError
 
 __all__ = ["Door", "Here", "open_door"]
 
+WORKER_SECONDS = 30  # workers that a batch system starts may come a little later than the scheduler
 ANSWER_SECONDS = 10  # a scheduler that is there answers in one
 
 Task = TypeVar("Task")
@@ -143,6 +144,13 @@ def open_door(*, workers: int = 0, threads: int = 0, scheduler: str = "", scratc
                 "correct the address, or leave the key empty to run in this process"
             ) from None
         with client:
+            try:
+                client.wait_for_workers(1, timeout=WORKER_SECONDS)
+            except TimeoutError:
+                raise StoreError(
+                    f"the Dask scheduler at run.scheduler = {scheduler!r} has no worker after {WORKER_SECONDS} s; "
+                    "start workers that see the log, run.work and this version of isthmus"
+                ) from None
             yield _Elsewhere(client)
     elif workers:
         from distributed import Client, LocalCluster

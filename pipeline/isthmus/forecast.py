@@ -13,7 +13,7 @@ from isthmus.cluster import open_door
 from isthmus.errors import DataRefused, GateStopped
 from isthmus.gates import pass_gates
 from isthmus.graph import Graph
-from isthmus.ingest import Sample, Survey, sample_ties, survey
+from isthmus.ingest import Sample, Survey, in_window, sample_ties, survey
 from isthmus.settings import Settings
 from isthmus.tables import LAYOUT
 
@@ -83,8 +83,8 @@ def _gates(
     try:
         pass_gates(
             settings.gates,
-            rows_read=sum(sum(reasons.values()) for reasons in sample.outcomes.values()),
-            rows_refused=sum(sample.outcomes["refused"].values()),
+            rows=in_window(sample.outcomes),
+            refused=sample.outcomes["refused"],
             missing_days=tuple(day for day in days if day not in sample.days) if whole else (),
             warn=warnings.append,
         )

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from datetime import date
 
 from isthmus.errors import GateStopped
@@ -12,9 +12,17 @@ __all__ = ["pass_gates"]
 
 
 def pass_gates(
-    gates: Gates, *, rows_read: int, rows_refused: int, missing_days: tuple[date, ...], warn: Callable[[str], None]
+    gates: Gates,
+    *,
+    rows: int,
+    refused: Mapping[str, int],
+    missing_days: tuple[date, ...],
+    warn: Callable[[str], None],
 ) -> None:
-    """Hold the reading against the gates. Raises GateStopped, naming every gate that stops the night."""
+    """Hold the reading against the gates. Raises GateStopped, naming every gate that stops the night.
+
+    `rows`: those of the window, whatever became of them; `refused`: reason -> rows.
+    """
     stops: list[str] = []
 
     def judge(gate: Gate, name: str, text: str) -> None:
@@ -25,13 +33,14 @@ def pass_gates(
 
     if missing_days:
         judge(gates.missing_days, "missing_days", _missing(missing_days))
-    share = rows_refused / rows_read
+    share = sum(refused.values()) / rows
     if share > gates.refused_limit:
+        reasons = ", ".join(f"{number} {reason}" for reason, number in refused.items())
         judge(
             gates.refused,
             "refused",
-            f"{rows_refused} of {rows_read} rows were refused, a share of {share:.2%} where "
-            f"gates.refused_limit allows {gates.refused_limit:.2%}",
+            f"{sum(refused.values())} of the window's {rows} rows were refused, a share of {share:.2%} where "
+            f"gates.refused_limit allows {gates.refused_limit:.2%} ({reasons})",
         )
     if stops:
         raise GateStopped(

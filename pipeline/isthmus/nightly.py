@@ -15,7 +15,7 @@ from isthmus.cluster import open_door
 from isthmus.gates import pass_gates
 from isthmus.graph import Graph, describe
 from isthmus.ingest import read_window, survey
-from isthmus.publish import Night, manifest, plan_once, publish, remember, run_id_of, run_row
+from isthmus.publish import Night, input_id_of, manifest, plan_once, publish, remember, run_id_of, run_row
 from isthmus.settings import Settings
 from isthmus.tables import LAYOUT
 from isthmus.watch import Watch
@@ -57,8 +57,8 @@ def run_night(settings: Settings, as_of: date, watch: Watch) -> Outcome:
         reading = read_window(found, settings.log, first_day, last_day, work, door, watch)
         pass_gates(
             settings.gates,
-            rows_read=reading.rows_read,
-            rows_refused=reading.rows("refused"),
+            rows=reading.rows_in_window,
+            refused=reading.outcomes["refused"],
             missing_days=reading.missing_days,
             warn=watch.warning,
         )
@@ -67,12 +67,13 @@ def run_night(settings: Settings, as_of: date, watch: Watch) -> Outcome:
             built.save(store.fresh(work / "snapshot"))
             graph = Graph.open(work / "snapshot")
             parties = describe(graph, reading.ties)
-        run_id = run_id_of(settings, as_of, reading)
+        input_id = input_id_of(settings, as_of, reading)
         with watch.stage("plan"):
-            plan = plan_once(work / "plan.json", run_id, graph, settings)
+            plan = plan_once(work / "plan.json", input_id, graph, settings)
         with watch.stage("score") as tick:
             estimate = measure(graph, plan, settings.score, run.threads, tick, door if run.elsewhere else None)
-        remember(work / "plan.json", run_id, plan, estimate)
+        remember(work / "plan.json", input_id, plan, estimate)
+    run_id = run_id_of(settings.series, as_of, input_id, estimate)
     if graph.n < 3:
         watch.warning(f"{graph.n} parties: with fewer than three nobody can stand between others, so all scores are 0")
     night = Night(warehouse, settings.series, as_of)

@@ -166,6 +166,11 @@ class Settings(Section):
                 f"score.max_hops = {self.score.max_hops} counts arcs, so it cannot be combined with graph.distance = "
                 f'"{self.graph.distance}"; set max_hops = 0 or distance = "hops"'
             )
+        if self.graph.distance != "hops" and self.score.method == "paths" and self.score.engine == "numba":
+            raise ValueError(
+                f'score.method = "paths" of engine = "numba" searches by hops, so it cannot be combined with '
+                f'graph.distance = "{self.graph.distance}"; set method = "pivots" or "auto"'
+            )
         if self.run.workers and self.run.scheduler:
             raise ValueError(
                 f'run.workers = {self.run.workers} and run.scheduler = "{self.run.scheduler}" exclude each other; '
@@ -203,7 +208,23 @@ def load(path: str | Path) -> Settings:
         update={key: _resolve(home, getattr(settings.run, key)) for key in ("warehouse", "work")}
     )
     log = settings.log.model_copy(update={"path": _resolve(home, settings.log.path)})
+    _apart(path, log.path, run)
     return settings.model_copy(update={"run": run, "log": log})
+
+
+def _apart(path: Path, log: str, run: Run) -> None:
+    """Raise SettingsError when what is written would be read as a log, or both folders are one."""
+    warehouse, work = Path(run.warehouse).resolve(), Path(run.work).resolve()
+    if warehouse == work:
+        raise SettingsError(
+            f"settings {path}:\n  run.warehouse and run.work are both {warehouse}; readers must not see work"
+        )
+    for key, folder in (("run.warehouse", warehouse), ("run.work", work)):
+        if folder.is_relative_to(Path(log).resolve()):
+            raise SettingsError(
+                f"settings {path}:\n  {key} = {folder} lies inside log.path = {log}, so it would be read "
+                "as a log; name a folder outside"
+            )
 
 
 def _resolve(home: Path, text: str) -> str:

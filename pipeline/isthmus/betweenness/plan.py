@@ -24,10 +24,10 @@ class Plan:
     """What `measure` will do. Plain values only, so that it can be recorded and reused by a re-run of the night.
 
     `samples`: sources or pairs to draw (for exact, the number of parties). `half_width`: promised to every party at
-    once, on Freeman's scale, before clipping to 0..1; 0 when exact. `limit` says what set `samples`: exact, samples,
-    half_width or minutes. `blocks`: parts that the draws are made in, where that is fixed beforehand. `lanes`: sources
-    worked on at once by a thread. `reached`: where the clock stopped a former run of this plan; a re-run stops there
-    again, and gives the same numbers. `reason`: one sentence for people.
+    once (networkit) or expected of the widest (numba), on Freeman's scale, before clipping to 0..1; 0 when exact.
+    `limit` says what set `samples`: exact, samples, half_width or minutes. `blocks`: parts that the draws are made in,
+    where that is fixed beforehand. `lanes`: sources worked on at once by a thread. `reached`: where the clock stopped a
+    former run of this plan; a re-run stops there again, and gives the same numbers. `reason`: one sentence for people.
     """
 
     engine: str
@@ -83,7 +83,7 @@ def make_plan(graph: Graph, score: Score, threads: int, memory_bytes: int) -> Pl
         raise SettingsError("no method fits: " + "; ".join(refusals))
     # narrower than asked is worth nothing, so among offers that reach the width asked for the quicker one wins
     best = min(offers, key=lambda o: (max(o.half_width, score.half_width), o.predicted_seconds))
-    others = "".join(f"; {o.method} would promise ±{o.half_width:.2g}" for o in offers if o is not best)
+    others = "".join(f"; {o.method} would reach about ±{o.half_width:.2g}" for o in offers if o is not best)
     return replace(best, reason=f"{why}; {best.reason}{others}")
 
 

@@ -7,7 +7,7 @@ import glob
 import json
 import os
 import re
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from datetime import date, timedelta
 from fractions import Fraction
@@ -43,13 +43,17 @@ class RowGroup:
 
 @dataclass(frozen=True)
 class LogFile:
-    """One log file as its footer describes it. `kinds`: our column name -> what type it holds."""
+    """One log file as its footer describes it. `state`: see `state_of`. `kinds`: our column name -> its type."""
 
     path: str
     name: str
-    size: int
+    state: tuple[int, int]
     kinds: dict[str, Kind]
     groups: tuple[RowGroup, ...]
+
+    @property
+    def size(self) -> int:
+        return self.state[0]
 
     @property
     def rows(self) -> int:
@@ -62,6 +66,7 @@ class Part:
 
     path: str
     name: str
+    state: tuple[int, int]
     groups: tuple[int, ...]
     first_row: int
     rows: int
@@ -137,7 +142,7 @@ def _list(path: str) -> tuple[str, list[str]]:
         root, paths = str(Path(path).parent), [path]
     elif os.path.isdir(path):
         root = path
-        every = [str(found) for found in Path(path).rglob("*") if found.is_file() and not _hidden(found, path)]
+        every = [str(found) for found in _walk(path) if not _hidden(found, path)]
         paths = [name for name in every if name.lower().endswith(SUFFIXES)]
         if not paths:
             raise DataRefused(
@@ -147,6 +152,22 @@ def _list(path: str) -> tuple[str, list[str]]:
     else:
         raise StoreError(f"log.path = {path!r} does not exist; check the path, and that the disk is mounted")
     return root, sorted(paths)
+
+
+def _walk(root: str) -> Iterator[Path]:
+    """Every file below the folder, through links too. Raises StoreError rather than pass over what cannot be read."""
+
+    def refuse(error: OSError) -> None:
+        raise StoreError(
+            f"cannot read the log folder {error.filename}: {error.strerror}; let this user read it, or move it away"
+        )
+
+    for folder, _, names in os.walk(root, onerror=refuse, followlinks=True):
+        for name in names:
+            found = Path(folder, name)
+            if name.lower().endswith(SUFFIXES) and not found.exists():
+                raise StoreError(f"log file {found.relative_to(root)} is a link to nothing; mend or remove it")
+            yield found
 
 
 def _hidden(path: Path, root: str) -> bool:
@@ -191,15 +212,30 @@ def damaged(name: str, error: Exception) -> DataRefused:
     return DataRefused(f"log file {name} is not whole Parquet ({what}); deliver it again or move it out of log.path")
 
 
+def state_of(path: str, name: str) -> tuple[int, int]:
+    """Size in bytes and time of change in nanoseconds: what tells that a file was replaced. Raises StoreError."""
+    try:
+        told = os.stat(path)
+    except OSError as error:
+        raise StoreError(f"cannot read log file {name}: {error.strerror}; check that it is readable") from None
+    return told.st_size, told.st_mtime_ns
+
+
 def _look(look: _Look) -> list[LogFile]:
     return [_footer(path, os.path.relpath(path, look.root), look.columns) for path in look.paths]
 
 
 def _footer(path: str, name: str, columns: dict[str, str]) -> LogFile:
+    state = state_of(path, name)
     with open_parquet(path, name) as parquet:
         schema = parquet.schema_arrow
         kinds: dict[str, Kind] = {}
         for ours, theirs in columns.items():
+            if schema.names.count(theirs) > 1:
+                raise DataRefused(
+                    f"log file {name} has {schema.names.count(theirs)} columns named {theirs!r} (log.columns.{ours}); "
+                    "write it with one"
+                )
             if theirs not in schema.names:
                 near = difflib.get_close_matches(theirs, schema.names, n=1)
                 hint = f"did you mean {near[0]}?" if near else f"it has {', '.join(schema.names)}"
@@ -209,7 +245,7 @@ def _footer(path: str, name: str, columns: dict[str, str]) -> LogFile:
                 )
             kinds[ours] = kind_of(schema.field(theirs).type, ours, theirs, name)
         times = _time_bounds(parquet.metadata, columns["time"])
-        return LogFile(path, name, os.path.getsize(path), kinds, tuple(times))
+        return LogFile(path, name, state, kinds, tuple(times))
 
 
 def _time_bounds(footer: Any, column: str) -> list[RowGroup]:
@@ -259,7 +295,7 @@ def _cut(file: LogFile, lowest: int, highest: int) -> list[Part]:
     def close() -> None:
         nonlocal run, rows
         if run:
-            parts.append(Part(file.path, file.name, tuple(run), first_row, rows))
+            parts.append(Part(file.path, file.name, file.state, tuple(run), first_row, rows))
         run, rows = [], 0
 
     for number, group in enumerate(file.groups):

@@ -11,8 +11,9 @@ from pathlib import Path
 import polars as pl
 import pyarrow as pa
 
+from isthmus.errors import TryAgain
 from isthmus.ingest.columns import DAY, PER_SECOND
-from isthmus.ingest.files import Part, damaged, open_parquet
+from isthmus.ingest.files import Part, damaged, open_parquet, state_of
 from isthmus.ingest.keys import code_columns
 from isthmus.ingest.ties import AMOUNT, ties_of_rows
 
@@ -142,13 +143,21 @@ def _load(task: PartTask) -> tuple[pl.Series, pl.DataFrame, int]:
         try:
             table = parquet.read_row_groups(part.groups, columns=wanted)
         except (OSError, pa.ArrowException) as error:
+            _unchanged(part)
             raise damaged(part.name, error) from None
+    _unchanged(part)
     arrays = {ours: table.column(theirs) for ours, theirs in task.columns.items()}
     book, frame = code_columns({side: arrays[side] for side in SIDES})
     rest = [pl.Series(ours, _plain(array)) for ours, array in arrays.items() if ours not in SIDES]
     number = pl.int_range(part.first_row, part.first_row + pl.len())
     frame = frame.with_columns(*rest).with_columns(number.alias("row"), pl.col("time").cast(pl.Int64))
     return book, frame, _per_day(arrays["time"].type)
+
+
+def _unchanged(part: Part) -> None:
+    """Raise TryAgain when the file is no longer the one whose footer was read."""
+    if state_of(part.path, part.name) != part.state:
+        raise TryAgain(f"log file {part.name} was changed while it was being read; run again once the log is written")
 
 
 def _plain(array: pa.ChunkedArray) -> pa.ChunkedArray:

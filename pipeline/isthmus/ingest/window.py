@@ -63,8 +63,17 @@ class Reading:
         return sum(self.outcomes.get(outcome, {}).values())
 
     @property
+    def rows_in_window(self) -> int:
+        return in_window(self.outcomes)
+
+    @property
     def rows_read(self) -> int:
         return sum(self.rows(outcome) for outcome in self.outcomes)
+
+
+def in_window(outcomes: dict[str, dict[str, int]]) -> int:
+    """Rows of the window, whatever became of them: all but those of other days."""
+    return sum(sum(reasons.values()) for reasons in outcomes.values()) - outcomes[FILTERED].get(OUTSIDE, 0)
 
 
 def read_window(

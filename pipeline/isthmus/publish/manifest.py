@@ -18,11 +18,20 @@ from isthmus.settings import Settings
 from isthmus.tables import LAYOUT
 from isthmus.watch import Watch
 
-__all__ = ["manifest", "run_id_of", "run_row"]
+__all__ = ["input_id_of", "manifest", "run_id_of", "run_row"]
 
 
-def run_id_of(settings: Settings, as_of: date, reading: Reading) -> str:
-    """The same night, settings, version and input give the same id, so that a re-run gives the same bytes."""
+def run_id_of(series: str, as_of: date, input_id: str, estimate: Estimate) -> str:
+    """The same night, settings, version and input, measured to the same number of samples, give the same id.
+
+    So a re-run gives the same bytes, and two runs that the clock stopped at different places have different ids.
+    """
+    told = f"{input_id} {estimate.method} {estimate.samples}"
+    return f"{series}-{as_of}-{hashlib.blake2b(told.encode(), digest_size=8).hexdigest()}"
+
+
+def input_id_of(settings: Settings, as_of: date, reading: Reading) -> str:
+    """A hash of all that goes into a night's measurement."""
     digest = hashlib.blake2b(digest_size=8)
     told = [settings.series, str(as_of), settings.definition, _version(), reading.outcomes, settings.score.top]
     digest.update(json.dumps(told, sort_keys=True).encode())
@@ -30,7 +39,7 @@ def run_id_of(settings: Settings, as_of: date, reading: Reading) -> str:
     for column in reading.ties.iter_columns():
         if column.null_count() < len(column):
             digest.update(np.ascontiguousarray(column.to_physical().to_numpy()).data)
-    return f"{settings.series}-{as_of}-{digest.hexdigest()}"
+    return digest.hexdigest()
 
 
 def run_row(

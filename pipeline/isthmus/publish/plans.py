@@ -14,30 +14,30 @@ from isthmus.store import Batch
 __all__ = ["plan_once", "remember"]
 
 
-def plan_once(path: Path, run_id: str, graph: Graph, settings: Settings) -> Plan:
-    """The plan kept in `path` if it was made for this run_id and fits the memory, else a new one, which is then kept.
+def plan_once(path: Path, input_id: str, graph: Graph, settings: Settings) -> Plan:
+    """The plan kept in `path` if it was made for this input_id and fits the memory, else a new one, which is then kept.
 
     Raises what `make_plan` raises, and StoreError when the plan cannot be kept.
     """
     try:
         kept = json.loads(path.read_text())
         plan = Plan(**kept["plan"])
-        if kept["run_id"] == run_id and plan.predicted_bytes <= settings.run.memory_bytes:
+        if kept["input_id"] == input_id and plan.predicted_bytes <= settings.run.memory_bytes:
             return plan
     except (OSError, ValueError, KeyError, TypeError):
         pass  # none kept, or of another version: make one
     plan = make_plan(graph, settings.score, settings.run.threads, settings.run.memory_bytes)
-    _keep(path, run_id, plan)
+    _keep(path, input_id, plan)
     return plan
 
 
-def remember(path: Path, run_id: str, plan: Plan, estimate: Estimate) -> None:
+def remember(path: Path, input_id: str, plan: Plan, estimate: Estimate) -> None:
     """Where the clock stopped the sampling, so that a re-run stops there too. Raises StoreError."""
-    if estimate.stopped_because == "minutes" and estimate.samples != plan.samples:
-        _keep(path, run_id, replace(plan, reached=estimate.samples))
+    if estimate.engine == "numba" and estimate.stopped_because == "minutes":
+        _keep(path, input_id, replace(plan, reached=estimate.samples))
 
 
-def _keep(path: Path, run_id: str, plan: Plan) -> None:
+def _keep(path: Path, input_id: str, plan: Plan) -> None:
     with Batch() as batch:
-        batch.add(path, lambda target: target.write_text(json.dumps({"run_id": run_id, "plan": asdict(plan)})))
+        batch.add(path, lambda target: target.write_text(json.dumps({"input_id": input_id, "plan": asdict(plan)})))
         batch.commit()

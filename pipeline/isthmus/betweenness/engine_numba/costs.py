@@ -153,8 +153,8 @@ class _Planner:
         }[limit]
         sooner = f", sooner if the first {score.top} are settled" if score.top else ""
         said = (
-            f"{samples:,} {unit} ({why}{sooner}) take about {spell_seconds(samples * each)} and promise "
-            f"±{promised:.2g} or less for every party"
+            f"{samples:,} {unit} ({why}{sooner}) take about {spell_seconds(samples * each)}, and "
+            f"the widest interval is expected to be about ±{promised:.2g}"
         )
         return self._plan(method, samples, promised, limit, said, samples * each, needed, threads, lanes)
 
