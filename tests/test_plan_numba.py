@@ -34,7 +34,7 @@ def directed(build: Any) -> Graph:
 def slow(monkeypatch: pytest.MonkeyPatch) -> None:
     """A machine on which a block of sources takes 64 s and a path a quarter: the clock of this one chooses nothing."""
     monkeypatch.setattr(costs, "TINY", 0)
-    each = {"exact_block": 600.0, "pivots_block": 64.0, "paths_block": costs.PILOT_PAIRS / 4}
+    each = {"exact_block": 600.0, "pivots_block": 64.0, "paths_block": 2 * costs.FEWEST_PAIRS / 4}
     monkeypatch.setattr(costs, "_seconds_each", lambda function, tasks, threads: each[function.__name__] / threads)
 
 

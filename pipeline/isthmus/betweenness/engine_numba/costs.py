@@ -27,7 +27,8 @@ TINY = 20_000_000
 NOMINAL_ARCS_PER_SECOND = {False: 1e8, True: 5e6}
 # So many times over the time allowed, one block is enough to know.
 HOPELESS = 4
-PILOT_PAIRS = paths.BLOCK
+# The probe of paths grows until it takes so long, or is a whole block.
+FEWEST_PAIRS, PROBE_SECONDS = 64, 0.3
 # Half-widths come out at this many z * standard error (benchmarks/README.md): pivots pay for unknown variances.
 PIVOTS_OVER_LIMIT = 1.5
 
@@ -114,14 +115,17 @@ class _Planner:
         _warm_up("paths", self.graph, self.score)
         job = self._job(0)
         prepared = blocks.load_paths(job)
-        each = _seconds_each(blocks.paths_block, [(job, block, PILOT_PAIRS) for block in range(threads)], threads)
-        pilot = paths.run_block(prepared, self.score.seed, 0, PILOT_PAIRS)
-        share = (float(pilot.counts.max(initial=0)) + 1) / PILOT_PAIRS
+        pairs, each = FEWEST_PAIRS, 0.0
+        while each < PROBE_SECONDS and pairs < paths.BLOCK:
+            pairs *= 2
+            each = _seconds_each(blocks.paths_block, [(job, block, pairs) for block in range(threads)], threads)
+        pilot = paths.run_block(prepared, self.score.seed, 0, pairs)
+        share = (float(pilot.counts.max(initial=0)) + 1) / pairs
 
         def half_width(samples: int) -> float:
             return self.z * math.sqrt(share * max(1 - share, 0.0) / samples) * n / (n - 2)
 
-        return self._sampled("paths", "pairs", 0, each / PILOT_PAIRS, half_width, needed, threads, 0)
+        return self._sampled("paths", "pairs", 0, each / pairs, half_width, needed, threads, 0)
 
     def _sampled(
         self,

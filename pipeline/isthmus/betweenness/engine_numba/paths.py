@@ -14,7 +14,9 @@ from numpy.typing import NDArray
 from isthmus.betweenness.engine_numba.intervals import Bounds, path_bounds
 from isthmus.betweenness.engine_numba.prepare import Prepared
 
-BLOCK = 1 << 14
+# Pairs per block. A stop, an interrupt and the first look all wait for one, which on a graph of a million parties with
+# long routes takes a minute; shorter blocks would spend their time on clearing memory.
+BLOCK = 1 << 12
 
 
 @dataclass(frozen=True)
