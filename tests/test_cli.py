@@ -346,13 +346,13 @@ def test_ctrl_c(site: Site, monkeypatch: pytest.MonkeyPatch, during: str) -> Non
 
 def test_a_disk_that_fails_outside_the_store_is_told_too(site: Site, monkeypatch: pytest.MonkeyPatch) -> None:
     def fail(*_: object, **__: object) -> None:
-        raise OSError(errno.ENOSPC, "No space left on device", "/work/days/ties.arrow")
+        raise OSError(errno.ENOSPC, "No space left on device", "/mnt/days/ties.arrow")
 
     monkeypatch.setattr(pl.DataFrame, "write_ipc", fail)
     before = site.published()
     said = site.score()
     assert said.code == 74
-    assert "No space left on device: '/work/days/ties.arrow'; check" in said.err
+    assert "No space left on device: '/mnt/days/ties.arrow'; check" in said.err
     assert site.published() == before
 
 
