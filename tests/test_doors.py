@@ -20,7 +20,7 @@ from isthmus import cluster
 from isthmus.betweenness import make_plan, measure
 from isthmus.betweenness.engine_numba import exact, paths, pivots, reductions
 from isthmus.cluster import open_door
-from isthmus.errors import SettingsError
+from isthmus.errors import SettingsError, StoreError
 from isthmus.graph import Graph
 from isthmus.settings import Score
 from nights import DAYS, PAIRS, Site, rows
@@ -64,13 +64,25 @@ def scheduler(tmp_path_factory: pytest.TempPathFactory) -> Iterator[str]:
         yield address
 
 
+def test_a_scheduler_without_workers_is_told(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Not waited for without end."""
+    monkeypatch.setattr(cluster, "WORKER_SECONDS", 1)
+    address = f"tcp://127.0.0.1:{free_port()}"
+    command = ("distributed.cli.dask_scheduler", "--port", address.rpartition(":")[2], "--host", "127.0.0.1")
+    with process(*command, "--no-dashboard"):
+        _wait_for_workers(address, 0)
+        with pytest.raises(StoreError, match="has no worker after 1 s"), cluster.open_door(scheduler=address):
+            pass
+
+
 def _wait_for_workers(address: str, workers: int) -> None:
     from distributed import Client
 
     stop = time.monotonic() + 60
     while True:
         with contextlib.suppress(OSError), Client(address, timeout="5s", set_as_default=False) as client:
-            client.wait_for_workers(workers, timeout=max(1, stop - time.monotonic()))
+            if workers:
+                client.wait_for_workers(workers, timeout=max(1, stop - time.monotonic()))
             return
         assert time.monotonic() < stop, "the scheduler did not come up"
         time.sleep(0.2)

@@ -304,13 +304,6 @@ def test_lengths_that_cannot_be_exact_are_refused(length: int, hops: int, messag
         exact.check_lengths(arrays(3, [(0, 1), (1, 2)], True, [1, length]), hops)
 
 
-def test_lanes_follow_the_memory() -> None:
-    n, m = 1_000_000, 20_000_000
-    assert exact.lanes_within(n, m, exact.bytes_per_thread(n, m, 64)) == 64
-    assert exact.lanes_within(n, m, exact.bytes_per_thread(n, m, 64) - 1) == 32
-    assert exact.lanes_within(n, m, exact.bytes_per_thread(n, m, 8) - 1) == 0
-
-
 @often(60, 30)
 @given(cases())
 def test_the_two_oracles_agree(case: Case) -> None:

@@ -21,7 +21,6 @@ from isthmus.betweenness.engine_numba import kernels_bets
 from isthmus.betweenness.engine_numba.accelerate import COMPILED
 from isthmus.betweenness.engine_numba.intervals import (
     Bounds,
-    chernoff,
     clopper_pearson,
     closeness_to_limit,
     path_bounds,
@@ -196,18 +195,6 @@ def test_a_party_never_hit_is_known_well() -> None:
     _, upper = clopper_pearson(np.array([0]), 10**6, 0.05 / 10**6)
     assert upper[0] == pytest.approx(1 - (0.025 / 10**6) ** 1e-6, rel=1e-9)
     assert upper[0] < 1.8e-5
-
-
-def test_chernoff_contains_clopper_pearson() -> None:
-    counts, samples, alpha = np.arange(0, 101, 5), 100, 1e-4
-    lower, upper = clopper_pearson(counts, samples, alpha)
-    wide_lower, wide_upper = chernoff(counts / samples, samples, alpha)
-    assert (wide_lower <= lower + 1e-12).all()
-    assert (upper <= wide_upper + 1e-12).all()
-    inside = (wide_lower > 0) & (counts > 0)
-    p, q = (counts / samples)[inside], wide_lower[inside]
-    other = np.where(p < 1, (1 - p) * np.log(np.where(p < 1, (1 - p) / (1 - q), 1)), 0)
-    np.testing.assert_allclose(samples * (p * np.log(p / q) + other), math.log(2 / alpha), rtol=1e-6)
 
 
 def test_intervals_of_paths_come_to_freemans_scale_and_split_delta() -> None:

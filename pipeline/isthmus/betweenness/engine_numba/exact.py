@@ -62,11 +62,6 @@ def block_size(graph: Arrays, lanes: int) -> int:
     return max(1, 10 * batches) if graph.out_lengths is not None else lanes * max(1, batches)
 
 
-def lanes_within(n: int, m: int, limit: float) -> int:
-    """Most lanes whose memory per thread stays within `limit` bytes; 0 when not even 8 do."""
-    return next((lanes for lanes in (64, 32, 16, 8) if bytes_per_thread(n, m, lanes) <= limit), 0)
-
-
 def bytes_per_thread(n: int, m: int, lanes: int, weighted: bool = False) -> int:
     """Memory in bytes that one running block takes beside the graph, n vertices and m arcs as reduced.
 

@@ -10,7 +10,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.special import betainccinv, betaincinv, ndtri, xlogy
+from scipy.special import betainccinv, betaincinv, ndtri
 
 Floats = NDArray[np.float64]
 
@@ -43,30 +43,6 @@ def clopper_pearson(counts: NDArray[np.int64], samples: int, alpha: float) -> tu
     none = c == 0
     upper[none] = -np.expm1(np.log(alpha / 2) / samples)
     return lower[which], upper[which]
-
-
-def relative_entropy(p: Floats, q: Floats) -> Floats:
-    """kl(p, q) of two biased coins."""
-    entropy: Floats = xlogy(p, p) - xlogy(p, q) + xlogy(1 - p, 1 - p) - xlogy(1 - p, 1 - q)
-    return entropy
-
-
-def chernoff(means: Floats, samples: int, alpha: float) -> tuple[Floats, Floats]:
-    """For means of `samples` values in [0, 1]: all p with samples * kl(mean, p) <= ln(2 / alpha).
-
-    Hoeffding (1963), Probability inequalities for sums of bounded random variables, theorem 1; by bisection,
-    outwards.
-    """
-    reach = np.log(2 / alpha) / samples
-    inside_low, outside_low = means.copy(), np.zeros_like(means)
-    inside_high, outside_high = means.copy(), np.ones_like(means)
-    for _ in range(60):
-        low, high = (inside_low + outside_low) / 2, (inside_high + outside_high) / 2
-        out = relative_entropy(means, low) > reach
-        outside_low, inside_low = np.where(out, low, outside_low), np.where(out, inside_low, low)
-        out = relative_entropy(means, high) > reach
-        outside_high, inside_high = np.where(out, high, outside_high), np.where(out, inside_high, high)
-    return outside_low, outside_high
 
 
 def closeness_to_limit(bounds: Bounds, confidence: float, top: int = 100) -> Floats:
