@@ -165,25 +165,27 @@ def grid_shares(side: int, s: int, t: int) -> Iterator[tuple[int, float]]:
         yield row * side + column, ways / math.comb(down + right, down)
 
 
-class Xoshiro:
-    """xoshiro256++ of Blackman and Vigna (2021), in whole numbers without a width."""
+class SplitMix:
+    """splitmix64 of Steele, Lea and Flood (2014), in whole numbers without a width."""
 
     WORD = 2**64 - 1
+    GOLDEN = 0x9E3779B97F4A7C15
 
-    def __init__(self, state: list[int]) -> None:
+    def __init__(self, state: int) -> None:
         self.state = state
 
-    def word(self) -> int:
-        def turned(x: int, by: int) -> int:
-            return (x << by | x >> (64 - by)) & self.WORD
+    @classmethod
+    def of_pair(cls, key: int, pair: int) -> SplitMix:
+        """The pair's own generator starts at the word that a generator started at `key` gives as its `pair`th."""
+        before = cls((key + (pair - 1) * cls.GOLDEN) & cls.WORD)
+        return cls(before.word())
 
-        a, b, c, d = self.state
-        word = (turned((a + d) & self.WORD, 23) + a) & self.WORD
-        shifted = b << 17 & self.WORD
-        c, d = c ^ a, d ^ b
-        b, a = b ^ c, a ^ d
-        self.state = [a, b, c ^ shifted, turned(d, 45)]
-        return word
+    def word(self) -> int:
+        self.state = (self.state + self.GOLDEN) & self.WORD
+        word = self.state
+        word = ((word ^ word >> 30) * 0xBF58476D1CE4E5B9) & self.WORD
+        word = ((word ^ word >> 27) * 0x94D049BB133111EB) & self.WORD
+        return word ^ word >> 31
 
     def below(self, bound: int) -> int:
         """Lemire (2019), on the upper halves of words: the multiples that would favour small numbers are redrawn."""

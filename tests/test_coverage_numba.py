@@ -119,7 +119,7 @@ def ready(name: str) -> Prepared:
 
 
 def path_blocks(prepared: Prepared, seed: int) -> list[paths.Partial]:
-    return [paths.run_block(prepared, seed, *at) for at in paths.plan_blocks(0, 2 * MOST, SIZE)]
+    return [paths.run_block(prepared, seed, *at) for at in paths.plan_blocks(SIZE, 2 * MOST)]
 
 
 @pytest.mark.parametrize("name", GRAPHS)
@@ -159,6 +159,7 @@ def worst(bounds: list[Bounds]) -> Bounds:
 @pytest.fixture
 def small_blocks(monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr(pivots, "BLOCK", DRAWS)
+    monkeypatch.setattr(pivots, "LONGEST", DRAWS)
 
 
 def pivot_rules(rules: Rules, n: int) -> Rules:
@@ -168,7 +169,7 @@ def pivot_rules(rules: Rules, n: int) -> Rules:
 def pivot_run(
     scale: Scale, blocks: list[pivots.PivotPartial], most: int, horizon: int
 ) -> tuple[PivotEvidence, Iterator[None]]:
-    evidence = PivotEvidence(scale.factor.size, scale, DELTA, horizon)
+    evidence = PivotEvidence(scale.exact.size, scale, DELTA, horizon)
 
     def advance() -> Iterator[None]:
         for part in blocks[: -(-most // DRAWS)]:
@@ -186,13 +187,13 @@ def test_pivots(name: str) -> None:
     estimates, errors = [], []
     for seed in range(SEEDS):
         sources = pivots.prepare_sources(graph, seed, lanes=8)
-        blocks = [pivots.run_block(sources, *at) for at in paths.plan_blocks(0, n, DRAWS)]
+        blocks = [pivots.run_block(sources, *at) for at in pivots.plan_blocks(n)]
         for rule, rules in RULES.items():
             rules = pivot_rules(rules, n)
             most = rules.samples // DRAWS * DRAWS or n
             alone = not (rules.half_width or rules.top)
             evidence, advance = pivot_run(sources.scale, blocks, most, most if alone else 0)
-            verdict = watch(evidence, advance, every_block(most, DRAWS), rules, clock=ticking(seed))
+            verdict = watch(evidence, advance, every_block(pivots.plan_blocks(most), most), rules, clock=ticking(seed))
             count.see(rule, verdict.bounds, truth, verdict.stopped_because)
             if rule == "samples":
                 estimates.append(verdict.bounds.estimate)
@@ -219,7 +220,7 @@ def test_the_bounds_are_not_idle() -> None:
         tally.add(paths.run_block(prepared, seed, 0, MOST))
         failed["paths"] += missed(paths.PathEvidence(prepared, tally, DELTA).bounds(10.0), truth)
         sources = pivots.prepare_sources(arrays(*GRAPHS[name]), seed, lanes=8)
-        blocks = [pivots.run_block(sources, *at) for at in paths.plan_blocks(0, 32, DRAWS)]
+        blocks = [pivots.run_block(sources, *at) for at in pivots.plan_blocks(32)]
         evidence, advance = pivot_run(sources.scale, blocks, 32, 32)
         for _ in advance:
             pass
@@ -243,7 +244,9 @@ def test_each_party_fails_no_more_often_than_its_share(rare: float, horizon: int
     truth = values.mean()
     drawn = np.random.default_rng(3).permuted(np.broadcast_to(values, (runs, population)), axis=1)
     one = np.ones(runs)
-    evidence = PivotEvidence(population, Scale(one, 0 * one, one, one < 0), alpha * runs, horizon)
+    evidence = PivotEvidence(
+        population, Scale(one, one < 0, 0 * one, one, np.arange(runs, dtype=np.int32)), alpha * runs, horizon
+    )
     bad = np.zeros(runs, bool)
     for start in range(0, 600, size):
         x = drawn[:, start : start + size]

@@ -129,8 +129,8 @@ def test_every_door_measures_the_same_bits(graph: Graph, keys: dict[str, Any]) -
     scores = [
         Score(method="exact"),
         Score(method="pivots", samples=5 * pivots.BLOCK, top=0),
-        Score(method="paths", samples=3 * paths.BLOCK + 100, top=0),
-        Score(method="paths", samples=3 * paths.BLOCK + 100, top=0, max_hops=4, seed=9),
+        Score(method="paths", samples=3 * paths.MOST + 100, top=0),
+        Score(method="paths", samples=3 * paths.MOST + 100, top=0, max_hops=4, seed=9),
     ]
     plans = [make_plan(graph, score, 1, 2**33) for score in scores]
     with open_door(**keys) as door:

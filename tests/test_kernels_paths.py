@@ -184,28 +184,41 @@ def test_path_counts_beyond_float64() -> None:
 def test_blocks_add_up_to_the_same_whatever_their_order_of_making(directed: bool) -> None:
     n, size = 60, 512 if COMPILED else 64
     prepared = ready(n, scattered(n, 150, 7), directed)
-    plan = list(paths.plan_blocks(0, 9 * size + 5, size))
-    assert plan[-1] == (9, 5)
-    made = {block: paths.run_block(prepared, 3, block, samples) for block, samples in reversed(plan)}
+    plan = list(paths.plan_blocks(size, 9 * size + 5))
+    assert plan[-1] == (9 * size, 5)
+    made = {start: paths.run_block(prepared, 3, start, samples) for start, samples in reversed(plan)}
     whole, resumed = paths.Tally.empty(n), paths.Tally.empty(n)
-    for block, samples in plan:
-        whole.add(paths.run_block(prepared, 3, block, samples))
-        resumed.add(made[block])
+    whole.add(paths.run_block(prepared, 3, 0, 9 * size + 5))
+    for start, _ in plan:
+        resumed.add(made[start])
     assert resumed.taken == whole.taken == 9 * size + 5
     assert (resumed.hits == whole.hits).all()
     assert resumed.searched == whole.searched
 
 
+def test_blocks_are_as_long_as_their_searches_are_short() -> None:
+    assert paths.block_size(10, 10) == paths.MOST
+    assert paths.block_size(paths.WORK, 500) == 256
+    assert paths.block_size(paths.WORK, 512) == 512
+    assert paths.block_size(paths.WORK, 1) == paths.FEWEST
+
+
+def test_a_block_that_is_not_wanted_any_more_ends_at_once() -> None:
+    prepared = ready(30, scattered(30, 70, 2), True)
+    part = paths.run_block(prepared, 1, 0, 2**62, np.ones(1, np.uint8))
+    assert not part.counts.any()
+
+
 def test_a_block_out_of_turn_is_refused() -> None:
     prepared = ready(4, [(0, 1), (1, 2), (2, 3), (3, 0)], False)
-    with pytest.raises(ValueError, match="block 1 came when block 0 was due"):
-        paths.Tally.empty(4).add(paths.run_block(prepared, 1, 1, 10))
+    with pytest.raises(ValueError, match="from pair 10 came when pair 0 was due"):
+        paths.Tally.empty(4).add(paths.run_block(prepared, 1, 10, 10))
 
 
 def test_blocks_differ_and_depend_on_the_seed() -> None:
     prepared = ready(30, scattered(30, 70, 2), True)
     first, second, other, again = (
-        paths.run_block(prepared, *at, 500).counts.tolist() for at in [(1, 0), (1, 1), (2, 0), (1, 0)]
+        paths.run_block(prepared, *at, 500).counts.tolist() for at in [(1, 0), (1, 500), (2, 0), (1, 0)]
     )
     assert first == again
     assert first != second
@@ -221,16 +234,16 @@ def test_graphs_without_ties(n: int, directed: bool) -> None:
 
 
 @settings(max_examples=60, deadline=None)
-@given(st.lists(st.integers(0, 2**64 - 1), min_size=4, max_size=4).filter(any), st.integers(1, 2**32))
-def test_random_words(words: list[int], bound: int) -> None:
-    state, twin = np.array(words, np.uint64), oracles.Xoshiro(words)
+@given(st.integers(0, 2**64 - 1), st.integers(1, 2**32))
+def test_random_words(start: int, bound: int) -> None:
+    state, twin = np.array([start], np.uint64), oracles.SplitMix(start)
     with np.errstate(over="ignore"):
         for _ in range(5):
             assert int(kernels_paths.next_word(state)) == twin.word()
         for size in (bound, 1, 3, 2**31 + 1):
             assert kernels_paths.below(state, size) == twin.below(size)
         assert kernels_paths.unit(state) == (twin.word() >> 11) / 2**53
-    assert state.tolist() == twin.state
+    assert state.tolist() == [twin.state]
 
 
 @settings(max_examples=60, deadline=None)

@@ -34,8 +34,8 @@ def directed(build: Any) -> Graph:
 def slow(monkeypatch: pytest.MonkeyPatch) -> None:
     """A machine on which a block of sources takes 64 s and a path a quarter: the clock of this one chooses nothing."""
     monkeypatch.setattr(costs, "TINY", 0)
-    each = {"exact_block": 600.0, "pivots_block": 64.0, "paths_block": 2 * costs.FEWEST_PAIRS / 4}
-    monkeypatch.setattr(costs, "_seconds_each", lambda function, tasks, threads: each[function.__name__] / threads)
+    each = {"exact_block": 600.0, "pivots_block": 64.0, "paths_block": paths.FEWEST / 4}
+    monkeypatch.setattr(costs, "_seconds_each", lambda function, tasks, threads, job: each[function.__name__] / threads)
 
 
 class TestAuto:
@@ -104,7 +104,9 @@ class TestSamples:
         assert estimate.stopped_because == "half_width"
         assert estimate.half_widths.max() <= wanted
         # a look comes too late by a block, or by a quarter of the draws before it
-        assert plan.samples / 3 < estimate.samples < 3 * plan.samples + {"pivots": pivots, "paths": paths}[method].BLOCK
+        assert (
+            plan.samples / 3 < estimate.samples < 3 * plan.samples + (plan.lanes if method == "paths" else pivots.BLOCK)
+        )
 
 
 class TestMemory:

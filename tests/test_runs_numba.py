@@ -31,7 +31,7 @@ SCORES = {
     "exact": Score(method="exact"),
     "pivots": Score(method="pivots", samples=300, top=0),
     "pivots, top": Score(method="pivots", top=3),
-    "paths": Score(method="paths", samples=5 * paths.BLOCK + 7, top=0),
+    "paths": Score(method="paths", samples=5 * paths.MOST + 7, top=0),
     "paths, half_width": Score(method="paths", half_width=0.0035, top=0),
 }
 
@@ -85,20 +85,20 @@ def test_sampled_runs_are_what_the_parts_give(graph: Graph, score: Score) -> Non
         return
     if score.method == "pivots":
         most = score.samples or graph.n
-        tasks = [(job, *at) for at in paths.plan_blocks(0, most, pivots.BLOCK)]
+        tasks = [(job, *at) for at in pivots.plan_blocks(most)]
         evidence: Any = PivotEvidence(graph.n, blocks.load_pivots(job).scale, 1 - score.confidence, score.samples)
-        looks = every_block(most, pivots.BLOCK)
+        looks = every_block(pivots.plan_blocks(most), most)
 
         def add(part: pivots.PivotPartial) -> None:
             evidence.add(part.draws, part.moments[:, :9], part.sums, part.moments[:, 9])
 
         elsewhere = {task: blocks.pivots_block(task) for task in reversed(tasks)}
     else:
-        count = -(-whole.samples // paths.BLOCK)
-        tasks = [(job, *at) for at in itertools.islice(paths.plan_blocks(0, score.samples), count)]
+        count = -(-whole.samples // plan.lanes)
+        tasks = [(job, *at) for at in itertools.islice(paths.plan_blocks(plan.lanes, score.samples), count)]
         tally = paths.Tally.empty(graph.n)
         evidence, add = paths.PathEvidence(blocks.load_paths(job), tally, 1 - score.confidence), tally.add
-        looks = planned_looks(rules, paths.BLOCK)
+        looks = planned_looks(rules, plan.lanes)
         elsewhere = {task: blocks.paths_block(task) for task in reversed(tasks)}
     assert len(tasks) > 2
     for task in tasks[:2]:  # before the night was cut short
@@ -115,7 +115,7 @@ def test_sampled_runs_are_what_the_parts_give(graph: Graph, score: Score) -> Non
 def test_a_night_that_the_clock_stopped_is_repeated(build: Any, monkeypatch: pytest.MonkeyPatch, method: str) -> None:
     """With the place where it was stopped kept in the plan; the second time the clock stands still, and then races."""
     graph = build(700, scattered(700, 2000, 8, 1.3), True)
-    score = Score(method=method, top=0, minutes=1.0, samples=30 * paths.BLOCK if method == "paths" else 0)
+    score = Score(method=method, top=0, minutes=1.0, samples=30 * paths.MOST if method == "paths" else 0)
     plan = make_plan(graph, score, 2, MEMORY)
 
     def at_pace(seconds: float) -> Estimate:
@@ -126,7 +126,7 @@ def test_a_night_that_the_clock_stopped_is_repeated(build: Any, monkeypatch: pyt
     kept = plan
     stopped = at_pace(9.0)
     assert stopped.stopped_because == "minutes"
-    assert stopped.samples > {"pivots": pivots, "paths": paths}[method].BLOCK
+    assert stopped.samples > (plan.lanes if method == "paths" else pivots.BLOCK)
     kept = replace(plan, reached=stopped.samples)
     assert same(at_pace(0.0), stopped)
     assert same(at_pace(1e6), stopped)

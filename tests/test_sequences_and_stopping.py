@@ -151,7 +151,11 @@ def test_nothing_left_to_sample_stops_at_once() -> None:
 
 
 def test_sequences_are_looked_at_after_every_block() -> None:
-    assert list(every_block(250, 100)) == [Look(100, 1.0), Look(200, 1.0), Look(250, 1.0, last=True)]
+    assert list(every_block([(0, 100), (100, 100), (200, 50)], 250)) == [
+        Look(100, 1.0),
+        Look(200, 1.0),
+        Look(250, 1.0, last=True),
+    ]
 
 
 @pytest.mark.parametrize("rules", [{}, {"top": 3}, {"samples": -1}, {"minutes": -0.1, "samples": 5}])
@@ -287,7 +291,7 @@ def _starts(blocks: list[list[float]], end: int) -> list[int]:
 
 def test_a_sequence_is_only_looked_at_at_full_delta() -> None:
     one = np.ones(3)
-    evidence = PivotEvidence(10, Scale(one, 0 * one, one, one < 0), 0.05)
+    evidence = PivotEvidence(10, Scale(one, one < 0, 0 * one, one, np.arange(one.size, dtype=np.int32)), 0.05)
     with pytest.raises(ValueError, match="full delta"):
         evidence.bounds(0.5)
 
@@ -296,7 +300,7 @@ def test_certain_bounds_hold_whatever_was_drawn() -> None:
     """Even at a delta so small that no bet is ever paid: S / N at least, (S + N - k) / N at most."""
     population, drawn = 20, np.array([[1.0, 0.5, 0.0], [0.25, 0.25, 0.25]])
     one = np.ones(2)
-    evidence = PivotEvidence(population, Scale(one, 0 * one, one, one < 0), 1e-300)
+    evidence = PivotEvidence(population, Scale(one, one < 0, 0 * one, one, np.arange(one.size, dtype=np.int32)), 1e-300)
     evidence.add(3, spread(drawn), drawn.sum(1), (drawn**2).sum(1))
     bounds = evidence.bounds()
     np.testing.assert_allclose(bounds.lower, drawn.sum(1) / population)

@@ -28,10 +28,13 @@ Tick = Callable[[float], None]
 class Door(Protocol):
     """Where tasks run."""
 
-    def stream(self, function: Callable[[Task], Result], tasks: Iterable[Task]) -> Iterator[Result]:
+    def stream(
+        self, function: Callable[[Task], Result], tasks: Iterable[Task], halt: Callable[[], None] | None = None
+    ) -> Iterator[Result]:
         """function(task) in the order of the tasks, a few worked on ahead of what has been asked for.
 
-        Closing the iterator, also by an error or Ctrl-C, drops what has not begun.
+        Closing the iterator, also by an error or Ctrl-C, drops what has not begun. What has begun in this process is
+        waited for; `halt` is called before, and may have it end sooner.
         """
         ...
 
@@ -46,7 +49,9 @@ class Here:
     def __init__(self, threads: int = 0) -> None:
         self._threads = threads or os.cpu_count() or 1
 
-    def stream(self, function: Callable[[Task], Result], tasks: Iterable[Task]) -> Iterator[Result]:
+    def stream(
+        self, function: Callable[[Task], Result], tasks: Iterable[Task], halt: Callable[[], None] | None = None
+    ) -> Iterator[Result]:
         pool = ThreadPoolExecutor(self._threads, thread_name_prefix="isthmus")
         try:
             ahead: deque[Future[Result]] = deque()
@@ -56,6 +61,10 @@ class Here:
                     yield ahead.popleft().result()
             while ahead:
                 yield ahead.popleft().result()
+        except BaseException:  # closed early, too
+            if halt:
+                halt()
+            raise
         finally:
             pool.shutdown(wait=True, cancel_futures=True)
 
@@ -82,7 +91,9 @@ class _Elsewhere:
     def __init__(self, client: Any) -> None:
         self._client = client
 
-    def stream(self, function: Callable[[Task], Result], tasks: Iterable[Task]) -> Iterator[Result]:
+    def stream(
+        self, function: Callable[[Task], Result], tasks: Iterable[Task], halt: Callable[[], None] | None = None
+    ) -> Iterator[Result]:
         # two for each of the workers' threads: one at work, one on its way
         most = 2 * max(1, sum(self._client.nthreads().values()))
         ahead: deque[Any] = deque()

@@ -26,8 +26,9 @@ class Plan:
     `samples`: sources or pairs to draw (for exact, the number of parties). `half_width`: promised to every party at
     once (networkit) or expected of the widest (numba), on Freeman's scale, before clipping to 0..1; 0 when exact.
     `limit` says what set `samples`: exact, samples, half_width or minutes. `blocks`: parts that the draws are made in,
-    where that is fixed beforehand. `lanes`: sources worked on at once by a thread. `reached`: where the clock stopped a
-    former run of this plan; a re-run stops there again, and gives the same numbers. `reason`: one sentence for people.
+    where that is fixed beforehand. `lanes`: sources, or pairs, worked on at once by a thread. `reached`: where the
+    clock stopped a former run of this plan; a re-run stops there again, and gives the same numbers. `reason`: one
+    sentence for people.
     """
 
     engine: str

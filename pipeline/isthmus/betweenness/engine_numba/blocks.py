@@ -9,10 +9,13 @@ from __future__ import annotations
 
 import threading
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Any, TypeVar
 from weakref import WeakValueDictionary
 
+import numpy as np
+
+from isthmus.betweenness.engine_numba.subgraphs import Bytes
 from isthmus.errors import SettingsError
 from isthmus.graph import Graph
 
@@ -29,12 +32,20 @@ Loaded = TypeVar("Loaded")
 
 @dataclass(frozen=True)
 class Job:
-    """What all blocks of a run have in common. `graph`: the snapshot's folder and its time, or a name in memory."""
+    """What all blocks of a run have in common. `graph`: the snapshot's folder and its time, or a name in memory.
+
+    `stop` is one byte that blocks in this process watch; not 0: their results are not wanted any more.
+    """
 
     graph: tuple[str, int]
     lanes: int
     max_hops: int
     seed: int
+    stop: Bytes = field(default_factory=lambda: np.zeros(1, np.uint8), compare=False)
+
+    def halt(self) -> None:
+        """Have the blocks that run in this process come to an end."""
+        self.stop[0] = 1
 
 
 _lock = threading.RLock()
@@ -107,23 +118,23 @@ def exact_block(task: tuple[Job, int]) -> exact.Partial:
     from isthmus.betweenness.engine_numba import exact
 
     job, index = task
-    return exact.run_block(*load_exact(job), index)
+    return exact.run_block(*load_exact(job), index, job.stop)
 
 
 def pivots_block(task: tuple[Job, int, int]) -> pivots.PivotPartial:
-    """Task: (job, block, draws in it)."""
+    """Task: (job, first draw, draws)."""
     from isthmus.betweenness.engine_numba import pivots
 
-    job, index, samples = task
-    return pivots.run_block(load_pivots(job), index, samples)
+    job, start, size = task
+    return pivots.run_block(load_pivots(job), start, size, job.stop)
 
 
 def paths_block(task: tuple[Job, int, int]) -> paths.Partial:
-    """Task: (job, block, pairs in it)."""
+    """Task: (job, first pair, pairs)."""
     from isthmus.betweenness.engine_numba import paths
 
-    job, index, samples = task
-    return paths.run_block(load_paths(job), job.seed, index, samples)
+    job, start, size = task
+    return paths.run_block(load_paths(job), job.seed, start, size, job.stop)
 
 
 def _once(method: str, job: Job, prepare: Callable[[Graph], Loaded]) -> Loaded:

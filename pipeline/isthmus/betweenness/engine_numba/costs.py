@@ -27,8 +27,8 @@ TINY = 20_000_000
 NOMINAL_ARCS_PER_SECOND = {False: 1e8, True: 5e6}
 # So many times over the time allowed, one block is enough to know.
 HOPELESS = 4
-# The probe of paths grows until it takes so long, or is a whole block.
-FEWEST_PAIRS, PROBE_SECONDS = 64, 0.3
+# The probe of paths grows until it takes so long.
+PROBE_SECONDS = 0.3
 # Half-widths come out at this many z * standard error (benchmarks/README.md): pivots pay for unknown variances.
 PIVOTS_OVER_LIMIT = 1.5
 
@@ -67,9 +67,9 @@ class _Planner:
             _, work = blocks.load_exact(job)
             picks = np.unique(np.linspace(0, work.blocks - 1, min(work.blocks, 4 * threads)).astype(int)).tolist()
             tasks = [(job, index) for index in picks]
-            seconds = work.blocks * _seconds_each(blocks.exact_block, tasks[:1], 1) / threads
+            seconds = work.blocks * _seconds_each(blocks.exact_block, tasks[:1], 1, job) / threads
             if seconds < HOPELESS * self.budget:
-                seconds = work.blocks * _seconds_each(blocks.exact_block, tasks, threads)
+                seconds = work.blocks * _seconds_each(blocks.exact_block, tasks, threads, job)
         said = f"exact takes about {spell_seconds(seconds)} on {threads} thread{'s' if threads > 1 else ''}"
         if seconds > self.budget:
             said += f", longer than the {self.score.minutes:g} min allowed, and has no use when stopped half-way"
@@ -87,7 +87,7 @@ class _Planner:
         job = self._job(lanes)
         sources = blocks.load_pivots(job)
         draws = min(pivots.BLOCK, n)
-        each = _seconds_each(blocks.pivots_block, [(job, block, draws) for block in range(threads)], threads) / draws
+        each = _seconds_each(blocks.pivots_block, [(job, 0, draws)] * threads, threads, job) / draws
         pilot = pivots.run_block(sources, 0, draws)
         mean = pilot.sums / draws
         spread = np.maximum(pilot.moments[:, 9] / draws - mean**2, 0.0) * sources.scale.factor**2
@@ -111,21 +111,23 @@ class _Planner:
         base = (4 * (2 if self.graph.directed else 1) + 16) * self.graph.arcs + 90 * n
         _, threads, needed = self._fit("paths", lambda _: paths.bytes_per_thread(n), base)
         if self.trivial:
-            return self._plan("paths", 1, 0.0, "exact", "there is nothing to sample", 0.0, needed, threads, 0)
+            return self._plan("paths", 1, 0.0, "exact", "there is nothing to sample", 0.0, needed, threads, paths.MOST)
         _warm_up("paths", self.graph, self.score)
         job = self._job(0)
         prepared = blocks.load_paths(job)
-        pairs, each = FEWEST_PAIRS, 0.0
-        while each < PROBE_SECONDS and pairs < paths.BLOCK:
+        pairs, each = paths.FEWEST // 2, 0.0
+        while each < PROBE_SECONDS and pairs < paths.MOST:
             pairs *= 2
-            each = _seconds_each(blocks.paths_block, [(job, block, pairs) for block in range(threads)], threads)
+            each = _seconds_each(blocks.paths_block, [(job, at * pairs, pairs) for at in range(threads)], threads, job)
         pilot = paths.run_block(prepared, self.score.seed, 0, pairs)
+        first = paths.run_block(prepared, self.score.seed, 0, paths.FEWEST)
+        size = paths.block_size(first.visited, paths.FEWEST)
         share = (float(pilot.counts.max(initial=0)) + 1) / pairs
 
         def half_width(samples: int) -> float:
             return self.z * math.sqrt(share * max(1 - share, 0.0) / samples) * n / (n - 2)
 
-        return self._sampled("paths", "pairs", 0, each / pairs, half_width, needed, threads, 0)
+        return self._sampled("paths", "pairs", 0, each / pairs, half_width, needed, threads, size)
 
     def _sampled(
         self,
@@ -212,10 +214,10 @@ class _Planner:
         )
 
 
-def _seconds_each(function: Callable[[Task], object], tasks: Sequence[Task], threads: int) -> float:
+def _seconds_each(function: Callable[[Task], object], tasks: Sequence[Task], threads: int, job: blocks.Job) -> float:
     """Measured wall seconds per task, with as many at once as in the run."""
     start = time.perf_counter()
-    for _ in Here(threads).stream(function, tasks):
+    for _ in Here(threads).stream(function, tasks, job.halt):
         pass
     return (time.perf_counter() - start) / len(tasks)
 

@@ -49,25 +49,26 @@ def run(graph: Graph, plan: Plan, score: Score, threads: int, progress: Progress
 
 def _exact(graph: Graph, plan: Plan, score: Score, job: blocks.Job, door: Door, progress: Progress) -> Estimate:
     reduced, work = blocks.load_exact(job)
-    parts = door.stream(blocks.exact_block, ((job, index) for index in range(work.blocks)))
+    parts = door.stream(blocks.exact_block, ((job, index) for index in range(work.blocks)), job.halt)
     pairs = exact.merge(reduced, work, parts, lambda done: progress(done / work.blocks))
     return _estimate(graph, plan, score, _certain(pairs), graph.n, "exact")
 
 
 def _pivots(job: blocks.Job, plan: Plan, score: Score, door: Door, progress: Progress) -> Verdict:
     sources = blocks.load_pivots(job)
-    n = sources.arrays.n
+    n = sources.draws.size
     most = min(score.samples or n, n)
     rules = _rules(plan, score, most)
     alone = bool(score.samples) and not (score.half_width or score.top)
     evidence = PivotEvidence(n, sources.scale, 1 - score.confidence, horizon=most if alone else 0)
-    tasks = ((job, block, size) for block, size in paths.plan_blocks(0, most, pivots.BLOCK))
-    partials = door.stream(blocks.pivots_block, tasks)
+    tasks = ((job, *block) for block in pivots.plan_blocks(most))
+    partials = door.stream(blocks.pivots_block, tasks, job.halt)
 
     def add(part: pivots.PivotPartial) -> None:
         evidence.add(part.draws, part.moments[:, :9], part.sums, part.moments[:, 9])
 
-    verdict = watch(evidence, _each(partials, add), every_block(most, pivots.BLOCK), rules, _share(progress, most))
+    looks = every_block(pivots.plan_blocks(most), most)
+    verdict = watch(evidence, _each(partials, add), looks, rules, _share(progress, most))
     if verdict.samples == n:
         verdict = replace(verdict, bounds=_certain(verdict.bounds.estimate * ((n - 1) * (n - 2))))
     return verdict
@@ -78,9 +79,9 @@ def _paths(job: blocks.Job, plan: Plan, score: Score, door: Door, progress: Prog
     rules = _rules(plan, score, score.samples)
     tally = paths.Tally.empty(prepared.n)
     evidence = paths.PathEvidence(prepared, tally, 1 - score.confidence)
-    tasks = ((job, block, size) for block, size in paths.plan_blocks(0, score.samples))
-    partials = door.stream(blocks.paths_block, tasks)
-    looks = planned_looks(rules, paths.BLOCK)
+    tasks = ((job, *block) for block in paths.plan_blocks(plan.lanes, score.samples))
+    partials = door.stream(blocks.paths_block, tasks, job.halt)
+    looks = planned_looks(rules, plan.lanes)
     return watch(evidence, _each(partials, tally.add), looks, rules, _share(progress, plan.samples))
 
 

@@ -10,7 +10,7 @@ import numpy as np
 
 from isthmus.betweenness.engine_numba.kernels_moments import MOMENTS
 from isthmus.betweenness.engine_numba.reductions import Reduced
-from isthmus.betweenness.engine_numba.subgraphs import Floats
+from isthmus.betweenness.engine_numba.subgraphs import Bytes, Floats
 from isthmus.graph.arrays import Arrays, Ids
 
 # Work of a block, in arcs and vertices touched per batch of lanes: about an eighth of a second where neighbours are
@@ -18,6 +18,7 @@ from isthmus.graph.arrays import Arrays, Ids
 # the blocks, and with them the bits of the result, are the same for any threads.
 BLOCK_WORK = 1_000_000
 MOST_LANES = 64
+GO_ON = np.zeros(1, np.uint8)  # for blocks that nobody stops
 
 
 @dataclass(frozen=True)
@@ -79,21 +80,21 @@ def bytes_per_thread(n: int, m: int, lanes: int, weighted: bool = False) -> int:
     return (8 * lanes + 112) * n
 
 
-def run_block(reduced: Reduced, plan: Plan, index: int) -> Partial:
+def run_block(reduced: Reduced, plan: Plan, index: int, stop: Bytes = GO_ON) -> Partial:
     """One block; needs nothing but its arguments, so it may run in any process."""
     graph, place = reduced.arrays, plan.block(index)
     score = np.zeros(graph.n)
     reached = np.zeros(graph.n if reduced.needs_reach else 0)
     reach = sweep(
-        graph, plan.sources[place], plan.weights[place], score, reached, np.zeros(0), np.zeros((0, MOMENTS)),
+        graph, plan.sources[place], plan.weights[place], score, reached, np.zeros(0), np.zeros((0, MOMENTS)), stop,
         copies=reduced.copies, targets=reduced.target_weight, lanes=plan.lanes, max_hops=plan.max_hops,
     )  # fmt: skip
     return Partial(score, reached, reach)
 
 
 def sweep(
-    graph: Arrays, sources: Ids, weights: Floats, score: Floats, reached: Floats, unit: Floats, moments: Floats, *,
-    copies: Floats, targets: Floats, lanes: int, max_hops: int,
+    graph: Arrays, sources: Ids, weights: Floats, score: Floats, reached: Floats, unit: Floats, moments: Floats,
+    stop: Bytes, *, copies: Floats, targets: Floats, lanes: int, max_hops: int,
 ) -> Floats:  # fmt: skip
     """The kernel that fits the graph, imported on first use; arguments as in kernels_lanes.lanes_sweep."""
     if graph.out_lengths is not None:
@@ -101,13 +102,13 @@ def sweep(
 
         return weighted_sweep(
             graph.out_ptr, graph.out_adj, graph.out_lengths, graph.in_ptr, graph.in_adj, graph.in_lengths,
-            targets, sources, weights, score, reached, unit, moments,
+            targets, sources, weights, score, reached, unit, moments, stop,
         )  # fmt: skip
     from isthmus.betweenness.engine_numba.kernels_lanes import lanes_sweep
 
     return lanes_sweep(
         graph.out_ptr, graph.out_adj, graph.in_ptr, graph.in_adj, copies, targets,
-        sources, weights, lanes, max_hops, score, reached, unit, moments,
+        sources, weights, lanes, max_hops, score, reached, unit, moments, stop,
     )  # fmt: skip
 
 

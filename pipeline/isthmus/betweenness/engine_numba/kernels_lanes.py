@@ -127,6 +127,7 @@ def lanes_sweep(
     reached,
     unit,
     moments,
+    stop,
 ):
     """Add the dependencies of a block of sources; consecutive sources share a batch of lanes.
 
@@ -137,8 +138,9 @@ def lanes_sweep(
     max_hops: longest path that counts, in arcs; 0 means no limit
     score: float64[n], grows by weight * delta(v) for every v but the source
     reached: float64[n] grows by weight for every source but itself that reaches v, or float64[0]
-    unit, moments: float64[n], float64[n, MOMENTS]: each x = unit(v) delta(v) is noted (kernels_moments), for a plain
-        graph with weights 1 only; or float64[0], float64[0, MOMENTS]: not wanted
+    unit, moments: float64[n], float64[n, MOMENTS]: each x = unit(v) delta(v) is noted (kernels_moments), as often as
+        the source's weight says; or float64[0], float64[0, MOMENTS]: not wanted
+    stop: uint8[1], not 0: the result is not wanted any more, whatever it is
 
     Returns float64[k]: sum of T over the vertices each source reaches, itself left out.
     """
@@ -192,6 +194,8 @@ def lanes_sweep(
                         new[w] |= fresh
             # Then the path counts, pulled: the accumulator stays in the first cache, rows are only read.
             for i in range(end, last):
+                if stop[0]:
+                    return reach
                 w = record_v[i]
                 mask = new[w]
                 record_mask[i] = mask
@@ -215,6 +219,8 @@ def lanes_sweep(
         for level in range(depth, -1, -1):
             begin, end = level_start[level], level_start[level + 1]
             for i in range(begin, end):
+                if stop[0]:
+                    return reach
                 v, mask = record_v[i], record_mask[i]
                 unseen[v] = ~_NONE
                 _gather(acc, rows, out_ptr[v], out_ptr[v + 1], out_adj, now, mask, lanes)
@@ -222,10 +228,10 @@ def lanes_sweep(
                     reach[first + i] = acc[lowest_bit(mask)]
                     continue
                 if moments.size:
-                    rest = mask
+                    rest, one = mask, unit[v] / copies[v]
                     while rest != _NONE:
                         lane = lowest_bit(rest)
-                        note(moments, v, unit[v] * rows[v, lane] * acc[lane])
+                        note(moments, v, one * rows[v, lane] * acc[lane], weight[lane])
                         rest &= rest - _ONE
                 score[v] += _keep_backward(rows, v, acc, spare, weight, copies[v], targets[v], mask, lanes)
                 if reached.size:

@@ -15,17 +15,17 @@ _LOWEST = 2.0**-8
 
 
 @kernel
-def note(moments, v, x):
-    """Add one value to row v. Values that rounding lifted above 1 count as 1."""
+def note(moments, v, x, times):
+    """Add a value to row v, `times` over. Values that rounding lifted above 1 count as 1."""
     if x <= 0.0:
         return
     x = min(x, 1.0)
-    moments[v, 9] += x * x
+    moments[v, 9] += times * x * x
     if x < _LOWEST:
-        moments[v, 0] += x / _LOWEST
+        moments[v, 0] += times * x / _LOWEST
         return
     mantissa, exponent = math.frexp(x)  # x = mantissa * 2**exponent, mantissa in [1/2, 1)
     above = 2.0 * mantissa - 1.0
-    moments[v, exponent + 7] += 1.0 - above
+    moments[v, exponent + 7] += times * (1.0 - above)
     if above > 0.0:
-        moments[v, exponent + 8] += above
+        moments[v, exponent + 8] += times * above

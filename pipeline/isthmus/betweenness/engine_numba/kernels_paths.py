@@ -3,11 +3,12 @@
 Vertices here are the searched ones, renumbered by `prepare.prepare`. `rows[v] = (begin, end)` bounds v's
 part of `adj`. Each level of each search has a colour of its own, and colours only grow: `mark[v] >= first`
 says that v was met in this sample, and `mark[v] == colour` on which side and level. Nothing is cleared
-between samples. Vertices are unsigned, and the two hottest loops index by unsigned integers: that spares the
+between samples. Every pair has random numbers of its own, from its number and the seed, so it does not matter which
+pairs are drawn together. Vertices are unsigned, and the two hottest loops index by unsigned integers: that spares the
 test for negative indices, a fifth of the time.
 
 Borassi, Natale (2016), KADABRA is an ADaptive Algorithm for Betweenness via Random Approximation, sec. 4
-(balanced search); Blackman, Vigna (2021), Scrambled linear pseudorandom number generators (xoshiro256++);
+(balanced search); Steele, Lea, Flood (2014), Fast splittable pseudorandom number generators (splitmix64);
 Lemire (2019), Fast random integer generation in an interval.
 """
 
@@ -15,7 +16,8 @@ import numpy as np
 
 from isthmus.betweenness.engine_numba.accelerate import kernel
 
-U11, U17, U19, U23, U32, U41, U45 = (np.uint64(k) for k in (11, 17, 19, 23, 32, 41, 45))
+U11, U27, U30, U31, U32 = (np.uint64(k) for k in (11, 27, 30, 31, 32))
+GOLDEN, FIRST_MIX, SECOND_MIX = (np.uint64(k) for k in (0x9E3779B97F4A7C15, 0xBF58476D1CE4E5B9, 0x94D049BB133111EB))
 LOW = np.uint64(0xFFFFFFFF)
 TWO32 = np.uint64(1 << 32)
 UNIT = 2.0**-53
@@ -37,18 +39,18 @@ NO_IN = 2
 
 
 @kernel
+def mixed(word):
+    """A bijection of 64 bits in which every bit of the word moves every bit of the result."""
+    word = (word ^ (word >> U30)) * FIRST_MIX
+    word = (word ^ (word >> U27)) * SECOND_MIX
+    return word ^ (word >> U31)
+
+
+@kernel
 def next_word(state):
-    """64 random bits; state: uint64[4], advanced in place."""
-    s0, s1, s2, s3 = state[0], state[1], state[2], state[3]
-    total = s0 + s3
-    word = ((total << U23) | (total >> U41)) + s0
-    s2 ^= s0
-    s3 ^= s1
-    state[0] = s0 ^ s3
-    state[1] = s1 ^ s2
-    state[2] = s2 ^ (s1 << U17)
-    state[3] = (s3 << U45) | (s3 >> U19)
-    return word
+    """64 random bits; state: uint64[1], advanced in place."""
+    state[0] += GOLDEN
+    return mixed(state[0])
 
 
 @kernel
@@ -188,20 +190,25 @@ def block_of(a, b, home, entry):
 
 @kernel
 def sample_paths(
-    samples, population, max_hops, anchor, component, ends, out_rows, out_adj, in_rows, in_adj, home, entry,
-    state, mark, parent, sigma, queue_s, queue_t, level_s, level_t, shrunk_s, shrunk_t, cross, weight, hits,
+    start, samples, key, population, max_hops, anchor, component, ends, out_rows, out_adj, in_rows, in_adj, home, entry,
+    mark, parent, sigma, queue_s, queue_t, level_s, level_t, shrunk_s, shrunk_t, cross, weight, hits, stop,
 ):  # fmt: skip
-    """Draw `samples` ordered pairs and a shortest path for each; hits[v] += 1 for each scored vertex inside.
+    """Draw ordered pairs [start, start + samples), a shortest path each; hits[v] += 1 for each scored vertex inside.
 
-    population: number of vertices pairs are drawn from; anchor[population] maps them to searched vertices. A
-    vertex scores unless it separates the pair (path arcs before and after it in different blocks): what such
-    vertices earn is counted exactly beforehand. Returns the pairs that were searched.
+    key: uint64, of the seed. population: number of vertices pairs are drawn from; anchor[population] maps them to
+    searched vertices. A vertex scores unless it separates the pair (path arcs before and after it in different blocks):
+    what such vertices earn is counted exactly beforehand. stop: uint8[1], not 0: the result is not wanted any more.
+    Returns the pairs that were searched, and the vertices that the searches met.
     """
-    searched = 0
+    searched = visited = 0
+    state = np.empty(1, np.uint64)
     mark[:] = 0
     colour = 0
     room = 2 * mark.size + 4
-    for _ in range(samples):
+    for pair in range(start, start + samples):
+        if stop[0]:
+            break
+        state[0] = mixed(key + np.uint64(pair) * GOLDEN)
         s = below(state, population)
         t = below(state, population - 1)
         if t >= s:
@@ -306,6 +313,7 @@ def sample_paths(
                     depth_t += 1
                     level_t[depth_t] = begin_t
                     shrunk_t[depth_t] = depth_t >= DEEP and shrink(queue_t, begin_t, end_t, sigma)
+        visited += end_s + end_t
         if crossings == 0 or depth_s + depth_t == 0:
             continue
 
@@ -348,4 +356,4 @@ def sample_paths(
             if block == behind:
                 hits[w] += 1
             w = after
-    return searched
+    return searched, visited

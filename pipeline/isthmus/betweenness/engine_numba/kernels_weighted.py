@@ -153,6 +153,7 @@ def weighted_sweep(
     reached,
     unit,
     moments,
+    stop,
 ):
     """Add the dependencies of a block of sources, one after another.
 
@@ -180,6 +181,8 @@ def weighted_sweep(
     order = np.empty(n, np.int32)
     reach = np.zeros(sources.size)
     for k in range(sources.size):
+        if stop[0]:
+            break
         s, weight = sources[k], weights[k]
         if ringed:
             settled = _forward_ring(
@@ -204,7 +207,7 @@ def weighted_sweep(
             delta = sigma[w] * acc[w]
             score[w] += weight * delta
             if moments.size:
-                note(moments, w, unit[w] * delta)
+                note(moments, w, unit[w] * delta, weight)
             if reached.size:
                 reached[w] += weight
             g = targets[w] / sigma[w] + acc[w]

@@ -1,8 +1,8 @@
-"""Sampled paths: fixed blocks of random pairs, one shortest path drawn for each, hits counted per party.
+"""Sampled paths: random pairs, one shortest path drawn for each, hits counted per party.
 
-Block b always holds the same pairs: its generator is seeded from (seed, b). Hits are integers, so partial
-results add up to the same bits whichever thread, process or machine made them, in whichever order; `Tally`
-still takes them in block order so that a run can stop, and resume, after any block.
+Pair i is always the same pair, with the same path: its random numbers come from the seed and i. Hits are integers, so
+blocks of any size add up to the same bits whichever thread, process or machine made them, in whichever order; `Tally`
+still takes them in order so that a run can stop, and resume, after any block.
 """
 
 from collections.abc import Iterator
@@ -11,34 +11,37 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from isthmus.betweenness.engine_numba.exact import GO_ON
 from isthmus.betweenness.engine_numba.intervals import Bounds, path_bounds
 from isthmus.betweenness.engine_numba.prepare import Prepared
+from isthmus.betweenness.engine_numba.subgraphs import Bytes
 
-# Pairs per block. A stop, an interrupt and the first look all wait for one, which on a graph of a million parties with
-# long routes takes a minute; shorter blocks would spend their time on clearing memory.
-BLOCK = 1 << 12
+# Pairs per block, as many as meet about so many vertices: a good half second. The looks are whole blocks apart, so the
+# size is settled by counting, not by a clock, and is the same on any machine.
+FEWEST, MOST, WORK = 1 << 6, 1 << 12, 1 << 23
 
 
 @dataclass(frozen=True)
 class Partial:
-    """One block's result.
+    """One block's result: `samples` pairs from number `start` on.
 
-    parties: int32[k] that were hit, ascending; counts: int64[k], how often; searched: pairs not skipped.
+    parties: int32[k] that were hit, ascending; counts: int64[k], how often; searched: pairs not skipped; visited:
+    vertices that their searches met.
     """
 
-    block: int
+    start: int
     samples: int
     searched: int
+    visited: int
     parties: NDArray[np.int32]
     counts: NDArray[np.int64]
 
 
 @dataclass
 class Tally:
-    """Hits so far: blocks 0..blocks-1, `taken` samples. hits: int64[n]."""
+    """Hits of the first `taken` pairs. hits: int64[n]."""
 
     hits: NDArray[np.int64]
-    blocks: int = 0
     taken: int = 0
     searched: int = 0
 
@@ -48,10 +51,9 @@ class Tally:
 
     def add(self, partial: Partial) -> None:
         """Take the next block. Raises ValueError for any other."""
-        if partial.block != self.blocks:
-            raise ValueError(f"block {partial.block} came when block {self.blocks} was due")
+        if partial.start != self.taken:
+            raise ValueError(f"the block from pair {partial.start} came when pair {self.taken} was due")
         self.hits[partial.parties] += partial.counts
-        self.blocks += 1
         self.taken += partial.samples
         self.searched += partial.searched
 
@@ -76,34 +78,39 @@ def bytes_per_thread(searched: int) -> int:
     return 54 * searched
 
 
-def run_block(prepared: Prepared, seed: int, block: int, samples: int = BLOCK) -> Partial:
-    """Draw one block; depends on nothing but the graph, the seed, the block's number and its size."""
+def run_block(prepared: Prepared, seed: int, start: int, samples: int, stop: Bytes = GO_ON) -> Partial:
+    """Draw pairs [start, start + samples); depends on nothing but its arguments."""
     from isthmus.betweenness.engine_numba.kernels_paths import sample_paths
 
     scratch = _Scratch(prepared.old.size)
-    state = np.random.SeedSequence(seed, spawn_key=(block,)).generate_state(4, np.uint64)
-    searched = 0
+    key = np.random.SeedSequence(seed).generate_state(1, np.uint64)[0]
+    searched = visited = 0
     if prepared.n > 2:
         # The generator's arithmetic wraps by design; noticed only with the compiler off.
         with np.errstate(over="ignore"):
-            searched = sample_paths(
-                samples, prepared.n, prepared.max_hops, prepared.anchor, prepared.component, prepared.ends,
+            searched, visited = sample_paths(
+                start, samples, key, prepared.n, prepared.max_hops, prepared.anchor, prepared.component, prepared.ends,
                 prepared.out_rows, prepared.out_adj, prepared.in_rows, prepared.in_adj, prepared.home,
-                prepared.entry, state, scratch.mark, scratch.parent, scratch.sigma, scratch.queue_s,
+                prepared.entry, scratch.mark, scratch.parent, scratch.sigma, scratch.queue_s,
                 scratch.queue_t, scratch.level_s, scratch.level_t, scratch.shrunk_s, scratch.shrunk_t,
-                scratch.cross, scratch.weight, scratch.hits,
+                scratch.cross, scratch.weight, scratch.hits, stop,
             )  # fmt: skip
     hit = np.flatnonzero(scratch.hits)
     order = np.argsort(prepared.old[hit])
-    return Partial(block, samples, searched, prepared.old[hit][order], scratch.hits[hit][order])
+    return Partial(start, samples, searched, visited, prepared.old[hit][order], scratch.hits[hit][order])
 
 
-def plan_blocks(start: int, samples: int = 0, size: int = BLOCK) -> Iterator[tuple[int, int]]:
-    """(block, samples in it) from block `start` until `samples` in all are taken (0: without end)."""
-    block = start
-    while samples == 0 or block * size < samples:
-        yield block, size if samples == 0 else min(size, samples - block * size)
-        block += 1
+def block_size(visited: int, samples: int) -> int:
+    """Pairs per block, a power of two, when `samples` pairs met `visited` vertices."""
+    return min(max(FEWEST, 1 << (WORK * samples // max(visited, 1)).bit_length() - 1), MOST)
+
+
+def plan_blocks(size: int, samples: int = 0) -> Iterator[tuple[int, int]]:
+    """(first pair, pairs) of each block, until `samples` in all are taken (0: without end)."""
+    start = 0
+    while samples == 0 or start < samples:
+        yield start, min(size, samples - start) if samples else size
+        start += size
 
 
 @dataclass

@@ -110,40 +110,48 @@ class Bets:
 class Scale:
     """From means to Freeman's scale: betweenness = exact + factor * mean, never above ceiling.
 
-    factor: float64[n], N R / ((n - 1)(n - 2)) for N sources whose dependencies were divided by R; exact,
-    ceiling: float64[n]; settled: bool[n], nothing left to sample.
+    Parties that are alike share one mean, their class's. factor: float64[classes], N R / ((n - 1)(n - 2)) for N sources
+    whose dependencies were divided by R; settled: bool[classes], nothing there to sample; exact, ceiling: float64[n],
+    by party; holder: int32[n], each party's class, -1: `exact` is the whole of it.
     """
 
     factor: Floats
+    settled: NDArray[np.bool_]
     exact: Floats
     ceiling: Floats
-    settled: NDArray[np.bool_]
+    holder: NDArray[np.int32]
+
+    def of_parties(self, mean: Floats) -> Floats:
+        """float64[n], from a mean of each class."""
+        sampled = np.append(np.where(self.settled, 0.0, self.factor) * mean, 0.0)[self.holder]
+        scaled: Floats = np.minimum(self.exact + sampled, self.ceiling)
+        return scaled
 
 
 class PivotEvidence:
     """Statistics of sources drawn without replacement, block by block, that may be looked at after any block.
 
     population: the N possible sources. horizon: the number of draws intended, if `samples` is the only rule,
-    else 0. Memory: 8 * (13 + 6 * bets) bytes a party; one set of bets with a horizon, else at most 7 at a
-    time.
+    else 0. Memory: 8 * (13 + 6 * bets) bytes a class of parties; one set of bets with a horizon, else at most 7
+    at a time.
     """
 
     def __init__(self, population: int, scale: Scale, delta: float, horizon: int = 0) -> None:
         self.population, self.scale = population, scale
-        parties = scale.factor.size
+        classes = scale.factor.size
         if horizon:
             horizons = [horizon]
         else:
             first = min(FIRST_HORIZON, population)
             horizons = [first << i for i in range(max(1, int(np.log2(population / first)) + 1))]
-        alpha = delta / max(1, int(parties - scale.settled.sum()))
+        alpha = delta / max(1, int(classes - scale.settled.sum()))
         self._ell = float(np.log(2 * len(horizons) / alpha))
         self._waiting, self._bets = horizons, list[Bets]()
         self._early = not horizon
         self.draws = 0
-        self.weights = np.zeros((parties, GRID.size))
-        self.sums, self.squares = np.zeros((2, parties))
-        self._low, self._high = np.zeros(parties), np.ones(parties)
+        self.weights = np.zeros((classes, GRID.size))
+        self.sums, self.squares = np.zeros((2, classes))
+        self._low, self._high = np.zeros(classes), np.ones(classes)
         self._open = np.flatnonzero(~scale.settled)
 
     @property
@@ -153,7 +161,7 @@ class PivotEvidence:
     def add(self, size: int, weights: Floats, sums: Floats, squares: Floats) -> None:
         """Take the next block of `size` sources with values x in [0, 1].
 
-        weights: float64[n, 9], see `spread`; sums, squares: float64[n], of x and of x ** 2. The blocks must
+        weights: float64[classes, 9], see `spread`; sums, squares: float64[classes], of x and of x ** 2. The blocks must
         be consecutive parts of one random order of all sources; the order within a block is free.
         """
         while self._waiting and (not self._early or self._waiting[0] <= EARLY * max(self.draws, 1)):
@@ -179,13 +187,13 @@ class PivotEvidence:
         low = np.clip(np.maximum(self._low, self.sums / population), 0, mean)
         high = np.clip(np.minimum(self._high, (self.sums + (population - k)) / population), mean, 1)
         variance = np.maximum(self.squares - self.sums * mean, 0) / max(k - 1, 1)
-        factor = np.where(scale.settled, 0.0, scale.factor)
-        estimate = np.minimum(scale.exact + factor * mean, scale.ceiling)
+        error = np.sqrt(variance * (1 - k / population) / k)
+        estimate = scale.of_parties(mean)
         return Bounds(
             estimate,
-            np.minimum(scale.exact + factor * low, estimate),
-            np.maximum(np.minimum(scale.exact + factor * high, scale.ceiling), estimate),
-            factor * np.sqrt(variance * (1 - k / population) / k),
+            np.minimum(scale.of_parties(low), estimate),
+            np.maximum(scale.of_parties(high), estimate),
+            np.append(np.where(scale.settled, 0.0, scale.factor) * error, 0.0)[scale.holder],
         )
 
 

@@ -7,7 +7,7 @@ clock only chooses at which look to stop. Statistics that hold at all times at o
 looked at after every block at full delta.
 """
 
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterable, Iterator
 from dataclasses import dataclass
 from itertools import count
 from time import monotonic
@@ -72,11 +72,10 @@ def planned_looks(rules: Rules, block: int) -> Iterator[Look]:
         blocks = max(blocks + 1, int(blocks * GROWTH))
 
 
-def every_block(samples: int, block: int) -> Iterator[Look]:
-    """The looks for statistics that hold at all times: after each block, at full delta, up to `samples`."""
-    for taken in range(block, samples, block):
-        yield Look(taken, 1.0)
-    yield Look(samples, 1.0, last=True)
+def every_block(blocks: Iterable[tuple[int, int]], samples: int) -> Iterator[Look]:
+    """The looks for statistics that hold at all times: after each block (start, size), at full delta."""
+    for start, size in blocks:
+        yield Look(start + size, 1.0, last=start + size == samples)
 
 
 def top_settled(bounds: Bounds, top: int) -> bool:

@@ -13,6 +13,7 @@ from isthmus.graph.arrays import Arrays, Ids, Ints
 
 Floats = NDArray[np.float64]
 Flags = NDArray[np.bool_]
+Bytes = NDArray[np.uint8]
 
 
 def from_arcs(n: int, tail: NDArray[Any], tip: NDArray[Any], lengths: Ints | None, *, directed: bool) -> Arrays:

@@ -64,6 +64,16 @@ def split_undirected(
     return split, member[vertex[keep_vertex]], weight[keep_vertex], settled
 
 
+def roots(graph: Arrays) -> Ids:
+    """int32[n]: the vertex that is left of the tree that v hangs in, v itself when it hangs in none."""
+    order, parent = peel(graph.out_ptr, graph.out_adj)
+    root = np.arange(graph.n, dtype=np.int32)
+    root[order] = parent
+    while not np.array_equal(root, further := root[root]):  # twice as far up each time
+        root = further
+    return root
+
+
 def _component_sizes(graph: Arrays) -> Floats:
     data = np.ones(graph.arcs, np.int8)
     count, label = connected_components(csr_array((data, graph.out_adj, graph.out_ptr), shape=(graph.n, graph.n)))
