@@ -133,6 +133,22 @@ def certain_zeros(n: int, arcs: Iterable[Arc], directed: bool) -> list[bool]:
     return [all(u == w or w in out[u] for u in range(n) if v in out[u] for w in out[v]) for v in range(n)]
 
 
+def reach(n: int, arcs: Iterable[Arc], directed: bool) -> tuple[list[int], list[int]]:
+    """How many others can reach each vertex, and how many it can reach: one search from every vertex."""
+    out = adjacency(n, arcs, directed)
+    before, after = [0] * n, [0] * n
+    for s in range(n):
+        seen, ahead = {s}, [s]
+        while ahead:
+            fresh = set(out[ahead.pop()]) - seen
+            seen |= fresh
+            ahead += fresh
+        after[s] = len(seen) - 1
+        for t in seen - {s}:
+            before[t] += 1
+    return before, after
+
+
 def separated(n: int, arcs: Iterable[Arc], v: int) -> int:
     """Ordered pairs of others that are joined, but not without v (undirected)."""
     out = adjacency(n, arcs, directed=False)

@@ -142,7 +142,7 @@ def test_paths(name: str) -> None:
         looked = []
         for look in planned_looks(Rules(samples=MOST, top=1), SIZE):
             while tally.taken < look.samples:
-                tally.add(blocks[tally.blocks])
+                tally.add(blocks[tally.taken // SIZE])
             looked.append(evidence.bounds(look.share))
         count.see("any look", worst(looked), truth)
     count.check()

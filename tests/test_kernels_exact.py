@@ -104,7 +104,9 @@ def test_sampled_sources_and_their_moments(
         assert not scale.exact.any()
         drawn, by_vertex = sources.draws[:samples].tolist(), np.argsort(holder)
         together = [sum(not np.isinf(x) for x in row) for row in oracles.distances(oracles.adjacency(n, arcs, False))]
-        values = [[float(table[s][v]) / max(together[v] - 2, 1) for s in drawn] for v in by_vertex.tolist()]
+        after = oracles.reach(n, arcs, directed)[1]
+        most = [max(min(together[v] - 2, after[v]), 1) for v in range(n)]
+        values = [[float(table[s][v]) / most[v] for s in drawn] for v in by_vertex.tolist()]
     if not samples:
         assert not part.moments.any()
         return

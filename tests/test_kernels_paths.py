@@ -13,7 +13,7 @@ from hypothesis import strategies as st
 from scipy.stats import chi2, norm
 
 import oracles
-from isthmus.betweenness.engine_numba import kernels_paths, kernels_structure, paths
+from isthmus.betweenness.engine_numba import kernels_paths, paths
 from isthmus.betweenness.engine_numba.accelerate import COMPILED
 from isthmus.betweenness.engine_numba.prepare import Prepared, prepare
 from kernel_graphs import Arc, Case, arrays, cases, chain_of_gates, scattered
@@ -107,6 +107,14 @@ def test_trees_and_cliques_on_bridges_need_no_samples() -> None:
     bounds = paths.PathEvidence(prepared, paths.Tally.empty(14), 0.1)
     bounds.tally.add(paths.run_block(prepared, 1, 0, 10))
     assert not bounds.bounds(1.0).half_width.any()
+
+
+def test_cliques_on_a_busy_party_need_no_samples() -> None:
+    """100 triangles and a clique of 80 that share one party, whose neighbours are far too many to try in pairs."""
+    triangles = [arc for a in range(1, 201, 2) for arc in ((0, a), (0, a + 1), (a, a + 1))]
+    arcs = [*triangles, *((a, b) for b in range(201, 280) for a in [0, *range(201, b)])]
+    assert ready(280, arcs, False).settled.all()
+    assert not ready(280, arcs[:-1], False).settled.all()
 
 
 @pytest.mark.parametrize("directed", [True, False])
@@ -250,9 +258,8 @@ def test_random_words(start: int, bound: int) -> None:
 @given(st.lists(st.integers(0, 30), unique=True, max_size=12), st.integers(0, 31))
 def test_searching_a_row(row: list[int], wanted: int) -> None:
     row = sorted(row)
-    ptr, adj = np.array([0, len(row)]), np.array(row, np.uint32)
-    assert kernels_paths.among(adj, 0, len(row), wanted) == (wanted in row)
-    assert kernels_structure.covered(ptr, adj.astype(np.int32), 0, wanted) == (wanted in row)
+    adj = np.array([0, *row, 40], np.uint32)
+    assert kernels_paths.among(adj, 1, len(row) + 1, wanted) == (wanted in row)
 
 
 @settings(max_examples=60 if COMPILED else 20, deadline=None)
@@ -260,9 +267,8 @@ def test_searching_a_row(row: list[int], wanted: int) -> None:
 def test_hanging_trees_hang_on_the_core(case: Case) -> None:
     """The anchor is what leads to the rest when everybody with one neighbour has been taken off, again and again."""
     n, arcs, _, _ = case
-    graph = arrays(n, arcs, False)
-    anchor = np.empty(n, np.int32)
-    kernels_structure.hang(graph.out_ptr, graph.out_adj, anchor)
+    prepared = ready(n, arcs, False)
+    anchor = prepared.old[prepared.anchor]
     near = {v: set(row) for v, row in enumerate(oracles.adjacency(n, arcs, False))}
     left = dict(near)
     while (leaf := next((v for v, row in left.items() if len(row) == 1), None)) is not None:

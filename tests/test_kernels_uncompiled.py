@@ -9,7 +9,7 @@ import sys
 from pathlib import Path
 
 HERE = Path(__file__).parent
-FILES = ["test_kernels_exact.py", "test_kernels_paths.py", "test_sequences_and_stopping.py"]
+FILES = ["test_kernels_exact.py", "test_kernels_paths.py", "test_reach.py", "test_sequences_and_stopping.py"]
 
 
 def test_kernel_tests_pass_without_the_compiler() -> None:

@@ -35,7 +35,11 @@ def slow(monkeypatch: pytest.MonkeyPatch) -> None:
     """A machine on which a block of sources takes 64 s and a path a quarter: the clock of this one chooses nothing."""
     monkeypatch.setattr(costs, "TINY", 0)
     each = {"exact_block": 600.0, "pivots_block": 64.0, "paths_block": paths.FEWEST / 4}
-    monkeypatch.setattr(costs, "_seconds_each", lambda function, tasks, threads, job: each[function.__name__] / threads)
+
+    def probe(function: Any, tasks: list[Any], threads: int, job: Any) -> tuple[float, list[Any]]:
+        return each[function.__name__] / threads, [function(task) for task in tasks]
+
+    monkeypatch.setattr(costs, "_probe", probe)
 
 
 class TestAuto:

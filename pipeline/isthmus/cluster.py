@@ -9,7 +9,7 @@ from __future__ import annotations
 import os
 from collections import deque
 from collections.abc import Callable, Iterable, Iterator, Sequence
-from concurrent.futures import Future, ThreadPoolExecutor
+from concurrent.futures import Future, ThreadPoolExecutor, wait
 from contextlib import contextmanager
 from typing import Any, Protocol, TypeVar
 
@@ -58,9 +58,9 @@ class Here:
             for task in tasks:
                 ahead.append(pool.submit(function, task))
                 if len(ahead) > self._threads:
-                    yield ahead.popleft().result()
+                    yield _when_done(ahead.popleft())
             while ahead:
-                yield ahead.popleft().result()
+                yield _when_done(ahead.popleft())
         except BaseException:  # closed early, too
             if halt:
                 halt()
@@ -83,6 +83,13 @@ class Here:
         delayed = [dask.delayed(function, pure=False, traverse=False)(task) for task in tasks]
         with Callback(posttask=count):
             return list(dask.compute(*delayed, scheduler="threads", num_workers=self._threads, optimize_graph=False))
+
+
+def _when_done(future: Future[Result]) -> Result:
+    """A future's result. Wakes up now and then: a signal that the system gave to another thread is only seen then."""
+    while not wait([future], timeout=0.5).done:
+        pass
+    return future.result()
 
 
 class _Elsewhere:

@@ -12,6 +12,7 @@ import polars as pl
 from scipy.special import ndtri
 
 from isthmus.betweenness.engine_numba import blocks, exact, paths, pivots
+from isthmus.betweenness.engine_numba.reductions import Reduced
 from isthmus.betweenness.plan import Plan, spell_seconds
 from isthmus.cluster import Here
 from isthmus.errors import SettingsError
@@ -21,6 +22,7 @@ from isthmus.settings import Score
 __all__ = ["planner"]
 
 Task = TypeVar("Task")
+Result = TypeVar("Result")
 
 # Below this many arc visits in all, exact takes a fraction of a second, and a probe would cost more than it tells.
 TINY = 20_000_000
@@ -59,18 +61,22 @@ class _Planner:
         """All sources, in lanes."""
         n, arcs = self.graph.n, self.graph.arcs
         lanes, threads, needed = self._fit("exact", lambda lanes: exact.bytes_per_thread(n, arcs, lanes, self.weighted))
+        left = ""
         if self.tiny:
             seconds = n * (n + arcs) / NOMINAL_ARCS_PER_SECOND[self.weighted]
         else:
             _warm_up("exact", self.graph, self.score)
             job = self._job(lanes)
-            _, work = blocks.load_exact(job)
+            reduced, work = blocks.load_exact(job)
+            left = _what_is_left(reduced, self.graph)
             picks = np.unique(np.linspace(0, work.blocks - 1, min(work.blocks, 4 * threads)).astype(int)).tolist()
             tasks = [(job, index) for index in picks]
-            seconds = work.blocks * _seconds_each(blocks.exact_block, tasks[:1], 1, job) / threads
+            each, _ = _probe(blocks.exact_block, tasks[:1], 1, job)
+            seconds = work.blocks * each / threads
             if seconds < HOPELESS * self.budget:
-                seconds = work.blocks * _seconds_each(blocks.exact_block, tasks, threads, job)
-        said = f"exact takes about {spell_seconds(seconds)} on {threads} thread{'s' if threads > 1 else ''}"
+                each, _ = _probe(blocks.exact_block, tasks, threads, job)
+                seconds = work.blocks * each
+        said = f"exact takes about {spell_seconds(seconds)} on {threads} thread{'s' if threads > 1 else ''}{left}"
         if seconds > self.budget:
             said += f", longer than the {self.score.minutes:g} min allowed, and has no use when stopped half-way"
         return self._plan("exact", n, 0.0, "exact", said, seconds, needed, threads, lanes)
@@ -87,11 +93,14 @@ class _Planner:
         job = self._job(lanes)
         sources = blocks.load_pivots(job)
         draws = min(pivots.BLOCK, n)
-        each = _seconds_each(blocks.pivots_block, [(job, 0, draws)] * threads, threads, job) / draws
-        pilot = pivots.run_block(sources, 0, draws)
+        alone, (pilot,) = _probe(blocks.pivots_block, [(job, 0, draws)], 1, job)
+        each = alone / threads / draws
+        if alone < PROBE_SECONDS:
+            together, _ = _probe(blocks.pivots_block, [(job, 0, draws)] * threads, threads, job)
+            each = together / draws
         mean = pilot.sums / draws
         spread = np.maximum(pilot.moments[:, 9] / draws - mean**2, 0.0) * sources.scale.factor**2
-        worst = math.sqrt(float(spread.max()))
+        worst = math.sqrt(float(spread.max(initial=0.0)))
 
         def half_width(samples: int) -> float:
             left = max(1 - samples / n, 0.0)
@@ -107,21 +116,23 @@ class _Planner:
                 'use method = "pivots" or "exact"'
             )
         n = self.graph.n
-        # the graph renumbered (both ways when directed), what building that takes, and what is known of each party
-        base = (4 * (2 if self.graph.directed else 1) + 16) * self.graph.arcs + 90 * n
+        # the graph renumbered, what is known of each party, and what finding that out takes: most where a directed graph
+        # has no cycles, for its condensation is then another copy of it
+        base = (72 if self.graph.directed else 32) * self.graph.arcs + 90 * n
         _, threads, needed = self._fit("paths", lambda _: paths.bytes_per_thread(n), base)
         if self.trivial:
             return self._plan("paths", 1, 0.0, "exact", "there is nothing to sample", 0.0, needed, threads, paths.MOST)
         _warm_up("paths", self.graph, self.score)
         job = self._job(0)
-        prepared = blocks.load_paths(job)
-        pairs, each = paths.FEWEST // 2, 0.0
-        while each < PROBE_SECONDS and pairs < paths.MOST:
+        blocks.load_paths(job)
+        pairs, each, size = paths.FEWEST, 0.0, 0
+        while True:
+            tasks = [(job, at * pairs, pairs) for at in range(threads)]
+            each, (pilot, *_) = _probe(blocks.paths_block, tasks, threads, job)
+            size = size or paths.block_size(pilot.visited, pairs)
+            if each >= PROBE_SECONDS or pairs >= paths.MOST:
+                break
             pairs *= 2
-            each = _seconds_each(blocks.paths_block, [(job, at * pairs, pairs) for at in range(threads)], threads, job)
-        pilot = paths.run_block(prepared, self.score.seed, 0, pairs)
-        first = paths.run_block(prepared, self.score.seed, 0, paths.FEWEST)
-        size = paths.block_size(first.visited, paths.FEWEST)
         share = (float(pilot.counts.max(initial=0)) + 1) / pairs
 
         def half_width(samples: int) -> float:
@@ -214,12 +225,27 @@ class _Planner:
         )
 
 
-def _seconds_each(function: Callable[[Task], object], tasks: Sequence[Task], threads: int, job: blocks.Job) -> float:
-    """Measured wall seconds per task, with as many at once as in the run."""
+def _probe(
+    function: Callable[[Task], Result], tasks: Sequence[Task], threads: int, job: blocks.Job
+) -> tuple[float, list[Result]]:
+    """Measured wall seconds per task, with so many at once, and the results."""
     start = time.perf_counter()
-    for _ in Here(threads).stream(function, tasks, job.halt):
-        pass
-    return (time.perf_counter() - start) / len(tasks)
+    results = list(Here(threads).stream(function, tasks, job.halt))
+    return (time.perf_counter() - start) / len(tasks), results
+
+
+def _what_is_left(reduced: Reduced, graph: Graph) -> str:
+    """What structure spares the sweeps, for people."""
+    told = {
+        "folded": "hanging trees {:,} parties",
+        "blocks_settled": "cliques between articulation points {:,}",
+        "twins_merged": "twins {:,}",
+    }
+    parts = [text.format(reduced.gains[key]) for key, text in told.items() if reduced.gains.get(key)]
+    if not parts:
+        return ""
+    left = reduced.arrays
+    return f" (taken off: {', '.join(parts)}; left: {left.n:,} of {graph.n:,} parties, {left.arcs:,} of {graph.arcs:,} arcs)"
 
 
 def _fewest(half_width: Callable[[int], float], wanted: float, most: int) -> int:

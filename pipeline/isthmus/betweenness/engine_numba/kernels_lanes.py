@@ -183,6 +183,8 @@ def lanes_sweep(
             # Who is new, by masks alone: small arrays that stay in the cache.
             last = end
             for i in range(begin, end):
+                if stop[0]:
+                    return reach
                 v, mask = record_v[i], record_mask[i]
                 for j in range(out_ptr[v], out_ptr[v + 1]):
                     w = out_adj[j]

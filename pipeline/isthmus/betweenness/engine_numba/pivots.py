@@ -1,7 +1,7 @@
 """Sampled sources (`pivots`): a simple random sample of sources without replacement, in the order they were drawn.
 
 Brandes and Pich (2007). Source s gives party v the score x_s(v) = dependency / R(v) in [0, 1], where R(v) is the
-number of other vertices in its weak component less one: more end points than that it cannot lie in front of.
+number of vertices that it can reach, at most: more end points than that it cannot lie in front of.
 
 Structure is used where one source still shows what it showed before. Hanging trees come off (undirected, no hop
 limit): a source in a tree is swept from where the tree hangs, and pairs that a tree settles are counted, not sampled.
@@ -20,15 +20,15 @@ from dataclasses import dataclass
 from typing import NamedTuple
 
 import numpy as np
-from scipy.sparse import csr_array
-from scipy.sparse.csgraph import connected_components
 
 from isthmus.betweenness.engine_numba.exact import GO_ON, MOST_LANES, check_lengths, sweep
 from isthmus.betweenness.engine_numba.kernels_moments import MOMENTS
+from isthmus.betweenness.engine_numba.kernels_structure import anchor_trees, peel
+from isthmus.betweenness.engine_numba.reach import reach_limits
 from isthmus.betweenness.engine_numba.reductions import Reduced, reduce
 from isthmus.betweenness.engine_numba.sequences import Scale, draw_order
 from isthmus.betweenness.engine_numba.subgraphs import Bytes, Floats
-from isthmus.betweenness.engine_numba.trees import roots
+from isthmus.betweenness.engine_numba.trees import component_sizes
 from isthmus.betweenness.engine_numba.zeros import certain_zeros
 from isthmus.graph.arrays import Arrays, Ids
 
@@ -77,23 +77,26 @@ def prepare_sources(
     classes = reduced.arrays.n
     holder = np.full(n, -1, np.int32)
     holder[reduced.member] = reduced.holder
-    seen_from = holder[roots(graph)] if fold else holder
-    arcs = csr_array((np.ones(graph.arcs, np.int8), graph.out_adj, graph.out_ptr), shape=(n, n))
-    _, component = connected_components(arcs, directed=graph.directed, connection="weak")
-    company = np.bincount(component)[component] if n else np.zeros(0)
+    seen_from = np.arange(n, dtype=np.int32)
+    if fold:
+        anchor_trees(*peel(graph.out_ptr, graph.out_adj), seen_from)
+    company = component_sizes(graph)
+    before, after = reach_limits(graph)
     largest = np.ones(classes)
-    largest[reduced.holder] = np.maximum(company[reduced.member] - 2.0, 1.0)
+    np.maximum.at(largest, reduced.holder, np.minimum(company - 2, after)[reduced.member])
     pairs = max(1.0, (n - 1.0) * (n - 2.0))
     scale = Scale(
         factor=n * largest / pairs,
         settled=certain_zeros(reduced.arrays),
         exact=reduced.settled / pairs,
-        ceiling=np.maximum(company - 1.0, 0.0) * np.maximum(company - 2.0, 0.0) / pairs,
+        ceiling=np.minimum((company - 1) * (company - 2), before * after) / pairs,
         holder=holder,
     )
     if graph.out_lengths is not None:
         lanes = 1
-    return Sources(reduced, draw_order(n, seed).astype(np.int32), seen_from, 1.0 / largest, scale, lanes, max_hops)
+    return Sources(
+        reduced, draw_order(n, seed).astype(np.int32), holder[seen_from], 1.0 / largest, scale, lanes, max_hops
+    )
 
 
 def plan_blocks(most: int) -> Iterator[tuple[int, int]]:

@@ -20,9 +20,10 @@ from scipy.sparse import csr_array
 from scipy.sparse.csgraph import connected_components
 
 from isthmus.betweenness.engine_numba.kernels_paths import NO_IN, NO_OUT
-
-# Pairs of neighbours looked at per vertex when certain zeros are looked for.
-MOST_PAIRS = 4096
+from isthmus.betweenness.engine_numba.kernels_structure import anchor_trees, blocks, bypassed, peel, renumber
+from isthmus.betweenness.engine_numba.reach import reach_limits
+from isthmus.betweenness.engine_numba.trees import pairs_apart
+from isthmus.graph.arrays import Arrays
 
 
 @dataclass(frozen=True)
@@ -31,9 +32,9 @@ class Prepared:
 
     n: vertices pairs are drawn from; searched: vertices of the renumbered graph. exact: float64[n], the part
     of each party's betweenness (Freeman's scale, 0..1) that is known without sampling. ceiling: float64[n],
-    what no party can exceed: all pairs of its weak component. settled: bool[n], True where `exact` is the
-    whole of it. old: int32[searched], original ids; anchor: int32[n], searched vertex from which a party's
-    searches start.
+    what no party can exceed: all pairs of its weak component, and when directed those that can reach it times
+    those that it can reach. settled: bool[n], True where `exact` is the whole of it. old: int32[searched],
+    original ids; anchor: int32[n], searched vertex from which a party's searches start.
     """
 
     n: int
@@ -70,8 +71,6 @@ def prepare(
     reverse (the same arrays when undirected). max_hops: 0 = no limit. structure=False samples everything (for
     tests).
     """
-    from isthmus.betweenness.engine_numba import kernels_structure as kernels
-
     arcs = csr_array((np.ones(out_adj.size, np.int8), out_adj, out_ptr), shape=(n, n))
     _, component = connected_components(arcs, directed=directed, connection="weak")
     component = component.astype(np.int32)
@@ -80,16 +79,19 @@ def prepare(
     pairs = max(1.0, (n - 1.0) * (n - 2.0))
     company = np.bincount(component, minlength=1)
     ceiling = ((company - 1.0) * (company - 2.0))[component] / pairs
+    if directed:
+        graph = Arrays(directed=True, out_ptr=out_ptr, out_adj=out_adj, in_ptr=in_ptr, in_adj=in_adj)
+        before, after = reach_limits(graph)
+        ceiling = np.minimum(ceiling, before * after / pairs)
     exact = np.zeros(n)
     settled = np.zeros(n, np.bool_)
     if structure:
         if not directed and max_hops == 0:
-            apart = np.empty(n, np.int64)
-            kernels.hang(out_ptr, out_adj, anchor)
-            kernels.blocks(out_ptr, out_adj, component, company, home, entry, apart)
-            exact = apart / pairs
-        kernels.bypassed(out_ptr, out_adj, in_ptr, in_adj, home, entry, MOST_PAIRS, settled)
-        settled |= ceiling <= exact
+            anchor_trees(*peel(out_ptr, out_adj), anchor)
+            size, below, squares = company[component].astype(float), np.ones(n), np.zeros(n)
+            _, _, home, entry = blocks(out_ptr, out_adj, below, squares, size)
+            exact = pairs_apart(size, below, squares) / pairs
+        settled = bypassed(out_ptr, out_adj, in_ptr, in_adj, home, entry) | (ceiling <= exact)
 
     out_degree, in_degree = np.diff(out_ptr), np.diff(in_ptr)
     core = np.flatnonzero(anchor == np.arange(n))
@@ -129,9 +131,7 @@ def _searched(
     old: NDArray[np.int32],
     aside: NDArray[np.bool_],
 ) -> tuple[NDArray[np.int64], NDArray[np.uint32]]:
-    from isthmus.betweenness.engine_numba import kernels_structure as kernels
-
     rows = np.empty((old.size + 1, 2), np.int64)
     arcs = np.empty(adj.size, np.uint32)
-    kept = kernels.renumber(ptr, adj, new, old, aside, rows, arcs)
+    kept = renumber(ptr, adj, new, old, aside, rows, arcs)
     return rows, arcs[:kept].copy() if kept < arcs.size else arcs

@@ -18,7 +18,7 @@ Bytes = NDArray[np.uint8]
 
 def from_arcs(n: int, tail: NDArray[Any], tip: NDArray[Any], lengths: Ints | None, *, directed: bool) -> Arrays:
     """Compressed adjacency of arcs; undirected ties are given both ways; repeated arcs count once."""
-    data = np.ones(tail.size, np.int64) if lengths is None else lengths
+    data = np.ones(tail.size, np.int8) if lengths is None else lengths
     if lengths is None:
         matrix = csr_array((data, (tail, tip)), shape=(n, n))
         matrix.sum_duplicates()

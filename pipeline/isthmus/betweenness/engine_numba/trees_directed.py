@@ -7,8 +7,8 @@ from dataclasses import dataclass
 import numpy as np
 
 from isthmus.betweenness.engine_numba.accelerate import kernel
+from isthmus.betweenness.engine_numba.kernels_structure import peel
 from isthmus.betweenness.engine_numba.subgraphs import Flags, Floats, from_arcs, induced
-from isthmus.betweenness.engine_numba.trees import peel
 from isthmus.graph.arrays import Arrays, Ids
 
 
