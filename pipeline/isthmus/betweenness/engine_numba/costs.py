@@ -116,8 +116,8 @@ class _Planner:
                 'use method = "pivots" or "exact"'
             )
         n = self.graph.n
-        # the graph renumbered, what is known of each party, and what finding that out takes: most where a directed graph
-        # has no cycles, for its condensation is then another copy of it
+        # the graph renumbered, what is known of each party, and what finding that out takes: most where a directed
+        # graph has no cycles, for its condensation is then another copy of it
         base = (72 if self.graph.directed else 32) * self.graph.arcs + 90 * n
         _, threads, needed = self._fit("paths", lambda _: paths.bytes_per_thread(n), base)
         if self.trivial:
@@ -244,8 +244,8 @@ def _what_is_left(reduced: Reduced, graph: Graph) -> str:
     parts = [text.format(reduced.gains[key]) for key, text in told.items() if reduced.gains.get(key)]
     if not parts:
         return ""
-    left = reduced.arrays
-    return f" (taken off: {', '.join(parts)}; left: {left.n:,} of {graph.n:,} parties, {left.arcs:,} of {graph.arcs:,} arcs)"
+    left = f"{reduced.arrays.n:,} of {graph.n:,} parties, {reduced.arrays.arcs:,} of {graph.arcs:,} arcs"
+    return f" (taken off: {', '.join(parts)}; left: {left})"
 
 
 def _fewest(half_width: Callable[[int], float], wanted: float, most: int) -> int:
