@@ -18,7 +18,7 @@ PROGRAM = """
 import numpy as np
 from isthmus.betweenness.engine_numba.kernels_moments import MOMENTS, note
 moments = np.zeros((1, MOMENTS))
-note(moments, 0, 1.0)
+note(moments, 0, 1.0, 1.0)
 assert moments[0, 8] == 1.0
 """
 
