@@ -9,7 +9,7 @@ import pytest
 
 from isthmus.cluster import open_door
 from isthmus.errors import GateStopped
-from isthmus.gates import pass_gates
+from isthmus.gates import Gatekeeper
 from isthmus.ingest import read_window, survey
 from isthmus.settings import Gates, Log
 from isthmus.watch import Watch
@@ -29,10 +29,12 @@ def test_rows_outside_the_window_do_not_dilute_the_refused(tmp_path) -> None:
     with pytest.raises(
         GateStopped, match=r"2 of the window's 4 rows were refused, a share of 50\.00%.*2 sender is null"
     ):
-        pass_gates(
-            Gates(),
+        Gatekeeper(Gates(), lambda _: None).after_reading(
             rows=reading.rows_in_window,
             refused=reading.outcomes["refused"],
             missing_days=(),
-            warn=lambda _: None,
+            volume=reading.volume,
+            last_day=day.date(),
+            drift={},
+            before=None,
         )

@@ -135,7 +135,21 @@ def test_no_file(tmp_path: Path, path: str) -> None:
 
 def test_defaults_are_the_contract(tmp_path: Path) -> None:
     told = settings_of(tmp_path, LEAST).model_dump()
-    assert told.pop("gates") == {"missing_days": "stop", "refused": "stop", "refused_limit": 0.01}
+    assert told.pop("gates") == {
+        "missing_days": "stop",
+        "refused": "stop",
+        "refused_limit": 0.01,
+        "nulls": "stop",
+        "nulls_limit": 0.001,
+        "volume": "stop",
+        "volume_warn": 1.25,
+        "volume_stop": 2.0,
+        "schema_drift": "stop",
+        "component": "warn",
+        "component_change": 0.1,
+        "overlap": "warn",
+        "overlap_limit": 0.5,
+    }
     assert told == {
         "series": "s",
         "log": {
@@ -162,6 +176,8 @@ def test_defaults_are_the_contract(tmp_path: Path) -> None:
             "workers": 0,
             "threads": 0,
             "scheduler": "",
+            "finish_by": "",
+            "late": "restate",
             "memory": "16GiB",
         },
     }
@@ -240,12 +256,24 @@ NO_CHANGES: dict[str, dict[str, Any]] = {
     "gates.missing_days": {"gates": {"missing_days": "off"}},
     "gates.refused": {"gates": {"refused": "off"}},
     "gates.refused_limit": {"gates": {"refused_limit": 0.5}},
+    "gates.nulls": {"gates": {"nulls": "warn"}},
+    "gates.nulls_limit": {"gates": {"nulls_limit": 0.5}},
+    "gates.volume": {"gates": {"volume": "off"}},
+    "gates.volume_warn": {"gates": {"volume_warn": 1.5}},
+    "gates.volume_stop": {"gates": {"volume_stop": 3.0}},
+    "gates.schema_drift": {"gates": {"schema_drift": "off"}},
+    "gates.component": {"gates": {"component": "stop"}},
+    "gates.component_change": {"gates": {"component_change": 0.5}},
+    "gates.overlap": {"gates": {"overlap": "stop"}},
+    "gates.overlap_limit": {"gates": {"overlap_limit": 0.9}},
     "run.warehouse": {"run": {"warehouse": "/w"}},
     "run.work": {"run": {"work": "/k"}},
     "run.workers": {"run": {"workers": 2}},
     "run.threads": {"run": {"threads": 2}},
     "run.scheduler": {"run": {"scheduler": "tcp://x:1"}},
     "run.memory": {"run": {"memory": "1GiB"}},
+    "run.finish_by": {"run": {"finish_by": "05:45"}},
+    "run.late": {"run": {"late": "freeze"}},
 }
 ONLY_ONE_CHOICE = {"log.kind"}
 

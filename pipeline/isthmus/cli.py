@@ -3,17 +3,21 @@
 from __future__ import annotations
 
 import os
+import signal
 import sys
 import traceback
 from datetime import date
 from pathlib import Path
-from typing import Annotated
+from typing import TYPE_CHECKING, Annotated
 
 import typer
 
 from isthmus import reports
 from isthmus.console import Console
-from isthmus.errors import GateStopped, IsthmusError, StoreError
+from isthmus.errors import GateStopped, IsthmusError, StoreError, TryAgain
+
+if TYPE_CHECKING:
+    from isthmus.nights import Result
 
 __all__ = ["app", "main"]
 
@@ -59,6 +63,14 @@ def _day(text: str) -> date:
     return day
 
 
+def _gate(name: str) -> str:
+    from isthmus.gates import GATES
+
+    if name not in GATES:
+        raise typer.BadParameter(f"no gate {name!r}; there are {', '.join(GATES)}")
+    return name
+
+
 def _table(name: str) -> str:
     from isthmus.tables import TABLES
 
@@ -74,29 +86,86 @@ AsOf = Annotated[
         "--as-of", metavar="DATE", parser=_day, help="last day of the window, YYYY-MM-DD  [default: yesterday, UTC]"
     ),
 ]
+Accept = Annotated[
+    list[str] | None,
+    typer.Option(
+        "--accept", metavar="GATE", parser=_gate, help="publish although this gate stops the night; may be repeated"
+    ),
+]
 Json = Annotated[bool, typer.Option("--json", help="put one JSON object on stdout")]
 
 
 @app.command()
-def score(config: Config, as_of: AsOf = None, as_json: Json = False) -> None:
+def score(config: Config, as_of: AsOf = None, accept: Accept = None, as_json: Json = False) -> None:
     """One night: read the window, measure, publish.
 
-    Safe to repeat: the same night replaces its own files and nothing else.
+    Safe to repeat: the same night replaces its own files and nothing else. A run that was killed or stopped goes on
+    from the days that it had read and the blocks that it had measured. Published nights whose log has changed since
+    are computed again afterwards, or left and told, as run.late says.
 
     \b
     Examples
       isthmus score configs/payments.toml
       isthmus score configs/payments.toml --as-of 2026-11-30 --json > run.json
+      isthmus score configs/payments.toml --accept volume      (it was a public holiday)
     """
-    from isthmus.nightly import run_night, yesterday
+    from datetime import datetime
+
+    from isthmus import nights
+    from isthmus.deadline import Deadline
+    from isthmus.nightly import yesterday
     from isthmus.settings import load
 
     console = Console(as_json=as_json)
     settings = load(config)
+    deadline = Deadline.of(settings, datetime.now())
     with console.watch() as watch:
-        outcome = run_night(settings, as_of or yesterday(), watch)
-    reports.night(console, outcome)
-    console.answer(outcome.manifest)
+        first, *others = nights.score(settings, as_of or yesterday(), watch, deadline, frozenset(accept or ()))
+    assert first.outcome is not None
+    reports.night(console, first.outcome)
+    for result in others:
+        reports.one_line(console, result, "restated")
+    console.answer(first.outcome.manifest)
+    _raise_first(others)
+
+
+@app.command()
+def backfill(
+    config: Config,
+    first: Annotated[date, typer.Option("--from", metavar="DATE", parser=_day, help="last day of the first window")],
+    last: Annotated[date, typer.Option("--to", metavar="DATE", parser=_day, help="last day of the last window")],
+    again: Annotated[bool, typer.Option("--again", help="also nights that are complete")] = False,
+    accept: Accept = None,
+) -> None:
+    """Several nights, oldest first: to catch up after an outage, or to fill a new warehouse.
+
+    Nights that are published whole by these settings are skipped, unless their log has changed since. Ends at the first
+    night that fails, with its exit code; the same command goes on from there. What is the latest night does not change:
+    that is the one with the highest as_of.
+
+    \b
+    Example
+      isthmus backfill configs/payments.toml --from 2026-11-01 --to 2026-11-30
+    """
+    from isthmus import nights
+    from isthmus.settings import load
+
+    if last < first:
+        raise typer.BadParameter(f"--to {last} is before --from {first}")
+    console = Console()
+    settings = load(config)
+    results = []
+    with console.watch() as watch:
+        for result in nights.backfill(settings, first, last, watch, again=again, accept=frozenset(accept or ())):
+            results.append(result)
+            reports.one_line(console, result, "published")
+    _raise_first(results)
+
+
+def _raise_first(results: list[Result]) -> None:
+    for result in results:
+        if result.error:
+            raise result.error
 
 
 @app.command()
@@ -174,7 +243,15 @@ def demo(
 
 def main(arguments: list[str] | None = None) -> None:
     """Run the command and leave with its exit code."""
+    signal.signal(signal.SIGTERM, _asked_to_stop)
     sys.exit(_exit_code(arguments))
+
+
+def _asked_to_stop(*_: object) -> None:
+    raise TryAgain(
+        "asked to stop by SIGTERM; nothing is half-published, what was read and measured is kept: the same command "
+        "goes on from there"
+    )
 
 
 def _exit_code(arguments: list[str] | None) -> int:

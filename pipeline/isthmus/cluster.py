@@ -15,7 +15,7 @@ from typing import Any, Protocol, TypeVar
 
 from isthmus.errors import StoreError
 
-__all__ = ["Door", "Here", "open_door"]
+__all__ = ["Door", "Here", "Tick", "open_door"]
 
 WORKER_SECONDS = 30  # workers that a batch system starts may come a little later than the scheduler
 ANSWER_SECONDS = 10  # a scheduler that is there answers in one

@@ -11,9 +11,10 @@ from isthmus import store
 from isthmus.betweenness import Plan, make_plan
 from isthmus.cluster import open_door
 from isthmus.errors import DataRefused, GateStopped
-from isthmus.gates import pass_gates
+from isthmus.gates import Gatekeeper
 from isthmus.graph import Graph
-from isthmus.ingest import Sample, Survey, in_window, sample_ties, survey
+from isthmus.ingest import Sample, Survey, drift, in_window, sample_ties, survey
+from isthmus.publish import Night, reference
 from isthmus.settings import Settings
 from isthmus.tables import LAYOUT
 
@@ -68,25 +69,30 @@ def foresee(settings: Settings, first_day: date, last_day: date) -> Forecast:
         growth = found.rows / sample.rows
         parties, ties = _grown(half.n, graph.n, growth), _grown(half.ties, graph.ties, growth)
         plan = _scaled(plan, (parties * ties) / (graph.n * graph.ties), ties / graph.ties)
-    warnings, stopped = _gates(settings, first_day, last_day, sample, whole=sample.rows >= found.rows)
+    warnings, stopped = _gates(settings, first_day, last_day, found, sample)
     return Forecast(
         first_day, last_day, found, sample.rows, sample.outcomes, sample.days, parties, ties, plan, warnings, stopped
     )
 
 
 def _gates(
-    settings: Settings, first_day: date, last_day: date, sample: Sample, *, whole: bool
+    settings: Settings, first_day: date, last_day: date, found: Survey, sample: Sample
 ) -> tuple[tuple[str, ...], str]:
-    """What the gates say of the rows looked at. Days can only be missed where all rows were."""
+    """What the gates say of the rows looked at. Days can only be missed, and counted, where all rows were."""
+    whole = sample.rows >= found.rows
+    before = reference(Night(Path(settings.run.warehouse), settings.series, last_day))
+    used = [theirs for theirs in settings.log.columns.model_dump().values() if theirs]
     days = [first_day + timedelta(days=at) for at in range((last_day - first_day).days + 1)]
     warnings: list[str] = []
     try:
-        pass_gates(
-            settings.gates,
+        Gatekeeper(settings.gates, warnings.append).after_reading(
             rows=in_window(sample.outcomes),
             refused=sample.outcomes["refused"],
             missing_days=tuple(day for day in days if day not in sample.days) if whole else (),
-            warn=warnings.append,
+            volume=sample.volume if whole else {},
+            last_day=last_day,
+            drift=drift(before.columns, found.schema, used) if before and before.columns else {},
+            before=before,
         )
     except GateStopped as stop:
         return tuple(warnings), str(stop)

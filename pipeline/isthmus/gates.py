@@ -1,51 +1,195 @@
-"""Figures of a night that are too odd to publish. A gate stops the night, warns, or is off, as `[gates]` says."""
+"""Figures of a night that are too odd to publish. A gate stops the night, warns, or is off, as `[gates]` says.
+
+Gates with two limits warn at the nearer one and stop at the farther. What an operator accepts by name is published all
+the same, and the record says so. The defaults are this project's own, not a standard.
+"""
 
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from datetime import date
+from dataclasses import asdict, dataclass, field
+from datetime import date, timedelta
+from statistics import median
+from typing import Any, Literal
 
 from isthmus.errors import GateStopped
 from isthmus.settings import Gate, Gates
 
-__all__ = ["pass_gates"]
+__all__ = ["FIRST_PARTIES", "GATES", "WEEKS", "Gatekeeper", "Reference"]
+
+State = Literal["passed", "warned", "stopped", "accepted", "off", "nothing to compare with"]
+GATES = ("missing_days", "refused", "nulls", "volume", "schema_drift", "component", "overlap")
+FIRST_PARTIES = 100
+WEEKS = 4  # same weekdays that a day's volume is held against
+FEWEST = 2  # fewer say nothing
+NULL_KEYS = ("sender is null", "receiver is null", "sender is empty", "receiver is empty")
 
 
-def pass_gates(
-    gates: Gates,
-    *,
-    rows: int,
-    refused: Mapping[str, int],
-    missing_days: tuple[date, ...],
-    warn: Callable[[str], None],
-) -> None:
-    """Hold the reading against the gates. Raises GateStopped, naming every gate that stops the night.
+@dataclass(frozen=True)
+class Reference:
+    """What an earlier night of the series tells: its day, its columns' types, its figures, its first 100 parties."""
 
-    `rows`: those of the window, whatever became of them; `refused`: reason -> rows.
+    as_of: date
+    columns: Mapping[str, str]
+    component_share: float | None
+    first_parties: frozenset[str]
+
+
+@dataclass(frozen=True)
+class Judged:
+    """One gate's finding. `figure` and `limit` are for people and machines alike; neither names a party."""
+
+    gate: str
+    figure: float | None
+    limit: float | None
+    state: State
+    text: str = ""
+
+
+@dataclass
+class Gatekeeper:
+    """Holds a night against the gates, in two rounds: after reading and after scoring.
+
+    Each round raises GateStopped, naming every gate of the round that stops the night, with figure, limit and what to
+    look at. `accepted`: gates whose stop is published knowingly.
     """
-    stops: list[str] = []
 
-    def judge(gate: Gate, name: str, text: str) -> None:
-        if gate == "stop":
-            stops.append(f'{text}; look at the log, or set [gates] {name} = "warn" to publish all the same')
-        elif gate == "warn":
-            warn(text)
+    gates: Gates
+    warn: Callable[[str], None]
+    accepted: frozenset[str] = frozenset()
+    judged: list[Judged] = field(default_factory=list)
 
-    if missing_days:
-        judge(gates.missing_days, "missing_days", _missing(missing_days))
-    share = sum(refused.values()) / rows
-    if share > gates.refused_limit:
+    def after_reading(
+        self,
+        *,
+        rows: int,
+        refused: Mapping[str, int],
+        missing_days: tuple[date, ...],
+        volume: Mapping[date, int],
+        last_day: date,
+        drift: Mapping[str, tuple[str, bool]],
+        before: Reference | None,
+    ) -> None:
+        """rows: of the window, whatever became of them; refused: reason -> rows; volume: day -> rows, of this window
+        and of earlier nights'; drift: the log's column -> (what changed, whether that is harmless).
+        """
+        gates, stops = self.gates, list[str]()
+        total = sum(refused.values())
         reasons = ", ".join(f"{number} {reason}" for reason, number in refused.items())
-        judge(
-            gates.refused,
-            "refused",
-            f"{sum(refused.values())} of the window's {rows} rows were refused, a share of {share:.2%} where "
-            f"gates.refused_limit allows {gates.refused_limit:.2%} ({reasons})",
-        )
-    if stops:
-        raise GateStopped(
-            "\n".join(("a gate stops the night, nothing is published:", *(f"  {text}" for text in stops)))
-        )
+        share = total / rows if rows else 0.0
+        self._judge(
+            stops, "missing_days", gates.missing_days, float(len(missing_days)), 0.0,
+            broken=bool(missing_days), text=_missing(missing_days), look="whether the days have arrived",
+        )  # fmt: skip
+        self._judge(
+            stops, "refused", gates.refused, share, gates.refused_limit, broken=share > gates.refused_limit,
+            text=f"{total} of the window's {rows} rows were refused, a share of {share:.2%} where gates.refused_limit "
+            f"allows {gates.refused_limit:.2%} ({reasons})",
+            look="the reasons, and the table `refused` of an earlier night; log.columns may be wrong",
+        )  # fmt: skip
+        nulls = sum(refused.get(reason, 0) for reason in NULL_KEYS)
+        share = nulls / rows if rows else 0.0
+        self._judge(
+            stops, "nulls", gates.nulls, share, gates.nulls_limit, broken=share > gates.nulls_limit,
+            text=f"{nulls} of the window's {rows} rows have no sender or no receiver, a share of {share:.3%} where "
+            f"gates.nulls_limit allows {gates.nulls_limit:.3%}",
+            look="the job that writes the log: a join that finds no key gives nulls",
+        )  # fmt: skip
+        self._volume(stops, volume, last_day)
+        self._columns(stops, drift, before)
+        self._close(stops)
+
+    def after_scoring(self, *, component_share: float, first_parties: frozenset[str], before: Reference | None) -> None:
+        """component_share: of all parties, those in the largest component; first_parties: the first 100 by rank."""
+        gates, stops = self.gates, list[str]()
+        known = None if before is None else before.component_share
+        moved = None if known is None else abs(component_share - known)
+        self._judge(
+            stops, "component", gates.component, moved, gates.component_change,
+            broken=moved is not None and moved > gates.component_change,
+            text=f"the largest component holds {component_share:.1%} of the parties, "
+            f"{0.0 if known is None else known:.1%} on the night before; gates.component_change allows "
+            f"{gates.component_change:.1%}",
+            look="whether a source of the log is missing, or another one joined",
+        )  # fmt: skip
+        kept = None
+        if before is not None and before.first_parties:
+            kept = len(first_parties & before.first_parties) / len(before.first_parties)
+        self._judge(
+            stops, "overlap", gates.overlap, kept, gates.overlap_limit,
+            broken=kept is not None and kept < gates.overlap_limit,
+            text=f"{0.0 if kept is None else kept:.0%} of the first 100 parties of the night before are among the "
+            f"first 100 now; gates.overlap_limit asks for {gates.overlap_limit:.0%}",
+            look="whether keys are written otherwise than before, or the settings changed",
+        )  # fmt: skip
+        self._close(stops)
+
+    def told(self) -> list[dict[str, Any]]:
+        """For run.json and the table `runs`."""
+        return [asdict(each) for each in self.judged]
+
+    def _volume(self, stops: list[str], volume: Mapping[date, int], last_day: date) -> None:
+        """The last day only: the others were judged on their own nights."""
+        alike = [volume[day] for week in range(1, WEEKS + 1) if (day := last_day - timedelta(weeks=week)) in volume]
+        usual = median(alike) if len(alike) >= FEWEST else 0.0
+        times = volume.get(last_day, 0) / usual if usual else None
+        gate, away = self.gates.volume, 1.0
+        if times is not None:
+            away = max(times, 1 / times) if times else float("inf")
+        if gate == "stop" and away <= self.gates.volume_stop:
+            gate = "warn"
+        self._judge(
+            stops, "volume", gate, times, self.gates.volume_stop if gate == "stop" else self.gates.volume_warn,
+            broken=away > self.gates.volume_warn,
+            text=f"{last_day} has {volume.get(last_day, 0)} rows, {0.0 if times is None else times:.2f} times the "
+            f"median of {len(alike)} same weekdays before; gates.volume_warn is a factor of "
+            f"{self.gates.volume_warn:g} either way, gates.volume_stop {self.gates.volume_stop:g}",
+            look="whether the last day has arrived whole, or twice; a public holiday is a reason to accept",
+        )  # fmt: skip
+
+    def _columns(self, stops: list[str], drift: Mapping[str, tuple[str, bool]], before: Reference | None) -> None:
+        for name, (what, harmless) in drift.items():
+            gate: Gate = "warn" if harmless and self.gates.schema_drift == "stop" else self.gates.schema_drift
+            self._judge(
+                stops, "schema_drift", gate, 1.0, 0.0, broken=True,
+                text=f"the log's column {name!r} {what} since the night of {before.as_of if before else 'before'}",
+                look="what changed in the log; a unit that changed makes amounts wrong by a factor",
+            )  # fmt: skip
+        if not drift:
+            figure = None if before is None or not before.columns else 0.0
+            self._judge(stops, "schema_drift", self.gates.schema_drift, figure, 0.0, broken=False, text="", look="")
+
+    def _judge(
+        self,
+        stops: list[str],
+        name: str,
+        gate: Gate,
+        figure: float | None,
+        limit: float,
+        *,
+        broken: bool,
+        text: str,
+        look: str,
+    ) -> None:
+        state: State = "passed"
+        if gate == "off":
+            state = "off"
+        elif figure is None:
+            state = "nothing to compare with"
+        elif broken and gate == "stop" and name not in self.accepted:
+            state = "stopped"
+            stops.append(f"{name}: {text}. Look at {look}; to publish knowingly: --accept {name}")
+        elif broken:
+            state = "accepted" if gate == "stop" else "warned"
+            self.warn(f"{name}: {text}" + (" (accepted)" if state == "accepted" else ""))
+        self.judged.append(Judged(name, figure, limit, state, text if broken and state != "off" else ""))
+
+    @staticmethod
+    def _close(stops: list[str]) -> None:
+        if stops:
+            raise GateStopped(
+                "\n".join(("a gate stops the night, nothing is published:", *(f"  {text}" for text in stops)))
+            )
 
 
 def _missing(days: tuple[date, ...]) -> str:

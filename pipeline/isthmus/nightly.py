@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from datetime import UTC, date, datetime, timedelta
 from pathlib import Path
@@ -10,12 +11,27 @@ from typing import Any
 import polars as pl
 
 from isthmus import store
-from isthmus.betweenness import measure
+from isthmus.betweenness import Checkpoint, measure
 from isthmus.cluster import open_door
-from isthmus.gates import pass_gates
+from isthmus.deadline import Deadline
+from isthmus.gates import FIRST_PARTIES, Gatekeeper
 from isthmus.graph import Graph, describe
-from isthmus.ingest import read_window, survey
-from isthmus.publish import Night, input_id_of, manifest, plan_once, publish, remember, run_id_of, run_row
+from isthmus.ingest import drift, read_window, survey
+from isthmus.publish import (
+    Night,
+    checkpoint_key,
+    input_id_of,
+    manifest,
+    plan_once,
+    publish,
+    record_of,
+    reference,
+    remember,
+    revision_of,
+    run_id_of,
+    run_row,
+    volume_of,
+)
 from isthmus.settings import Settings
 from isthmus.tables import LAYOUT
 from isthmus.watch import Watch
@@ -41,26 +57,43 @@ def window_of(settings: Settings, as_of: date) -> tuple[date, date]:
     return as_of - timedelta(days=settings.window.days - 1), as_of
 
 
-def run_night(settings: Settings, as_of: date, watch: Watch) -> Outcome:
-    """Read, measure, publish. Raises the errors of errors.py; whatever was published before stays until the end."""
+def run_night(
+    settings: Settings,
+    as_of: date,
+    watch: Watch,
+    accept: frozenset[str] = frozenset(),
+    frozen: Sequence[date] = (),
+) -> Outcome:
+    """Read, measure, publish. Raises the errors of errors.py; whatever was published before stays until the end.
+
+    accept: gates whose stop is published knowingly. frozen: published nights that late rows have changed and that are
+    left as they are, for the record.
+    """
     started_at = datetime.now(UTC)
+    deadline = Deadline.of(settings, datetime.now())
     first_day, last_day = window_of(settings, as_of)
     warehouse, work = Path(settings.run.warehouse), Path(settings.run.work) / f"series={settings.series}"
     store.claim(warehouse, LAYOUT, "run.warehouse")
     store.claim(work, LAYOUT, "run.work")
     store.sweep(warehouse, f"*/series={settings.series}/*")
     store.sweep(work)
+    night = Night(warehouse, settings.series, as_of)
+    before = reference(night)
+    gatekeeper = Gatekeeper(settings.gates, watch.warning, accept)
     run = settings.run
     with open_door(workers=run.workers, threads=run.threads, scheduler=run.scheduler, scratch=str(work)) as door:
         with watch.stage("survey"):
             found = survey(settings.log, first_day, last_day, door)
-        reading = read_window(found, settings.log, first_day, last_day, work, door, watch)
-        pass_gates(
-            settings.gates,
+        reading = read_window(found, settings.log, first_day, last_day, work, door, watch, deadline.reading)
+        used = [theirs for theirs in settings.log.columns.model_dump().values() if theirs]
+        gatekeeper.after_reading(
             rows=reading.rows_in_window,
             refused=reading.outcomes["refused"],
             missing_days=reading.missing_days,
-            warn=watch.warning,
+            volume=volume_of(night) | reading.volume,
+            last_day=last_day,
+            drift=drift(before.columns, found.schema, used) if before and before.columns else {},
+            before=before,
         )
         with watch.stage("graph"):
             built = Graph.from_ties(reading.ties, directed=settings.graph.directed, distance=settings.graph.distance)
@@ -68,17 +101,27 @@ def run_night(settings: Settings, as_of: date, watch: Watch) -> Outcome:
             graph = Graph.open(work / "snapshot")
             parties = describe(graph, reading.ties)
         input_id = input_id_of(settings, as_of, reading)
+        score = settings.score.model_copy(update={"minutes": deadline.minutes_for_scoring(graph.n, graph.ties)})
         with watch.stage("plan"):
-            plan = plan_once(work / "plan.json", input_id, graph, settings)
+            plan = plan_once(work / "plan.json", input_id, graph, score, run)
+        checkpoint = Checkpoint(work / "checkpoint", checkpoint_key(input_id, plan))
         with watch.stage("score") as tick:
-            estimate = measure(graph, plan, settings.score, run.threads, tick, door if run.elsewhere else None)
+            estimate = measure(graph, plan, score, run.threads, tick, door if run.elsewhere else None, checkpoint)
         remember(work / "plan.json", input_id, plan, estimate)
     run_id = run_id_of(settings.series, as_of, input_id, estimate)
     if graph.n < 3:
         watch.warning(f"{graph.n} parties: with fewer than three nobody can stand between others, so all scores are 0")
-    night = Night(warehouse, settings.series, as_of)
-    row = run_row(settings, run_id, first_day, plan, estimate, graph, reading, watch, started_at)
-    more = manifest(settings, as_of, found, reading, plan, watch)
+    component_share = int((parties["component"] == 0).sum()) / max(graph.n, 1)
+    gatekeeper.after_scoring(
+        component_share=component_share,
+        first_parties=frozenset(estimate.frame(settings.score.top).head(FIRST_PARTIES)["party"]),
+        before=before,
+    )
+    row = run_row(
+        settings, run_id, first_day, plan, estimate, graph, reading, watch, started_at,
+        revision=revision_of(record_of(night), run_id), gates=gatekeeper.told(),
+    )  # fmt: skip
+    more = manifest(settings, as_of, found, reading, plan, watch, component_share, frozen)
     with watch.stage("publish"):
         scores = publish(
             night,
@@ -90,4 +133,5 @@ def run_night(settings: Settings, as_of: date, watch: Watch) -> Outcome:
             top=settings.score.top,
             more=more,
         )
+    checkpoint.clear()
     return Outcome(night, scores, row | more)

@@ -11,6 +11,7 @@ from pathlib import Path
 from isthmus.console import Console, number, printable
 from isthmus.forecast import Forecast
 from isthmus.nightly import Outcome
+from isthmus.nights import Result
 from isthmus.publish.queries import top_brokers
 from isthmus.settings import Settings
 from isthmus.tables import PARTITION, Table
@@ -64,6 +65,20 @@ def night(console: Console, outcome: Outcome, first: int = 10) -> None:
         console.say(f"Warnings: {text}")
     console.say(f"Tables: {outcome.night.warehouse}  (run {run['run_id']})")
     console.say(CAUTION)
+
+
+def one_line(console: Console, result: Result, done: str) -> None:
+    """One night of several: what became of it."""
+    if result.error:
+        console.say(f"{result.as_of}  failed (exit {result.error.exit_code}): {str(result.error).splitlines()[0]}")
+    elif result.outcome is None:
+        console.say(f"{result.as_of}  complete, skipped")
+    else:
+        run = result.outcome.manifest
+        console.say(
+            f"{result.as_of}  {done}, revision {run['revision']}: {run['method']}, widest "
+            f"±{run['half_width_widest']:.2g}, {number(run['rows_used'])} rows used, {number(run['parties'])} parties"
+        )
 
 
 def _sentence(text: str) -> str:

@@ -90,7 +90,7 @@ class Score(Section):
     samples: int = _key(0, "how many to draw; 0: as many as the limits below allow", "samples", ge=0)
     half_width: float = _key(0.0, "stop once every interval is at least this narrow; 0: off", "betweenness", ge=0, lt=1)
     top: int = _key(100, "the K of the column `top`: who is surely among the first K", "parties", ge=0)
-    minutes: float = _key(30.0, "time that scoring may take", "minutes", gt=0)
+    minutes: float = _key(30.0, "time for the whole night: sampling stops early enough to publish", "minutes", gt=0)
     max_hops: int = _key(0, "paths of more arcs do not count; 0: no limit", "arcs", ge=0)
     seed: int = _key(1, "same seed, same samples", ge=0, lt=2**63)
 
@@ -100,7 +100,17 @@ class Gates(Section):
 
     missing_days: Gate = _key("stop", "a day of the window has no usable row")
     refused: Gate = _key("stop", "more rows were refused than `refused_limit` allows")
-    refused_limit: float = _key(0.01, "largest share of refused rows", "share of rows read", ge=0, le=1)
+    refused_limit: float = _key(0.01, "largest share of refused rows", "share of the window's rows", ge=0, le=1)
+    nulls: Gate = _key("stop", "more rows lack a sender or receiver than `nulls_limit` allows")
+    nulls_limit: float = _key(0.001, "largest share of rows without a key", "share of the window's rows", ge=0, le=1)
+    volume: Gate = _key("stop", "the last day's rows are far from the median of the same weekdays before")
+    volume_warn: float = _key(1.25, "a warning from this factor on, either way", "times the median", gt=1)
+    volume_stop: float = _key(2.0, "a stop from this factor on, either way", "times the median", gt=1)
+    schema_drift: Gate = _key("stop", "the log's columns changed since the night before; wider types only warn")
+    component: Gate = _key("warn", "the largest component's share moved further than `component_change`")
+    component_change: float = _key(0.1, "largest move since the night before", "share of parties", ge=0, le=1)
+    overlap: Gate = _key("warn", "fewer of the night before's first 100 are still there than `overlap_limit`")
+    overlap_limit: float = _key(0.5, "smallest share of them that must be", "share of 100 parties", ge=0, le=1)
 
 
 class Run(Section):
@@ -111,6 +121,16 @@ class Run(Section):
     workers: int = _key(0, "0: in this process; N: that many local processes", "processes", ge=0, le=1024)
     threads: int = _key(0, "per process; 0: all cores", "threads", ge=0, le=4096)
     scheduler: str = _key("", "address of a running Dask scheduler; empty: none")
+    finish_by: str = _key(
+        "",
+        'local time by which the night is to be published, such as "05:45"; empty: only `score.minutes` counts',
+        "HH:MM",
+        pattern=r"^(([01][0-9]|2[0-3]):[0-5][0-9])?$",
+    )
+    late: Literal["restate", "freeze"] = _key(
+        "restate",
+        "when rows of published nights' days change: compute those nights again, or leave them and record that",
+    )
     memory: str = _key(
         "16GiB",
         "planned against before the work starts: a number and KiB, MiB, GiB or TiB",

@@ -134,6 +134,7 @@ RUNS = Table(
         RUN_ID,
         Column("window_start", pl.Date(), "first day of the window"),
         _text("definition", "hash of the settings that change results"),
+        _count("revision", "1 = first published; one more each time the night was replaced by other content", ""),
         _text("version", "of isthmus"),
         _text("method", "exact, pivots or paths"),
         _text("engine", "whose algorithms"),
@@ -152,6 +153,11 @@ RUNS = Table(
         _count("rows_filtered", "left out on purpose: self-contacts, and rows of days outside the window", "log rows"),
         _count("rows_duplicate", "a row with the same id was counted already", "log rows"),
         _text("warnings", "what a person should know of this night; empty when nothing"),
+        Column(
+            "gates",
+            pl.List(pl.Struct({"gate": pl.String, "state": pl.String, "figure": pl.Float64, "limit": pl.Float64})),
+            "every gate: its state (passed, warned, accepted, off, nothing to compare with), its figure, its limit",
+        ),
         _number("predicted_seconds", "what the plan expected scoring to take", "seconds", nullable=True),
         _number("predicted_bytes", "what the plan expected scoring to need", "bytes", nullable=True),
         Column(

@@ -30,6 +30,10 @@ class Watch:
         self.seconds[name] = self.seconds.get(name, 0.0) + time.perf_counter() - began
         self.tell(name, 1.0)
 
+    def anew(self) -> Watch:
+        """One for another night, that is told and warned the same way."""
+        return Watch(self.tell, self.warn)
+
     def warning(self, text: str) -> None:
         """Remember and say something a person should know; it does not stop the night."""
         self.warnings.append(text)

@@ -10,6 +10,7 @@ from importlib import import_module
 
 from pydantic import ValidationError
 
+from isthmus.betweenness.checkpoint import Checkpoint
 from isthmus.betweenness.estimate import Estimate
 from isthmus.betweenness.plan import Plan, make_plan
 from isthmus.cluster import Door
@@ -17,7 +18,7 @@ from isthmus.errors import SettingsError
 from isthmus.graph import Graph
 from isthmus.settings import Engine, Method, Run, Score
 
-__all__ = ["Estimate", "Plan", "betweenness", "make_plan", "measure"]
+__all__ = ["Checkpoint", "Estimate", "Plan", "betweenness", "make_plan", "measure"]
 
 Progress = Callable[[float], None]
 
@@ -78,14 +79,16 @@ def measure(
     threads: int = 0,
     progress: Progress | None = None,
     door: Door | None = None,
+    checkpoint: Checkpoint | None = None,
 ) -> Estimate:
     """Do what `plan` says, with the seed and the confidence of `score`.
 
     `plan` must have been made for this graph, or for one with the same parties and ties. `threads` > 0 lowers the
     plan's number of threads. `door`: where blocks of work run, for an engine that cuts its work in blocks; by default
-    on threads in this process.
+    on threads in this process. `checkpoint`: what a killed run of the same plan left, and where this one keeps its own;
+    the engine `networkit` has no use for it.
     """
     # by name, so that importing isthmus imports no engine
     engine = import_module(f"isthmus.betweenness.engine_{plan.engine}")
-    estimate: Estimate = engine.run(graph, plan, score, threads, progress or (lambda _: None), door)
+    estimate: Estimate = engine.run(graph, plan, score, threads, progress or (lambda _: None), door, checkpoint)
     return estimate

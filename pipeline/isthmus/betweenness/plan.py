@@ -73,7 +73,7 @@ def make_plan(graph: Graph, score: Score, threads: int, memory_bytes: int) -> Pl
     else:
         if exact.predicted_seconds <= score.minutes * 60:
             return exact
-        why = f"exact would take {spell_seconds(exact.predicted_seconds)} of the {score.minutes:g} min allowed"
+        why = f"exact would take {spell_seconds(exact.predicted_seconds)} of the {score.minutes:.3g} min allowed"
     offers, refusals = [], [why]
     for method in (planner.paths, planner.pivots):
         try:

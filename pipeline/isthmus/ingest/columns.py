@@ -2,13 +2,15 @@
 
 from __future__ import annotations
 
+import re
+from collections.abc import Collection, Mapping
 from dataclasses import dataclass
 
 import pyarrow as pa
 
 from isthmus.errors import DataRefused
 
-__all__ = ["DAY", "PER_SECOND", "Kind", "kind_of"]
+__all__ = ["DAY", "PER_SECOND", "Kind", "drift", "kind_of"]
 
 DAY = 86_400 * 10**6  # microseconds
 PER_SECOND = {"s": 1, "ms": 10**3, "us": 10**6, "ns": 10**9}
@@ -74,3 +76,41 @@ def _classify(found: pa.DataType) -> Kind:
     if pa.types.is_null(values):
         return Kind("empty", text)
     return Kind("other", text)
+
+
+# Each holds all values of those before it. Ways of storing text are all alike.
+_WIDTHS = (
+    ("int8", "int16", "int32", "int64"),
+    ("uint8", "uint16", "uint32", "uint64"),
+    ("halffloat", "float", "double"),
+)
+_TEXTS = re.compile(r"(large_)?string(_view)?|dictionary<values=(large_)?string.*")
+_DECIMAL = re.compile(r"decimal\d*\((\d+), (-?\d+)\)")
+
+
+def drift(before: Mapping[str, str], now: Mapping[str, str], used: Collection[str]) -> dict[str, tuple[str, bool]]:
+    """How a log's columns (name -> Arrow's name of the type) have changed: name -> (what, whether that is harmless).
+
+    Harmless: a wider type of the same kind, and whatever happens to columns that are not `used`. A narrower type,
+    another kind and another unit are not: the same numbers may now mean something else.
+    """
+    found: dict[str, tuple[str, bool]] = {}
+    for name in sorted({*before, *now}):
+        old, new = before.get(name), now.get(name)
+        if old == new:
+            continue
+        if old is None:
+            found[name] = f"({new}) is new", name not in used
+        elif new is None:
+            found[name] = "is gone", name not in used
+        else:
+            found[name] = f"changed from {old} to {new}", name not in used or _widened(old, new)
+    return found
+
+
+def _widened(old: str, new: str) -> bool:
+    if old == "null" or (_TEXTS.fullmatch(old) and _TEXTS.fullmatch(new)):
+        return True
+    if (one := _DECIMAL.fullmatch(old)) and (two := _DECIMAL.fullmatch(new)):
+        return one[2] == two[2] and int(one[1]) <= int(two[1])
+    return any(old in row and new in row and row.index(old) <= row.index(new) for row in _WIDTHS)

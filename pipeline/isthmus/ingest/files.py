@@ -23,7 +23,7 @@ from isthmus.errors import DataRefused, SettingsError, StoreError
 from isthmus.ingest.columns import DAY, Kind, kind_of
 from isthmus.settings import Log
 
-__all__ = ["LogFile", "Part", "Survey", "open_parquet", "survey"]
+__all__ = ["LogFile", "Part", "Survey", "holds", "open_parquet", "states_of", "survey"]
 
 SUFFIXES = (".parquet", ".parq", ".pq")
 # A partition's date may be local while the window is in UTC: local days begin up to 14 hours before or 12 after.
@@ -43,13 +43,17 @@ class RowGroup:
 
 @dataclass(frozen=True)
 class LogFile:
-    """One log file as its footer describes it. `state`: see `state_of`. `kinds`: our column name -> its type."""
+    """One log file as its footer describes it. `state`: see `state_of`. `kinds`: our column name -> its type.
+
+    `schema`: every column of the file -> Arrow's name of its type.
+    """
 
     path: str
     name: str
     state: tuple[int, int]
     kinds: dict[str, Kind]
     groups: tuple[RowGroup, ...]
+    schema: dict[str, str]
 
     @property
     def size(self) -> int:
@@ -88,6 +92,11 @@ class Survey:
     def bytes(self) -> int:
         return sum(file.size for file in self.files)
 
+    @property
+    def schema(self) -> dict[str, str]:
+        """Column -> type, as the last file has it."""
+        return self.files[-1].schema if self.files else {}
+
 
 @dataclass(frozen=True)
 class _Look:
@@ -105,7 +114,7 @@ def survey(log: Log, first_day: date, last_day: date, door: Door) -> Survey:
     missing or of a wrong type, files that disagree).
     """
     root, paths = _list(log.path)
-    near = [path for path in paths if _can_hold(path, root, first_day, last_day)]
+    near = [path for path in paths if holds(os.path.relpath(path, root), first_day, last_day)]
     if not near:
         raise DataRefused(
             f"{log.path} has {len(paths)} Parquet files, but no partition for {first_day}..{last_day}; "
@@ -120,6 +129,18 @@ def survey(log: Log, first_day: date, last_day: date, door: Door) -> Survey:
     used = {part.path for part in parts}
     read = tuple(file for file in files if file.path in used)
     return Survey(read, parts, len(paths) - len(read))
+
+
+def states_of(log: Log) -> dict[str, tuple[int, int]]:
+    """Every file of the log: name -> size and time of change. Raises StoreError or DataRefused as `survey` does."""
+    root, paths = _list(log.path)
+    return {name: state_of(path, name) for path in paths for name in [os.path.relpath(path, root)]}
+
+
+def holds(name: str, first_day: date, last_day: date) -> bool:
+    """False only when a partition folder's date is too far from the window."""
+    day = _partition_day(name)
+    return day is None or first_day - SLACK <= day <= last_day + SLACK
 
 
 def _microseconds(day: date) -> int:
@@ -173,12 +194,6 @@ def _walk(root: str) -> Iterator[Path]:
 def _hidden(path: Path, root: str) -> bool:
     """Writers keep their own marks under names that begin with a dot or an underscore."""
     return any(step.startswith((".", "_")) and "=" not in step for step in path.relative_to(root).parts)
-
-
-def _can_hold(path: str, root: str, first_day: date, last_day: date) -> bool:
-    """False only when a partition folder's date is too far from the window."""
-    day = _partition_day(os.path.relpath(path, root))
-    return day is None or first_day - SLACK <= day <= last_day + SLACK
 
 
 def _partition_day(name: str) -> date | None:
@@ -245,7 +260,7 @@ def _footer(path: str, name: str, columns: dict[str, str]) -> LogFile:
                 )
             kinds[ours] = kind_of(schema.field(theirs).type, ours, theirs, name)
         times = _time_bounds(parquet.metadata, columns["time"])
-        return LogFile(path, name, state, kinds, tuple(times))
+        return LogFile(path, name, state, kinds, tuple(times), {field.name: str(field.type) for field in schema})
 
 
 def _time_bounds(footer: Any, column: str) -> list[RowGroup]:

@@ -14,10 +14,12 @@ import pyarrow as pa
 from isthmus.errors import TryAgain
 from isthmus.ingest.columns import DAY, PER_SECOND
 from isthmus.ingest.files import Part, damaged, open_parquet, state_of
+from isthmus.ingest.kept import Facts, keep
 from isthmus.ingest.keys import code_columns
 from isthmus.ingest.ties import AMOUNT, ties_of_rows
 
 __all__ = [
+    "AddTask",
     "PartResult",
     "PartTask",
     "add_up_rows",
@@ -41,20 +43,48 @@ LARGEST_AMOUNT = 1e18
 
 @dataclass(frozen=True)
 class PartTask:
-    """Read one part into `folder`. `columns`: our name -> theirs."""
+    """Read one part into the kept folder `folder`, made below `scratch`. `columns`: our name -> theirs."""
 
     part: Part
     folder: str
+    scratch: str
     columns: Mapping[str, str]
+
+    def recalled(self, facts: Facts) -> PartResult:
+        """The result, from what was kept of it."""
+        return PartResult.recalled(self.folder, self.folder, facts)
+
+
+@dataclass(frozen=True)
+class AddTask:
+    """Add up what `read_part` left for `result`, into `folder`. `marks`: file with the places of duplicates, or ""."""
+
+    result: PartResult
+    marks: str
+    folder: str
+    scratch: str
+
+    def recalled(self, facts: Facts) -> PartResult:
+        """The result, from what was kept of it."""
+        return PartResult.recalled(self.result.folder, self.folder, facts)
 
 
 @dataclass(frozen=True)
 class PartResult:
-    """`counts`: (day since 1970 or None, outcome, reason) -> rows. `days`: those with a ties file in the folder."""
+    """What is known of a part. `counts`: (day since 1970 or None, outcome, reason) -> rows.
+
+    `folder` holds its book of keys and its refused rows, `ties` a file of ties for each of `days` (see ties.py).
+    """
 
     folder: str
     counts: dict[tuple[int | None, str, str], int]
     days: tuple[int, ...] = ()
+    ties: str = ""
+
+    @classmethod
+    def recalled(cls, folder: str, ties: str, facts: Facts) -> PartResult:
+        counts = {(day, outcome, reason): rows for day, outcome, reason, rows in facts["counts"]}
+        return cls(folder, counts, tuple(facts["days"]), ties)
 
 
 def day_number(day: date) -> int:
@@ -68,43 +98,53 @@ def day_of(number: int) -> date:
 def read_part(task: PartTask) -> PartResult:
     """Read, judge and add up one part.
 
-    Writes into the task's folder `refused.arrow` (row, day, reason), `parties.arrow`, and per day `ties-<day>.arrow`
-    with codes into it (see ties.py). Where the log has ids, the rows are not added up yet, because other parts may
-    hold the same ones: they lie in `rows.arrow` until `add_up_rows`.
+    Keeps `refused.arrow` (row, day, reason), `parties.arrow`, and per day `ties-<day>.arrow` with codes into it (see
+    ties.py). Where the log has ids, the rows are not added up yet, because other parts may hold the same ones: they lie
+    in `rows.arrow` until `add_up_rows`.
     """
     book, rows = judge_part(task)
-    folder = Path(task.folder)
-    folder.mkdir(parents=True, exist_ok=True)
-    refused = ~pl.col("reason").is_in([NOTHING, SELF])
-    rows.filter(refused).select("row", "day", pl.col("reason").cast(pl.String)).write_ipc(folder / "refused.arrow")
-    book.to_frame().write_ipc(folder / "parties.arrow")
-    counts, used = count_rows(rows), used_rows(rows)
-    if "id" in task.columns:
-        used.select("day", "sender", "receiver", "amount", "time", *_hashes()).write_ipc(folder / "rows.arrow")
-        return PartResult(task.folder, counts)
-    return PartResult(task.folder, counts, _write_ties(used, folder))
+
+    def fill(folder: Path) -> Facts:
+        refused = ~pl.col("reason").is_in([NOTHING, SELF])
+        rows.filter(refused).select("row", "day", pl.col("reason").cast(pl.String)).write_ipc(folder / "refused.arrow")
+        book.to_frame().write_ipc(folder / "parties.arrow")
+        counts, used, days = count_rows(rows), used_rows(rows), list[int]()
+        if "id" in task.columns:
+            kept = used.select("day", "sender", "receiver", "amount", "time", *_hashes())
+            kept.write_ipc(folder / "rows.arrow")
+        else:
+            days = _write_ties(used, folder)
+        return _facts(counts, days)
+
+    return task.recalled(keep(Path(task.folder), Path(task.scratch), fill))
 
 
-def add_up_rows(task: tuple[PartResult, str]) -> PartResult:
-    """Add up the rows that `read_part` left. `task`: its result, and a file with the positions of duplicates."""
-    result, marks = task
-    folder = Path(result.folder)
-    rows = pl.read_ipc(folder / "rows.arrow")
-    counts = Counter(result.counts)
-    if marks:
-        duplicate = pl.int_range(len(rows), eager=True).is_in(pl.read_ipc(marks)["at"].implode())
-        for day, number in rows.filter(duplicate)["day"].value_counts().iter_rows():
-            counts[day, USED, NOTHING] -= number
-            counts[day, DUPLICATE, NOTHING] += number
-        rows = rows.filter(~duplicate)
-    return PartResult(result.folder, dict(counts), _write_ties(rows, folder))
+def add_up_rows(task: AddTask) -> PartResult:
+    """Add up the rows that `read_part` left, without the duplicates."""
+
+    def fill(folder: Path) -> Facts:
+        rows = pl.read_ipc(Path(task.result.folder) / "rows.arrow")
+        counts = Counter(task.result.counts)
+        if task.marks:
+            duplicate = pl.int_range(len(rows), eager=True).is_in(pl.read_ipc(task.marks)["at"].implode())
+            for day, number in rows.filter(duplicate)["day"].value_counts().iter_rows():
+                counts[day, USED, NOTHING] -= number
+                counts[day, DUPLICATE, NOTHING] += number
+            rows = rows.filter(~duplicate)
+        return _facts(counts, _write_ties(rows, folder))
+
+    return task.recalled(keep(Path(task.folder), Path(task.scratch), fill))
 
 
-def _write_ties(rows: pl.DataFrame, folder: Path) -> tuple[int, ...]:
+def _facts(counts: Mapping[tuple[int | None, str, str], int], days: list[int]) -> Facts:
+    return {"counts": [[*key, rows] for key, rows in counts.items()], "days": days}
+
+
+def _write_ties(rows: pl.DataFrame, folder: Path) -> list[int]:
     days = ties_of_rows(rows).partition_by("day", as_dict=True, include_key=False)
     for (day,), ties in days.items():
         ties.write_ipc(folder / f"ties-{day}.arrow")
-    return tuple(sorted(day for (day,) in days))
+    return sorted(day for (day,) in days)
 
 
 def _hashes() -> list[pl.Expr]:

@@ -1,7 +1,24 @@
 """Frames -> the warehouse folder that readers see. What is published changes only by being replaced whole."""
 
-from isthmus.publish.manifest import input_id_of, manifest, run_id_of, run_row
+from isthmus.publish.earlier import complete, published, record_of, reference, volume_of
+from isthmus.publish.manifest import input_id_of, manifest, revision_of, run_id_of, run_row
 from isthmus.publish.night import Night, publish
-from isthmus.publish.plans import plan_once, remember
+from isthmus.publish.plans import checkpoint_key, plan_once, remember
 
-__all__ = ["Night", "input_id_of", "manifest", "plan_once", "publish", "remember", "run_id_of", "run_row"]
+__all__ = [
+    "Night",
+    "checkpoint_key",
+    "complete",
+    "input_id_of",
+    "manifest",
+    "plan_once",
+    "publish",
+    "published",
+    "record_of",
+    "reference",
+    "remember",
+    "revision_of",
+    "run_id_of",
+    "run_row",
+    "volume_of",
+]

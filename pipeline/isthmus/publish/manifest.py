@@ -5,6 +5,7 @@ from __future__ import annotations
 import hashlib
 import importlib.metadata
 import json
+from collections.abc import Sequence
 from dataclasses import asdict
 from datetime import UTC, date, datetime
 from typing import Any
@@ -18,7 +19,7 @@ from isthmus.settings import Settings
 from isthmus.tables import LAYOUT
 from isthmus.watch import Watch
 
-__all__ = ["input_id_of", "manifest", "run_id_of", "run_row"]
+__all__ = ["input_id_of", "manifest", "revision_of", "run_id_of", "run_row"]
 
 
 def run_id_of(series: str, as_of: date, input_id: str, estimate: Estimate) -> str:
@@ -28,6 +29,12 @@ def run_id_of(series: str, as_of: date, input_id: str, estimate: Estimate) -> st
     """
     told = f"{input_id} {estimate.method} {estimate.samples}"
     return f"{series}-{as_of}-{hashlib.blake2b(told.encode(), digest_size=8).hexdigest()}"
+
+
+def revision_of(before: dict[str, Any], run_id: str) -> int:
+    """1 for a night's first content, one more for other content. `before`: what run.json tells now, if anything."""
+    known = int(before.get("revision", 0))
+    return max(known, 1) if before.get("run_id") == run_id else known + 1
 
 
 def input_id_of(settings: Settings, as_of: date, reading: Reading) -> str:
@@ -52,6 +59,8 @@ def run_row(
     reading: Reading,
     watch: Watch,
     started_at: datetime,
+    revision: int,
+    gates: list[dict[str, Any]],
 ) -> dict[str, Any]:
     """The columns of `runs`."""
     widths = estimate.half_widths
@@ -59,6 +68,7 @@ def run_row(
         "run_id": run_id,
         "window_start": first_day,
         "definition": settings.definition,
+        "revision": revision,
         "version": _version(),
         "method": estimate.method,
         "engine": estimate.engine,
@@ -74,6 +84,7 @@ def run_row(
         "rows_read": reading.rows_read,
         **{f"rows_{outcome}": reading.rows(outcome) for outcome in ("used", "refused", "filtered", "duplicate")},
         "warnings": "; ".join(watch.warnings),
+        "gates": [{key: gate[key] for key in ("gate", "state", "figure", "limit")} for gate in gates],
         "predicted_seconds": plan.predicted_seconds,
         "predicted_bytes": float(plan.predicted_bytes),
         "seconds": [{"stage": stage, "seconds": seconds} for stage, seconds in watch.seconds.items()],
@@ -84,7 +95,14 @@ def run_row(
 
 
 def manifest(
-    settings: Settings, as_of: date, found: Survey, reading: Reading, plan: Plan, watch: Watch
+    settings: Settings,
+    as_of: date,
+    found: Survey,
+    reading: Reading,
+    plan: Plan,
+    watch: Watch,
+    component_share: float,
+    frozen: Sequence[date],
 ) -> dict[str, Any]:
     """What run.json tells beyond `runs`."""
     return {
@@ -95,7 +113,14 @@ def manifest(
         "outcomes": reading.outcomes,
         "missing_days": reading.missing_days,
         "plan": asdict(plan),
-        "inputs": [{"file": file.name, "bytes": file.size, "rows": file.rows} for file in found.files],
+        "inputs": [
+            {"file": file.name, "bytes": file.size, "changed_ns": file.state[1], "rows": file.rows}
+            for file in found.files
+        ],
+        "schema": found.schema,
+        "volume": {str(day): rows for day, rows in reading.volume.items()},
+        "component_share": component_share,
+        "late": {"policy": settings.run.late, "not_restated": list(frozen)},
         "settings": settings.model_dump(mode="json"),
     }
 

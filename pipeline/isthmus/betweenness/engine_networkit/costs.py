@@ -52,7 +52,7 @@ class _Planner:
         if threads > 1:
             said += ", where re-runs may differ in the last digits"
         if seconds > self.budget:
-            said += f", longer than the {self.score.minutes:g} min allowed, and cannot be stopped half-way"
+            said += f", longer than the {self.score.minutes:.3g} min allowed, and cannot be stopped half-way"
         return Plan(
             engine="networkit",
             method="exact",
@@ -141,7 +141,7 @@ class _Planner:
         why = {
             "samples": "as asked" if self.score.samples else "beyond which exact would cost less",
             "half_width": "enough for the half_width asked for",
-            "minutes": f"as many as fit {self.score.minutes:g} min",
+            "minutes": f"as many as fit {self.score.minutes:.3g} min",
         }[limit]
         said = (
             f"{samples:,} {unit} ({why}) take about {spell_seconds(seconds)} and promise all {self.uncertain:,} "

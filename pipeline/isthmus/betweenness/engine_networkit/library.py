@@ -30,6 +30,7 @@ from weakref import WeakKeyDictionary
 import numpy as np
 from numpy.typing import NDArray
 
+from isthmus.betweenness.checkpoint import Checkpoint
 from isthmus.betweenness.engine_networkit.bounds import certain_zeros
 from isthmus.betweenness.estimate import Estimate
 from isthmus.betweenness.ranks import snap
@@ -49,8 +50,17 @@ _one_at_a_time = threading.RLock()
 _converted: WeakKeyDictionary[Graph, Any] = WeakKeyDictionary()
 
 
-def run(graph: Graph, plan: Plan, score: Score, threads: int, progress: Progress, door: Door | None = None) -> Estimate:
-    """Measure as planned, in this process whatever the door: the library keeps its threads to itself.
+def run(
+    graph: Graph,
+    plan: Plan,
+    score: Score,
+    threads: int,
+    progress: Progress,
+    door: Door | None = None,
+    checkpoint: Checkpoint | None = None,
+) -> Estimate:
+    """Measure as planned, in this process and from the beginning, whatever door and checkpoint: the library keeps its
+    threads and its work to itself.
 
     `threads` > 0 lowers the plan's number; `progress` hears the share done, 0..1.
     """

@@ -78,7 +78,7 @@ class _Planner:
                 seconds = work.blocks * each
         said = f"exact takes about {spell_seconds(seconds)} on {threads} thread{'s' if threads > 1 else ''}{left}"
         if seconds > self.budget:
-            said += f", longer than the {self.score.minutes:g} min allowed, and has no use when stopped half-way"
+            said += f", longer than the {self.score.minutes:.3g} min allowed, and has no use when stopped half-way"
         return self._plan("exact", n, 0.0, "exact", said, seconds, needed, threads, lanes)
 
     def pivots(self) -> Plan:
@@ -166,7 +166,7 @@ class _Planner:
         why = {
             "samples": "as asked" if score.samples else "every source there is",
             "half_width": "enough for the half_width asked for",
-            "minutes": f"as many as fit {score.minutes:g} min",
+            "minutes": f"as many as fit {score.minutes:.3g} min",
         }[limit]
         sooner = f", sooner if the first {score.top} are settled" if score.top else ""
         said = (

@@ -7,10 +7,12 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator
 from dataclasses import replace
-from typing import TypeVar
+from time import monotonic
+from typing import Any, TypeVar
 
 import numpy as np
 
+from isthmus.betweenness.checkpoint import Checkpoint
 from isthmus.betweenness.engine_numba import blocks, exact, paths, pivots
 from isthmus.betweenness.engine_numba.intervals import Bounds, Floats
 from isthmus.betweenness.engine_numba.sequences import PivotEvidence
@@ -28,18 +30,30 @@ Progress = Callable[[float], None]
 Partial = TypeVar("Partial")
 
 
-def run(graph: Graph, plan: Plan, score: Score, threads: int, progress: Progress, door: Door | None = None) -> Estimate:
-    """Measure as planned, behind `door` or on threads here. `progress` hears the share done, 0..1."""
+def run(
+    graph: Graph,
+    plan: Plan,
+    score: Score,
+    threads: int,
+    progress: Progress,
+    door: Door | None = None,
+    checkpoint: Checkpoint | None = None,
+) -> Estimate:
+    """Measure as planned, behind `door` or on threads here. `progress` hears the share done, 0..1.
+
+    With a checkpoint, goes on from the blocks that it holds, and keeps its own there.
+    """
     door = door or Here(min(plan.threads, threads) if threads else plan.threads)
     progress(0.0)
     job = blocks.job_for(graph, plan.lanes, score)
+    going = _Going(checkpoint)
     try:
         if graph.n < 3 or graph.arcs == 0:
             return _estimate(graph, plan, score, _nothing(graph.n), graph.n, "exact")
         if plan.method == "exact":
-            return _exact(graph, plan, score, job, door, progress)
+            return _exact(graph, plan, score, job, door, progress, going)
         method = _pivots if plan.method == "pivots" else _paths
-        verdict = method(job, plan, score, door, progress)
+        verdict = method(job, plan, score, door, progress, going)
         reason = "exact" if verdict.stopped_because == "settled" else verdict.stopped_because
         return _estimate(graph, plan, score, verdict.bounds, verdict.samples, reason)
     finally:
@@ -47,42 +61,73 @@ def run(graph: Graph, plan: Plan, score: Score, threads: int, progress: Progress
         progress(1.0)
 
 
-def _exact(graph: Graph, plan: Plan, score: Score, job: blocks.Job, door: Door, progress: Progress) -> Estimate:
+class _Going:
+    """Where a run goes on from, and what it keeps on its way: what was added up, and the seconds that took."""
+
+    def __init__(self, checkpoint: Checkpoint | None) -> None:
+        self._checkpoint = checkpoint
+        self._began = monotonic()
+        self.kept: Any = None
+        self.spent = 0.0
+        if checkpoint and (kept := checkpoint.load()):
+            self.kept, self.spent = kept
+
+    def offer(self, state: object) -> None:
+        if self._checkpoint:
+            self._checkpoint.offer(lambda: (state, self.spent + monotonic() - self._began))
+
+
+def _exact(
+    graph: Graph, plan: Plan, score: Score, job: blocks.Job, door: Door, progress: Progress, going: _Going
+) -> Estimate:
     reduced, work = blocks.load_exact(job)
-    parts = door.stream(blocks.exact_block, ((job, index) for index in range(work.blocks)), job.halt)
-    pairs = exact.merge(reduced, work, parts, lambda done: progress(done / work.blocks))
+    sums: exact.Sums = going.kept or exact.Sums.empty(reduced)
+    parts = door.stream(blocks.exact_block, ((job, index) for index in range(sums.done, work.blocks)), job.halt)
+    for _ in _each(parts, lambda part: sums.add(reduced, work, part)):
+        going.offer(sums)
+        progress(sums.done / work.blocks)
+    pairs = exact.merge(reduced, work, (), sums)
     return _estimate(graph, plan, score, _certain(pairs), graph.n, "exact")
 
 
-def _pivots(job: blocks.Job, plan: Plan, score: Score, door: Door, progress: Progress) -> Verdict:
+def _pivots(job: blocks.Job, plan: Plan, score: Score, door: Door, progress: Progress, going: _Going) -> Verdict:
     sources = blocks.load_pivots(job)
     n = sources.draws.size
     most = min(score.samples or n, n)
     rules = _rules(plan, score, most)
     alone = bool(score.samples) and not (score.half_width or score.top)
     evidence = PivotEvidence(n, sources.scale, 1 - score.confidence, horizon=most if alone else 0)
-    tasks = ((job, *block) for block in pivots.plan_blocks(most))
+    if going.kept is not None:
+        evidence = going.kept
+        evidence.scale = sources.scale
+    tasks = ((job, *block) for block in pivots.plan_blocks(most) if block[0] >= evidence.taken)
     partials = door.stream(blocks.pivots_block, tasks, job.halt)
 
     def add(part: pivots.PivotPartial) -> None:
         evidence.add(part.draws, part.moments[:, :9], part.sums, part.moments[:, 9])
+        going.offer(evidence)
 
     looks = every_block(pivots.plan_blocks(most), most)
-    verdict = watch(evidence, _each(partials, add), looks, rules, _share(progress, most))
+    verdict = watch(evidence, _each(partials, add), looks, rules, _share(progress, most), spent=going.spent)
     if verdict.samples == n:
         verdict = replace(verdict, bounds=_certain(verdict.bounds.estimate * ((n - 1) * (n - 2))))
     return verdict
 
 
-def _paths(job: blocks.Job, plan: Plan, score: Score, door: Door, progress: Progress) -> Verdict:
+def _paths(job: blocks.Job, plan: Plan, score: Score, door: Door, progress: Progress, going: _Going) -> Verdict:
     prepared = blocks.load_paths(job)
     rules = _rules(plan, score, score.samples)
-    tally = paths.Tally.empty(prepared.n)
+    tally: paths.Tally = going.kept or paths.Tally.empty(prepared.n)
     evidence = paths.PathEvidence(prepared, tally, 1 - score.confidence)
-    tasks = ((job, *block) for block in paths.plan_blocks(plan.lanes, score.samples))
+    tasks = ((job, *block) for block in paths.plan_blocks(plan.lanes, score.samples, tally.taken))
     partials = door.stream(blocks.paths_block, tasks, job.halt)
+
+    def add(part: paths.Partial) -> None:
+        tally.add(part)
+        going.offer(tally)
+
     looks = planned_looks(rules, plan.lanes)
-    return watch(evidence, _each(partials, tally.add), looks, rules, _share(progress, plan.samples))
+    return watch(evidence, _each(partials, add), looks, rules, _share(progress, plan.samples), spent=going.spent)
 
 
 def _rules(plan: Plan, score: Score, samples: int) -> Rules:

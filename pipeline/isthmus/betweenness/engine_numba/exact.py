@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterable
+from collections.abc import Iterable
 from dataclasses import dataclass
 from typing import NamedTuple
 
@@ -125,15 +125,31 @@ def check_lengths(graph: Arrays, max_hops: int) -> None:
         raise ValueError(f"the longest length, {longest}, is too long for {graph.n} vertices: scale the lengths down")
 
 
-def merge(reduced: Reduced, plan: Plan, parts: Iterable[Partial], done: Callable[[int], None] | None = None) -> Floats:
-    """Betweenness float64[n] in ordered pairs, from every block's partial sums in block order."""
-    r = reduced.arrays.n
-    score, reached, reach = np.zeros(r), np.zeros(r), np.zeros(r)
-    for index, part in enumerate(parts):
-        score += part.score
+@dataclass
+class Sums:
+    """What the first `done` blocks add up to. score, reached, reach: float64[r]."""
+
+    score: Floats
+    reached: Floats
+    reach: Floats
+    done: int = 0
+
+    @classmethod
+    def empty(cls, reduced: Reduced) -> Sums:
+        return cls(*np.zeros((3, reduced.arrays.n)))
+
+    def add(self, reduced: Reduced, plan: Plan, part: Partial) -> None:
+        """Take the next block."""
+        self.score += part.score
         if reduced.needs_reach:
-            reached += part.reached
-            reach[plan.sources[plan.block(index)]] = part.reach
-        if done:
-            done(index + 1)
-    return reduced.expand(score, reach, reached)
+            self.reached += part.reached
+            self.reach[plan.sources[plan.block(self.done)]] = part.reach
+        self.done += 1
+
+
+def merge(reduced: Reduced, plan: Plan, parts: Iterable[Partial], sums: Sums | None = None) -> Floats:
+    """Betweenness float64[n] in ordered pairs, from every block's partial sums in block order; `sums`: of the first."""
+    sums = sums or Sums.empty(reduced)
+    for part in parts:
+        sums.add(reduced, plan, part)
+    return reduced.expand(sums.score, sums.reach, sums.reached)

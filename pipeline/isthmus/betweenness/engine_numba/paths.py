@@ -105,9 +105,8 @@ def block_size(visited: int, samples: int) -> int:
     return min(max(FEWEST, 1 << (WORK * samples // max(visited, 1)).bit_length() - 1), MOST)
 
 
-def plan_blocks(size: int, samples: int = 0) -> Iterator[tuple[int, int]]:
-    """(first pair, pairs) of each block, until `samples` in all are taken (0: without end)."""
-    start = 0
+def plan_blocks(size: int, samples: int = 0, start: int = 0) -> Iterator[tuple[int, int]]:
+    """(first pair, pairs) of each block from `start` on, until `samples` in all are taken (0: without end)."""
     while samples == 0 or start < samples:
         yield start, min(size, samples - start) if samples else size
         start += size

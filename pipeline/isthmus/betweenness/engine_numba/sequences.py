@@ -158,6 +158,10 @@ class PivotEvidence:
     def taken(self) -> int:
         return self.draws
 
+    def __getstate__(self) -> dict[str, object]:
+        """All that has been added up, without the scale: a checkpoint is put to a scale made anew."""
+        return {key: value for key, value in self.__dict__.items() if key != "scale"}
+
     def add(self, size: int, weights: Floats, sums: Floats, squares: Floats) -> None:
         """Take the next block of `size` sources with values x in [0, 1].
 

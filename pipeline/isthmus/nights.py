@@ -1,0 +1,111 @@
+"""More than one night: catching up, and nights whose log has changed since they were published."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass
+from datetime import date, timedelta
+from pathlib import Path
+
+from isthmus.cluster import open_door
+from isthmus.deadline import Deadline
+from isthmus.errors import DataRefused, IsthmusError, StoreError
+from isthmus.ingest import holds, states_of, survey
+from isthmus.nightly import Outcome, run_night, window_of
+from isthmus.publish import Night, complete, published, record_of
+from isthmus.settings import Settings
+from isthmus.watch import Watch
+
+__all__ = ["Result", "backfill", "changed_since", "score"]
+
+
+@dataclass(frozen=True)
+class Result:
+    """What became of one night: published (`outcome`), skipped because it is complete, or failed."""
+
+    as_of: date
+    outcome: Outcome | None = None
+    error: IsthmusError | None = None
+
+
+def score(
+    settings: Settings, as_of: date, watch: Watch, deadline: Deadline, accept: frozenset[str] = frozenset()
+) -> list[Result]:
+    """The night of `as_of`, then, as `run.late` says, those published nights whose log has changed since.
+
+    The first result is that of `as_of`; its errors are raised. The others' errors are in their results. Nights that the
+    deadline leaves no time for are told as a warning and found again the next time.
+    """
+    late = changed_since(settings, as_of)
+    freeze = settings.run.late == "freeze"
+    if late and freeze:
+        watch.warning(f"the log of published nights has changed; they are left as they are: {_days(late)}")
+    outcome = run_night(settings, as_of, watch, accept, frozen=late if freeze else [])
+    results = [Result(as_of, outcome)]
+    for at, day in enumerate([] if freeze else late):
+        if deadline.left <= 0:
+            watch.warning(f"no time was left to restate {_days(late[at:])}; run again, or `isthmus backfill`")
+            break
+        results.append(_one(settings, day, watch.anew(), accept))
+    return results
+
+
+def backfill(
+    settings: Settings, first: date, last: date, watch: Watch, *, again: bool, accept: frozenset[str] = frozenset()
+) -> Iterator[Result]:
+    """The nights of first..last, oldest first. Complete ones are skipped unless `again`, or their log has changed.
+
+    Ends after the first night that fails: the error is in its result.
+    """
+    changed = set(changed_since(settings, None))
+    for number in range((last - first).days + 1):
+        day = first + timedelta(days=number)
+        night = Night(Path(settings.run.warehouse), settings.series, day)
+        if not again and day not in changed and complete(night, settings.definition):
+            yield Result(day)
+            continue
+        result = _one(settings, day, watch.anew(), accept)
+        yield result
+        if result.error:
+            return
+
+
+def _one(settings: Settings, day: date, watch: Watch, accept: frozenset[str]) -> Result:
+    try:
+        return Result(day, run_night(settings, day, watch, accept))
+    except IsthmusError as error:
+        return Result(day, error=error)
+
+
+def changed_since(settings: Settings, but: date | None) -> list[date]:
+    """Published nights of this definition whose files have changed since, oldest first, without `but`.
+
+    A file counts as changed when it is gone, or its size or time is another; and a file that was not there counts when
+    its name and footer say that it can hold a day of the window.
+    """
+    nights = published(Night(Path(settings.run.warehouse), settings.series, but or date.min))
+    if not nights:
+        return []
+    try:
+        now = states_of(settings.log)
+    except (StoreError, DataRefused):
+        return []  # the night itself will say what is wrong with the log
+    return [night.as_of for night in nights if night.as_of != but and _changed(settings, night, now)]
+
+
+def _changed(settings: Settings, night: Night, now: dict[str, tuple[int, int]]) -> bool:
+    told = record_of(night)
+    if told.get("definition") != settings.definition:
+        return False
+    read = {each["file"]: (each["bytes"], each.get("changed_ns")) for each in told.get("inputs", [])}
+    if any(now.get(name) != state for name, state in read.items()):
+        return True
+    window = window_of(settings, night.as_of)
+    if not any(name not in read and holds(name, *window) for name in now):
+        return False
+    with open_door(threads=settings.run.threads) as door:
+        return {file.name for file in survey(settings.log, *window, door).files} != read.keys()
+
+
+def _days(days: list[date]) -> str:
+    return ", ".join(str(day) for day in days[:7]) + (f" and {len(days) - 7} more" if len(days) > 7 else "")
