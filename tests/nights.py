@@ -70,6 +70,7 @@ class Site:
 
     def __init__(self, root: Path, more: str = "", *, log: bool = True) -> None:
         self.root = root
+        root.mkdir(parents=True, exist_ok=True)
         self.log, self.warehouse, self.work = root / "log", root / "warehouse", root / "work"
         self.config = root / "isthmus.toml"
         self.settings(more)
@@ -78,6 +79,9 @@ class Site:
                 self.write(rows(day), day)
 
     def settings(self, more: str = "", columns: str = 'amount = "value"') -> None:
+        if "nulls" not in more:  # nearly every log here has a bad row or two among its 32
+            rest = more.split("[gates]\n", 1)
+            more = f"{rest[0]}\n[gates]\nnulls_limit = 1.0\n{rest[1] if rest[1:] else ''}"
         self.config.write_text(
             f'series = "s"\n[log]\npath = "log"\n[log.columns]\nsender = "from"\nreceiver = "to"\ntime = "sent_at"\n'
             f"{columns}\n[window]\ndays = 4\n[run]\nthreads = 1\n{more}\n",

@@ -335,7 +335,7 @@ def test_a_missing_day_can_be_let_through(site: Site) -> None:
     site.settings('[gates]\nmissing_days = "warn"')
     said = site.score()
     assert said.code == 0
-    assert "warning: 1 day of the window without a usable row: 2026-03-02" in said.err
+    assert "warning: missing_days: 1 day of the window without a usable row: 2026-03-02" in said.err
     assert "2026-03-02" in site.table("runs")["warnings"].item()
     manifest = json.loads((site.warehouse / "runs/series=s/as_of=2026-03-04/run.json").read_text())
     assert manifest["missing_days"] == ["2026-03-02"]
@@ -616,7 +616,7 @@ def test_a_killed_run_is_run_again(site: Site, after: Site, instant: str) -> Non
     assert site.score().code == 0
     assert site.published().keys() == before.keys()
     assert not list(site.work.rglob(".unfinished-*"))
-    assert not list((site.work / "series=s" / "parts").iterdir())
+    assert not list((site.work / "series=s" / "scratch").iterdir())
     for table in ("scores", "ties", "refused"):
         assert site.table(table).equals(after.table(table))
 

@@ -191,6 +191,7 @@ def test_the_json_of_a_night_is_its_manifest(site: Site) -> None:
     assert told["inputs"][0] == {
         "file": "dt=2026-03-01/part-0.parquet",
         "bytes": site.file(DAYS[0]).stat().st_size,
+        "changed_ns": site.file(DAYS[0]).stat().st_mtime_ns,
         "rows": 8,
     }
     assert told["settings"]["window"] == {"days": 4}
@@ -295,7 +296,7 @@ def test_check_tells_a_gate_and_the_forecast(site: Site) -> None:
     site.settings('[gates]\nrefused_limit = 0.1\nmissing_days = "warn"')
     said = site.check("--json")
     assert said.code == 0
-    assert "Warning: 1 day of the window" in said.err
+    assert "Warning: missing_days: 1 day of the window" in said.err
     assert len(json.loads(said.out)["warnings"]) == 1
 
 

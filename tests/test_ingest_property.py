@@ -166,7 +166,7 @@ def test_a_night_agrees_with_the_oracle(log: tuple[list[File], dict], directed: 
             window=Window(days=3),
             graph=Graph(directed=directed),
             score=Score(method="exact"),
-            gates={"missing_days": "off", "refused": "off"},
+            gates={"missing_days": "off", "refused": "off", "nulls": "off"},
             run=Run(warehouse=str(root / "warehouse"), work=str(root / "work"), threads=1),
         )
         if not arcs:

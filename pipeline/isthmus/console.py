@@ -6,6 +6,7 @@ import json
 import sys
 from collections.abc import Iterator
 from contextlib import contextmanager
+from time import monotonic
 from typing import Any
 
 from rich.cells import cell_len
@@ -69,14 +70,15 @@ class Console:
 
                 yield Watch(tell=draw, warn=lambda text: bars.console.print(Text(f"warning: {text}")))
         else:
-            watch = Watch(warn=lambda text: self.say(f"warning: {text}"))
+            began: dict[str, float] = {}
 
             def write(stage: str, share: float) -> None:
-                if share == 1.0:
-                    self.say(f"{stage:<9} {watch.seconds[stage]:8.1f} s")
+                if share == 0.0:
+                    began[stage] = monotonic()
+                elif share == 1.0:
+                    self.say(f"{stage:<9} {monotonic() - began[stage]:8.1f} s")
 
-            watch.tell = write
-            yield watch
+            yield Watch(tell=write, warn=lambda text: self.say(f"warning: {text}"))
 
 
 def printable(key: str) -> str:

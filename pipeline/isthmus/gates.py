@@ -178,7 +178,10 @@ class Gatekeeper:
             state = "nothing to compare with"
         elif broken and gate == "stop" and name not in self.accepted:
             state = "stopped"
-            stops.append(f"{name}: {text}. Look at {look}; to publish knowingly: --accept {name}")
+            stops.append(
+                f'{name}: {text}. Look at {look}; to publish this night knowingly: --accept {name}; for all nights: '
+                f'[gates] {name} = "warn"'
+            )
         elif broken:
             state = "accepted" if gate == "stop" else "warned"
             self.warn(f"{name}: {text}" + (" (accepted)" if state == "accepted" else ""))

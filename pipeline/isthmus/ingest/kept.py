@@ -45,6 +45,8 @@ def keep(folder: Path, scratch: Path, fill: Callable[[Path], Facts]) -> Facts:
     with story("keep results below"):
         files = {path.name: [path.stat().st_size, _digest(path)] for path in sorted(making.iterdir())}
         (making / CONTENTS).write_text(json.dumps({"facts": facts, "files": files}))
+        if recall(folder) is None:
+            shutil.rmtree(folder, ignore_errors=True)  # damaged
         try:
             os.rename(making, folder)
         except OSError:
