@@ -22,8 +22,10 @@ from isthmus.betweenness.engine_numba import exact, paths, pivots, reductions
 from isthmus.cluster import open_door
 from isthmus.errors import SettingsError, StoreError
 from isthmus.graph import Graph
-from isthmus.settings import Score
-from nights import DAYS, PAIRS, Site, rows
+from isthmus.nightly import run_night
+from isthmus.settings import Score, load
+from isthmus.watch import Watch
+from nights import AS_OF, DAYS, PAIRS, Site, rows
 
 MORE = '[score]\nmethod = "exact"\n[gates]\nrefused_limit = 0.5\n'
 
@@ -120,6 +122,73 @@ def graph(tmp_path_factory: pytest.TempPathFactory) -> Graph:
     folder = tmp_path_factory.mktemp("snapshot")
     Graph.from_arcs(parties, tail[kept], head[kept], directed=True).save(folder)
     return Graph.open(folder)
+
+
+@pytest.fixture
+def two_workers(tmp_path: Path) -> Iterator[tuple[str, list[subprocess.Popen[bytes]]]]:
+    """A scheduler whose workers may be killed."""
+    address = f"tcp://127.0.0.1:{free_port()}"
+    here = ("--host", "127.0.0.1", "--no-dashboard")
+    with contextlib.ExitStack() as stack:
+        stack.enter_context(process("distributed.cli.dask_scheduler", "--port", address.rpartition(":")[2], *here))
+        worker = ("distributed.cli.dask_worker", address, "--nthreads", "1", "--no-nanny", *here)
+        workers = [
+            stack.enter_context(process(*worker, "--local-directory", str(tmp_path / f"dask{at}"))) for at in range(2)
+        ]
+        _wait_for_workers(address, 2)
+        yield address, workers
+
+
+@pytest.mark.parametrize("method", ["exact", "pivots", "paths"])
+def test_a_worker_killed_while_measuring(graph: Graph, two_workers: Any, method: Any) -> None:
+    address, workers = two_workers
+    score = Score(method=method, samples={"exact": 0, "pivots": 4000, "paths": 40_000}[method], top=0)
+    plan = make_plan(graph, score, 1, 2**34)
+    here = measure(graph, plan, score)
+    killed: list[float] = []
+
+    def kill(share: float) -> None:
+        if 0 < share < 1 and not killed:
+            killed.append(share)
+            workers[0].kill()
+
+    with open_door(scheduler=address) as door:
+        there = measure(graph, plan, score, progress=kill, door=door)
+    assert killed
+    for column in ("betweenness", "lower", "upper", "std_error"):
+        assert getattr(there, column).tobytes() == getattr(here, column).tobytes()
+
+
+def test_a_worker_killed_while_reading(tmp_path: Path, two_workers: Any, monkeypatch: pytest.MonkeyPatch) -> None:
+    address, workers = two_workers
+    here, there = make_site(tmp_path / "here"), make_site(tmp_path / "there", f'scheduler = "{address}"')
+    assert here.score().code == 0
+    killed: list[float] = []
+
+    def kill(stage: str, share: float) -> None:
+        if stage == "read" and 0 < share < 1 and not killed:
+            killed.append(share)
+            workers[0].kill()
+
+    run_night(load(there.config), AS_OF, Watch(tell=kill))
+    assert killed
+    for name in ("scores", "ties", "refused"):
+        assert there.table(name).equals(here.table(name))
+
+
+def test_workers_that_need_more_than_their_memory_are_told_of(tmp_path: Path) -> None:
+    """Not waited for: each of two may take half of it, which is less than an empty worker takes."""
+    with (
+        open_door(workers=2, threads=1, scratch=str(tmp_path), memory=2 * 2**28) as door,
+        pytest.raises(SettingsError, match=r"workers died again and again .* each may take 0.25 GiB; raise run.memory"),
+    ):
+        door.run(_swallow, [2**29] * 2)
+
+
+def _swallow(size: int) -> int:
+    held = np.ones(size, np.uint8)
+    time.sleep(5)
+    return int(held[-1])
 
 
 def test_every_door_measures_the_same_bits(graph: Graph, keys: dict[str, Any]) -> None:

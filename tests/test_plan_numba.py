@@ -126,7 +126,7 @@ class TestMemory:
         estimate = measure(graph, tight, score)
         np.testing.assert_allclose(estimate.pairs, measure(graph, make_plan(graph, score, 2, two), score).pairs, 1e-10)
         with pytest.raises(SettingsError, match=r"exact needs .* GiB .* more than run.memory") as error:
-            make_plan(graph, score, 2, one - 56 * 8 * N - 1)
+            make_plan(graph, score, 2, one - 56 * 9 * N - 1)
         assert error.value.exit_code == 78
 
 

@@ -13,7 +13,7 @@ from concurrent.futures import Future, ThreadPoolExecutor, wait
 from contextlib import contextmanager
 from typing import Any, Protocol, TypeVar
 
-from isthmus.errors import StoreError
+from isthmus.errors import SettingsError, StoreError
 
 __all__ = ["Door", "Here", "Tick", "open_door"]
 
@@ -95,8 +95,9 @@ def _when_done(future: Future[Result]) -> Result:
 class _Elsewhere:
     """Workers behind a Dask scheduler."""
 
-    def __init__(self, client: Any) -> None:
-        self._client = client
+    def __init__(self, client: Any, memory: int = 0) -> None:
+        """`memory`: bytes that each worker may take, 0 when not known here."""
+        self._client, self._memory = client, memory
 
     def stream(
         self, function: Callable[[Task], Result], tasks: Iterable[Task], halt: Callable[[], None] | None = None
@@ -108,9 +109,9 @@ class _Elsewhere:
             for task in tasks:
                 ahead.append(self._client.submit(function, task, pure=False))
                 if len(ahead) > most:
-                    yield ahead.popleft().result()
+                    yield self._result(ahead.popleft())
             while ahead:
-                yield ahead.popleft().result()
+                yield self._result(ahead.popleft())
         finally:
             self._client.cancel(list(ahead))
 
@@ -120,12 +121,28 @@ class _Elsewhere:
         futures = self._client.map(function, tasks, pure=False)
         order = {future.key: index for index, future in enumerate(futures)}
         results: list[Any] = [None] * len(futures)
-        finished = as_completed(futures, loop=self._client.loop, with_results=True)
-        for done, (future, result) in enumerate(finished, 1):
-            results[order[future.key]] = result
-            if tick:
-                tick(done / len(futures))
+        try:
+            for done, future in enumerate(as_completed(futures, loop=self._client.loop), 1):
+                results[order[future.key]] = self._result(future)
+                if tick:
+                    tick(done / len(futures))
+        except BaseException:
+            self._client.cancel(futures)
+            raise
         return results
+
+    def _result(self, future: Any) -> Any:
+        """Dask does the work of a worker that died again elsewhere, but not for ever."""
+        from distributed import KilledWorker
+
+        try:
+            return future.result()
+        except KilledWorker:
+            raise SettingsError(
+                "workers died again and again at the same task, most likely for want of memory"
+                + (f": each may take {self._memory / 2**30:.2f} GiB" if self._memory else "")
+                + "; raise run.memory, or lower run.workers or run.threads, or give the workers of run.scheduler more"
+            ) from None
 
 
 def _expect_answer(scheduler: str) -> None:
@@ -145,10 +162,13 @@ def _expect_answer(scheduler: str) -> None:
 
 
 @contextmanager
-def open_door(*, workers: int = 0, threads: int = 0, scheduler: str = "", scratch: str = "") -> Iterator[Door]:
+def open_door(
+    *, workers: int = 0, threads: int = 0, scheduler: str = "", scratch: str = "", memory: int = 0
+) -> Iterator[Door]:
     """In this process (the default), in `workers` local processes of `threads` each, or on `scheduler`.
 
-    `scratch` is a folder for the local workers' own files. Raises StoreError when the scheduler does not answer.
+    `scratch` is a folder for the local workers' own files, `memory` the bytes that all of them together may take (0: no
+    limit). Raises StoreError when the scheduler does not answer.
     """
     if scheduler:
         from distributed import Client
@@ -174,12 +194,14 @@ def open_door(*, workers: int = 0, threads: int = 0, scheduler: str = "", scratc
         from distributed import Client, LocalCluster
 
         each = threads or max(1, (os.cpu_count() or 1) // workers)
+        limit = memory // workers
         # A worker runs `each` tasks at once, so no library inside a task may take more than one thread by itself.
         env = dict.fromkeys(("OMP_NUM_THREADS", "POLARS_MAX_THREADS", "NUMBA_NUM_THREADS"), "1")
         with (
             LocalCluster(
                 n_workers=workers,
                 threads_per_worker=each,
+                memory_limit=limit or None,
                 processes=True,
                 env=env,
                 # Dask serves its health page in any case: any free port, for this machine only
@@ -190,6 +212,6 @@ def open_door(*, workers: int = 0, threads: int = 0, scheduler: str = "", scratc
             ) as local,
             Client(local, set_as_default=False) as client,
         ):
-            yield _Elsewhere(client)
+            yield _Elsewhere(client, limit)
     else:
         yield Here(threads)

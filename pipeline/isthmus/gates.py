@@ -179,7 +179,7 @@ class Gatekeeper:
         elif broken and gate == "stop" and name not in self.accepted:
             state = "stopped"
             stops.append(
-                f'{name}: {text}. Look at {look}; to publish this night knowingly: --accept {name}; for all nights: '
+                f"{name}: {text}. Look at {look}; to publish this night knowingly: --accept {name}; for all nights: "
                 f'[gates] {name} = "warn"'
             )
         elif broken:

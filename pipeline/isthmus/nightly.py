@@ -81,7 +81,13 @@ def run_night(
     before = reference(night)
     gatekeeper = Gatekeeper(settings.gates, watch.warning, accept)
     run = settings.run
-    with open_door(workers=run.workers, threads=run.threads, scheduler=run.scheduler, scratch=str(work)) as door:
+    with open_door(
+        workers=run.workers,
+        threads=run.threads,
+        scheduler=run.scheduler,
+        scratch=str(work),
+        memory=run.memory_bytes,
+    ) as door:
         with watch.stage("survey"):
             found = survey(settings.log, first_day, last_day, door)
         reading = read_window(found, settings.log, first_day, last_day, work, door, watch, deadline.reading)

@@ -19,14 +19,16 @@ def plan_once(path: Path, input_id: str, graph: Graph, score: Score, run: Run) -
 
     Raises what `make_plan` raises, and StoreError when the plan cannot be kept.
     """
+    # every worker has the graph for itself
+    memory = run.memory_bytes // max(run.workers, 1)
     try:
         kept = json.loads(path.read_text())
         plan = Plan(**kept["plan"])
-        if kept["input_id"] == input_id and plan.predicted_bytes <= run.memory_bytes:
+        if kept["input_id"] == input_id and plan.predicted_bytes <= memory:
             return plan
     except (OSError, ValueError, KeyError, TypeError):
         pass  # none kept, or of another version: make one
-    plan = make_plan(graph, score, run.threads, run.memory_bytes)
+    plan = make_plan(graph, score, run.threads, memory)
     _keep(path, input_id, plan)
     return plan
 

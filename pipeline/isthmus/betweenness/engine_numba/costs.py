@@ -69,8 +69,9 @@ class _Planner:
             job = self._job(lanes)
             reduced, work = blocks.load_exact(job)
             left = _what_is_left(reduced, self.graph)
-            picks = np.unique(np.linspace(0, work.blocks - 1, min(work.blocks, 4 * threads)).astype(int)).tolist()
-            tasks = [(job, index) for index in picks]
+            # from the middle of equal stretches: sources at one end of the numbering reach more than at the other
+            stretches = min(work.blocks, 4 * threads)
+            tasks = [(job, (2 * at + 1) * work.blocks // (2 * stretches)) for at in range(stretches)]
             each, _ = _probe(blocks.exact_block, tasks[:1], 1, job)
             seconds = work.blocks * each / threads
             if seconds < HOPELESS * self.budget:
@@ -96,8 +97,9 @@ class _Planner:
         alone, (pilot,) = _probe(blocks.pivots_block, [(job, 0, draws)], 1, job)
         each = alone / threads / draws
         if alone < PROBE_SECONDS:
-            together, _ = _probe(blocks.pivots_block, [(job, 0, draws)] * threads, threads, job)
-            each = together / draws
+            longer = min(4 * draws, n)  # as blocks become, when there are many draws
+            together, (pilot, *_) = _probe(blocks.pivots_block, [(job, 0, longer)] * threads, threads, job)
+            each, draws = together / longer, longer
         mean = pilot.sums / draws
         spread = np.maximum(pilot.moments[:, 9] / draws - mean**2, 0.0) * sources.scale.factor**2
         worst = math.sqrt(float(spread.max(initial=0.0)))

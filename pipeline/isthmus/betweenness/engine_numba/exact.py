@@ -68,8 +68,8 @@ def bytes_per_thread(n: int, m: int, lanes: int, weighted: bool = False) -> int:
 
     Rows of lanes 8 n lanes; three masks 24 n; level starts 8 n; partial sums, of which one may wait to be
     added, 2 x 16 n; records of (level, vertex) 12 bytes each, two per vertex to start with, doubled when a
-    batch needs more (up to one per vertex and lane; below twice the vertices on social graphs, three times on
-    sparser ones), so 48 n.
+    batch needs more, which it does the sooner the more lanes it has: 48 n + n lanes, between what social graphs
+    and random ones take.
     With lengths: distances, path counts, dependencies 24 n, predecessors and order 8 n, partial sums 32 n; queue
     entries 8 bytes each, one whenever a vertex is found to be nearer than known: 1.45 per vertex on a graph of
     co-authors, so 2 n are counted, or one per arc where that is fewer. The ring of buckets adds up to 17 MB when
@@ -77,7 +77,7 @@ def bytes_per_thread(n: int, m: int, lanes: int, weighted: bool = False) -> int:
     """
     if weighted:
         return 64 * n + 8 * min(m, 2 * n)
-    return (8 * lanes + 112) * n
+    return (9 * lanes + 112) * n
 
 
 def run_block(reduced: Reduced, plan: Plan, index: int, stop: Bytes = GO_ON) -> Partial:
