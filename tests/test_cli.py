@@ -54,7 +54,7 @@ def test_the_first_help_says_what_it_does_where_to_start_and_the_exit_codes() ->
     assert "Start with `isthmus demo`" in said.out
     for code in ("0 ", "64 ", "65 ", "70 ", "74 ", "75 ", "78 ", "130 "):
         assert f"\n    {code}" in said.out
-    for command in ("score", "check", "columns", "demo"):
+    for command in ("score", "check", "history", "columns", "demo"):
         assert f"\n  {command}" in said.out
 
 
@@ -191,6 +191,7 @@ def test_the_json_of_a_night_is_its_manifest(site: Site) -> None:
     assert told["inputs"][0] == {
         "file": "dt=2026-03-01/part-0.parquet",
         "bytes": site.file(DAYS[0]).stat().st_size,
+        "changed": str(datetime.fromtimestamp(int(site.file(DAYS[0]).stat().st_mtime), UTC)),
         "changed_ns": site.file(DAYS[0]).stat().st_mtime_ns,
         "rows": 8,
     }

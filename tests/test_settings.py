@@ -85,6 +85,10 @@ WRONG = {
     ),
     "far warehouse": (LEAST + '[run]\nwarehouse = "s3://b/w"', ['run.warehouse = "s3://b/w"', "only local folders"]),
     "far work": (LEAST + '[run]\nwork = "gs://b/w"', ['run.work = "gs://b/w"', "only local folders"]),
+    # signals
+    "no .prom": (LEAST + '[signals]\nprometheus = "m.txt"', ['signals.prometheus = "m.txt"', "ending in .prom"]),
+    "far signal": (LEAST + '[signals]\nopenlineage = "ftp://h/x"', ['"ftp://"', "a file or an http(s) address"]),
+    "no host": (LEAST + '[signals]\nopenlineage = "http://"', ['"http://"', "a file or an http(s) address"]),
     # not TOML
     "no TOML": ("series = \n", ["c.toml is not TOML", "line 1", "mend that line"]),
     "key twice": ('series = "s"\nseries = "t"\n', ["c.toml is not TOML", "line 2"]),
@@ -98,6 +102,13 @@ def test_wrong_settings_are_told(tmp_path: Path, name: str) -> None:
         settings_of(tmp_path, text)
     for part in expected:
         assert part in str(caught.value)
+
+
+@pytest.mark.parametrize("address", ["https://user:SECRET@h/x", "https://h/x?key=SECRET", "https://h/x#SECRET"])
+def test_an_address_with_a_secret_is_refused_and_not_repeated(tmp_path: Path, address: str) -> None:
+    with pytest.raises(SettingsError, match="credentials come from the environment") as caught:
+        settings_of(tmp_path, LEAST + f'[signals]\nopenlineage = "{address}"')
+    assert "SECRET" not in str(caught.value)
 
 
 @pytest.mark.parametrize("command", ["score", "check"])
@@ -180,6 +191,7 @@ def test_defaults_are_the_contract(tmp_path: Path) -> None:
             "late": "restate",
             "memory": "16GiB",
         },
+        "signals": {"log": "", "prometheus": "", "openlineage": ""},
     }
 
 
@@ -194,6 +206,7 @@ def test_relative_paths_are_of_the_files_folder(tmp_path: Path, monkeypatch: pyt
     (tmp_path / "configs").mkdir()
     (tmp_path / "configs" / "c.toml").write_text(
         'series = "s"\n[log]\npath = "../logs/dt=*/*.parquet"\n[run]\nwarehouse = "/abs/w"\nwork = "~/w"\n'
+        '[signals]\nlog = "../s.jsonl"\nopenlineage = "https://h:1/in"\n'
     )
     monkeypatch.chdir(tmp_path / "elsewhere")
     monkeypatch.setenv("HOME", "/home/of")
@@ -201,6 +214,8 @@ def test_relative_paths_are_of_the_files_folder(tmp_path: Path, monkeypatch: pyt
     assert settings.log.path == f"{tmp_path}/configs/../logs/dt=*/*.parquet"
     assert settings.run.warehouse == "/abs/w"
     assert settings.run.work == "/home/of/w"
+    assert settings.signals.log == f"{tmp_path}/configs/../s.jsonl"
+    assert settings.signals.openlineage == "https://h:1/in"
 
 
 def test_an_address_stays_an_address(tmp_path: Path) -> None:
@@ -274,6 +289,9 @@ NO_CHANGES: dict[str, dict[str, Any]] = {
     "run.memory": {"run": {"memory": "1GiB"}},
     "run.finish_by": {"run": {"finish_by": "05:45"}},
     "run.late": {"run": {"late": "freeze"}},
+    "signals.log": {"signals": {"log": "-"}},
+    "signals.prometheus": {"signals": {"prometheus": "/p/s.prom"}},
+    "signals.openlineage": {"signals": {"openlineage": "http://h:1"}},
 }
 ONLY_ONE_CHOICE = {"log.kind"}
 

@@ -5,7 +5,8 @@ from __future__ import annotations
 import os
 import signal
 import sys
-import traceback
+from collections.abc import Iterator
+from contextlib import contextmanager
 from datetime import date
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated
@@ -14,14 +15,24 @@ import typer
 
 from isthmus import reports
 from isthmus.console import Console
-from isthmus.errors import GateStopped, IsthmusError, StoreError, TryAgain
+from isthmus.errors import (
+    INTERNAL,
+    INTERRUPTED,
+    GateStopped,
+    IsthmusError,
+    StoreError,
+    TryAgain,
+    exit_code_of,
+    places_of,
+)
 
 if TYPE_CHECKING:
     from isthmus.nights import Result
+    from isthmus.settings import Settings
 
 __all__ = ["app", "main"]
 
-USAGE, INTERNAL, INTERRUPTED = 64, 70, 130
+USAGE = 64
 YEARS = range(1970, 2200)  # a row outside them is refused, so no night can end there
 
 # Typer carries a click of its own, or uses the installed one; either way this is the class of all usage errors.
@@ -115,11 +126,13 @@ def score(config: Config, as_of: AsOf = None, accept: Accept = None, as_json: Js
     from isthmus.deadline import Deadline
     from isthmus.nightly import yesterday
     from isthmus.settings import load
+    from isthmus.signals import examine
 
-    console = Console(as_json=as_json)
     settings = load(config)
+    examine(settings)
     deadline = Deadline.of(settings, datetime.now())
-    with console.watch() as watch:
+    console = _console(settings, as_json=as_json)
+    with _machines_only(settings), console.watch() as watch:
         first, *others = nights.score(settings, as_of or yesterday(), watch, deadline, frozenset(accept or ()))
     assert first.outcome is not None
     reports.night(console, first.outcome)
@@ -149,17 +162,19 @@ def backfill(
     """
     from isthmus import nights
     from isthmus.settings import load
+    from isthmus.signals import examine
 
     if last < first:
         raise typer.BadParameter(f"--to {last} is before --from {first}")
-    console = Console()
     settings = load(config)
+    examine(settings)
+    console = _console(settings)
     results = []
-    with console.watch() as watch:
+    with _machines_only(settings), console.watch() as watch:
         for result in nights.backfill(settings, first, last, watch, again=again, accept=frozenset(accept or ())):
             results.append(result)
             reports.one_line(console, result, "published")
-    _raise_first(results)
+        _raise_first(results)
 
 
 def _raise_first(results: list[Result]) -> None:
@@ -194,11 +209,38 @@ def check(
         return
     from isthmus.forecast import foresee
     from isthmus.nightly import window_of, yesterday
+    from isthmus.signals import examine
 
+    examine(settings)
     forecast = foresee(settings, *window_of(settings, as_of or yesterday()))
     reports.forecast(console, settings, forecast)
     if forecast.stopped:
         raise GateStopped(forecast.stopped)
+
+
+@app.command()
+def history(
+    config: Config,
+    nights: Annotated[int, typer.Option("--nights", metavar="N", min=1, help="days to look back")] = 14,
+    show_all: Annotated[bool, typer.Option("--all", help="the runs that were replaced, too")] = False,
+    as_json: Json = False,
+) -> None:
+    """The recent nights, newest last: what each published, from what, and how sure.
+
+    Reads the warehouse alone: neither the log nor the work folder. A night is `published`, `incomplete` (a run was
+    killed while publishing; run it again) or `missing` (no run ever published it).
+
+    \b
+    Examples
+      isthmus history configs/payments.toml
+      isthmus history configs/payments.toml --nights 60 --all
+    """
+    from isthmus.publish import nights_of
+    from isthmus.settings import load
+
+    settings = load(config)
+    found = nights_of(Path(settings.run.warehouse), settings.series, nights)
+    reports.history(Console(as_json=as_json), settings, found, show_all=show_all)
 
 
 @app.command()
@@ -241,6 +283,22 @@ def demo(
     console.answer(outcome.manifest)
 
 
+def _console(settings: Settings, *, as_json: bool = False) -> Console:
+    """Where the JSON lines go to stderr nothing is said in words."""
+    return Console(as_json=as_json, people=settings.signals.log != "-")
+
+
+@contextmanager
+def _machines_only(settings: Settings) -> Iterator[None]:
+    """Where the JSON lines go to stderr they have told an error already: only its exit code is left to give."""
+    try:
+        yield
+    except Exception as error:
+        if settings.signals.log != "-":
+            raise
+        raise typer.Exit(exit_code_of(error)) from error
+
+
 def main(arguments: list[str] | None = None) -> None:
     """Run the command and leave with its exit code."""
     signal.signal(signal.SIGTERM, _asked_to_stop)
@@ -281,7 +339,6 @@ def _exit_code(arguments: list[str] | None) -> int:
 
 def _internal(error: Exception) -> str:
     """Where it happened; the message only on request, because a library's message may quote the log."""
-    places = [f"  {Path(f.filename).name}:{f.lineno} in {f.name}" for f in traceback.extract_tb(error.__traceback__)]
     if os.environ.get("ISTHMUS_SHOW_INTERNAL"):
         what = f"{type(error).__name__}: {error}"
     else:
@@ -289,7 +346,7 @@ def _internal(error: Exception) -> str:
     return "\n".join(
         (
             "isthmus: internal error; the night is published whole or not at all. Please report these lines:",
-            *places[-8:],
+            *(f"  {place}" for place in places_of(error)),
             f"  {what}",
         )
     )

@@ -24,12 +24,14 @@ WIDEST_KEY = 40
 class Console:
     """`say` and `table` go to stderr as plain text that pastes into a ticket; `answer` goes to stdout as JSON."""
 
-    def __init__(self, *, as_json: bool = False) -> None:
-        self._json = as_json
+    def __init__(self, *, as_json: bool = False, people: bool = True) -> None:
+        """`people`: false where stderr belongs to the JSON log lines; then nothing is said in words."""
+        self._json, self._people = as_json, people
         self._err = RichConsole(stderr=True, highlight=False, soft_wrap=True)
 
     def say(self, text: str = "") -> None:
-        self._err.print(Text(text))
+        if self._people:
+            self._err.print(Text(text))
 
     def table(self, title: str, headers: list[str], rows: list[list[str]], left: int = 1) -> None:
         """`left` columns are text, the others numbers. Never cut to the terminal's width: it must paste whole."""
@@ -51,7 +53,7 @@ class Console:
     @contextmanager
     def watch(self) -> Iterator[Watch]:
         """A Watch that draws progress bars on a terminal and writes one plain line per finished stage elsewhere."""
-        if self._err.is_terminal:
+        if self._people and self._err.is_terminal:
             with Progress(
                 TextColumn("{task.description:<9}"),
                 BarColumn(),

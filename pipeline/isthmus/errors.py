@@ -14,7 +14,23 @@ and 70 (internal error) is everything that is not in this tree.
 
 from __future__ import annotations
 
-__all__ = ["DataRefused", "GateStopped", "IsthmusError", "SettingsError", "StoreError", "TryAgain"]
+import traceback
+from pathlib import Path
+
+__all__ = [
+    "INTERNAL",
+    "INTERRUPTED",
+    "DataRefused",
+    "GateStopped",
+    "IsthmusError",
+    "SettingsError",
+    "StoreError",
+    "TryAgain",
+    "exit_code_of",
+    "places_of",
+]
+
+INTERNAL, INTERRUPTED = 70, 130
 
 
 class IsthmusError(Exception):
@@ -52,3 +68,18 @@ class TryAgain(IsthmusError):
     """Another run holds the lease, or the run was asked to stop; the same command works later."""
 
     exit_code = 75
+
+
+def exit_code_of(error: BaseException) -> int:
+    """The exit code that this error ends a command with."""
+    if isinstance(error, IsthmusError):
+        return error.exit_code
+    if isinstance(error, KeyboardInterrupt):
+        return INTERRUPTED
+    return StoreError.exit_code if isinstance(error, OSError) else INTERNAL
+
+
+def places_of(error: BaseException) -> list[str]:
+    """Where it happened, innermost last: file, line and function, and nothing of what was worked on."""
+    frames = traceback.extract_tb(error.__traceback__)[-8:]
+    return [f"{Path(frame.filename).name}:{frame.lineno} in {frame.name}" for frame in frames]

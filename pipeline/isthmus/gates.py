@@ -7,17 +7,17 @@ the same, and the record says so. The defaults are this project's own, not a sta
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from dataclasses import asdict, dataclass, field
+from dataclasses import dataclass
 from datetime import date, timedelta
 from statistics import median
-from typing import Any, Literal
+from typing import Literal
 
 from isthmus.errors import GateStopped
 from isthmus.settings import Gate, Gates
 
 __all__ = ["FIRST_PARTIES", "GATES", "WEEKS", "Gatekeeper", "Reference"]
 
-State = Literal["passed", "warned", "stopped", "accepted", "off", "nothing to compare with"]
+State = Literal["ok", "warn", "stop", "accepted", "off", "nothing to compare with"]
 GATES = ("missing_days", "refused", "nulls", "volume", "schema_drift", "component", "overlap")
 FIRST_PARTIES = 100
 WEEKS = 4  # same weekdays that a day's volume is held against
@@ -35,29 +35,18 @@ class Reference:
     first_parties: frozenset[str]
 
 
-@dataclass(frozen=True)
-class Judged:
-    """One gate's finding. `figure` and `limit` are for people and machines alike; neither names a party."""
-
-    gate: str
-    figure: float | None
-    limit: float | None
-    state: State
-    text: str = ""
-
-
 @dataclass
 class Gatekeeper:
     """Holds a night against the gates, in two rounds: after reading and after scoring.
 
     Each round raises GateStopped, naming every gate of the round that stops the night, with figure, limit and what to
-    look at. `accepted`: gates whose stop is published knowingly.
+    look at. `accepted`: gates whose stop is published knowingly. `record` hears gate, figure, limit and state of each.
     """
 
     gates: Gates
     warn: Callable[[str], None]
     accepted: frozenset[str] = frozenset()
-    judged: list[Judged] = field(default_factory=list)
+    record: Callable[[str, float | None, float, str], None] = lambda gate, figure, limit, state: None
 
     def after_reading(
         self,
@@ -124,10 +113,6 @@ class Gatekeeper:
         )  # fmt: skip
         self._close(stops)
 
-    def told(self) -> list[dict[str, Any]]:
-        """For run.json and the table `runs`."""
-        return [asdict(each) for each in self.judged]
-
     def _volume(self, stops: list[str], volume: Mapping[date, int], last_day: date) -> None:
         """The last day only: the others were judged on their own nights."""
         alike = [volume[day] for week in range(1, WEEKS + 1) if (day := last_day - timedelta(weeks=week)) in volume]
@@ -171,21 +156,21 @@ class Gatekeeper:
         text: str,
         look: str,
     ) -> None:
-        state: State = "passed"
+        state: State = "ok"
         if gate == "off":
             state = "off"
         elif figure is None:
             state = "nothing to compare with"
-        elif broken and gate == "stop" and name not in self.accepted:
-            state = "stopped"
+        elif broken:
+            state = "warn" if gate == "warn" else "accepted" if name in self.accepted else "stop"
+        self.record(name, figure, limit, state)
+        if state == "stop":
             stops.append(
                 f"{name}: {text}. Look at {look}; to publish this night knowingly: --accept {name}; for all nights: "
                 f'[gates] {name} = "warn"'
             )
-        elif broken:
-            state = "accepted" if gate == "stop" else "warned"
+        elif state in ("warn", "accepted"):
             self.warn(f"{name}: {text}" + (" (accepted)" if state == "accepted" else ""))
-        self.judged.append(Judged(name, figure, limit, state, text if broken and state != "off" else ""))
 
     @staticmethod
     def _close(stops: list[str]) -> None:

@@ -33,6 +33,7 @@ from isthmus.publish import (
     volume_of,
 )
 from isthmus.settings import Settings
+from isthmus.signals import follow
 from isthmus.tables import LAYOUT
 from isthmus.watch import Watch
 
@@ -69,6 +70,13 @@ def run_night(
     accept: gates whose stop is published knowingly. frozen: published nights that late rows have changed and that are
     left as they are, for the record.
     """
+    with follow(settings, *window_of(settings, as_of), watch) as tell:
+        outcome = _night(settings, as_of, watch, accept, frozen)
+        tell(outcome.manifest)
+    return outcome
+
+
+def _night(settings: Settings, as_of: date, watch: Watch, accept: frozenset[str], frozen: Sequence[date]) -> Outcome:
     started_at = datetime.now(UTC)
     deadline = Deadline.of(settings, datetime.now())
     first_day, last_day = window_of(settings, as_of)
@@ -79,7 +87,7 @@ def run_night(
     store.sweep(work)
     night = Night(warehouse, settings.series, as_of)
     before = reference(night)
-    gatekeeper = Gatekeeper(settings.gates, watch.warning, accept)
+    gatekeeper = Gatekeeper(settings.gates, watch.warning, accept, watch.gate)
     run = settings.run
     with open_door(
         workers=run.workers,
@@ -91,6 +99,7 @@ def run_night(
         with watch.stage("survey"):
             found = survey(settings.log, first_day, last_day, door)
         reading = read_window(found, settings.log, first_day, last_day, work, door, watch, deadline.reading)
+        watch.know(rows_read=reading.rows_read, **{f"rows_{name}": reading.rows(name) for name in reading.outcomes})
         used = [theirs for theirs in settings.log.columns.model_dump().values() if theirs]
         gatekeeper.after_reading(
             rows=reading.rows_in_window,
@@ -106,6 +115,7 @@ def run_night(
             built.save(store.fresh(work / "snapshot"))
             graph = Graph.open(work / "snapshot")
             parties = describe(graph, reading.ties)
+        watch.know(parties=graph.n, ties=graph.ties)
         input_id = input_id_of(settings, as_of, reading)
         score = settings.score.model_copy(update={"minutes": deadline.minutes_for_scoring(graph.n, graph.ties)})
         with watch.stage("plan"):
@@ -115,6 +125,7 @@ def run_night(
             estimate = measure(graph, plan, score, run.threads, tick, door if run.elsewhere else None, checkpoint)
         remember(work / "plan.json", input_id, plan, estimate)
     run_id = run_id_of(settings.series, as_of, input_id, estimate)
+    watch.know(run_id=run_id)
     if graph.n < 3:
         watch.warning(f"{graph.n} parties: with fewer than three nobody can stand between others, so all scores are 0")
     component_share = int((parties["component"] == 0).sum()) / max(graph.n, 1)
@@ -125,9 +136,9 @@ def run_night(
     )
     row = run_row(
         settings, run_id, first_day, plan, estimate, graph, reading, watch, started_at,
-        revision=revision_of(record_of(night), run_id), gates=gatekeeper.told(),
+        revision=revision_of(record_of(night), run_id), gates=watch.gates,
     )  # fmt: skip
-    more = manifest(settings, as_of, found, reading, plan, watch, component_share, frozen)
+    more = manifest(settings, night, found, reading, plan, watch, component_share, frozen)
     with watch.stage("publish"):
         scores = publish(
             night,

@@ -7,16 +7,17 @@ import shlex
 import shutil
 import sys
 from pathlib import Path
+from typing import Any
 
 from isthmus.console import Console, number, printable
 from isthmus.forecast import Forecast
-from isthmus.nightly import Outcome
+from isthmus.nightly import Outcome, yesterday
 from isthmus.nights import Result
 from isthmus.publish.queries import top_brokers
 from isthmus.settings import Settings
 from isthmus.tables import PARTITION, Table
 
-__all__ = ["dictionary", "forecast", "how_to_go_on", "night"]
+__all__ = ["dictionary", "forecast", "history", "how_to_go_on", "night"]
 
 CAUTION = (
     "A score says who lies between others in this log. It is not a verdict on anyone: a person decides, and local law\n"
@@ -151,6 +152,48 @@ def forecast(console: Console, settings: Settings, seen: Forecast) -> None:
             "stopped": seen.stopped,
         }
     )
+
+
+def history(console: Console, settings: Settings, nights: list[dict[str, Any]], *, show_all: bool) -> None:
+    """One line per night, newest last; with `show_all` also one per run that was replaced, before the one that did."""
+    warehouse = settings.run.warehouse
+    if not nights:
+        console.say(f"Series {settings.series}: no night yet in {warehouse}; `isthmus score` publishes the first.")
+    else:
+        lines: list[list[str]] = []
+        before: dict[str, Any] = {}
+        for each in nights:
+            run = each.get("run", {})
+            for old in reversed(run.get("replaces", [])) if show_all else ():
+                lines.append([str(each["as_of"]), "replaced", *_figures(old, before)])
+            lines.append([str(each["as_of"]), each["state"], *_figures(run, before)])
+            before = run or before
+        console.table(
+            f"Series {settings.series}, {nights[0]['as_of']} .. {nights[-1]['as_of']}, in {warehouse}",
+            ["night", "state", "method", "changed", "gates", "widest ±", "rows used", "refused", "seconds"],
+            lines,
+            left=5,
+        )
+        if (last := yesterday()) > nights[-1]["as_of"]:
+            console.say(f"No night after {nights[-1]['as_of']}; the last whole day (UTC) is {last}.")
+    console.answer({"series": settings.series, "warehouse": warehouse, "nights": nights})
+
+
+def _figures(run: dict[str, Any], before: dict[str, Any]) -> list[str]:
+    """The columns of one run. What an older isthmus did not tell is left blank."""
+    if not run:
+        return [""] * 7
+    changed = [name for name in ("definition", "version") if before and before.get(name) != run.get(name)]
+    gates = [f"{gate['gate']}: {gate['state']}" for gate in run.get("gates", []) if gate["state"] in ("warn", "stop")]
+    return [
+        run.get("method", ""),
+        " ".join(changed),
+        ", ".join(gates) or ("warnings" if run.get("warnings") else ""),
+        f"{run['half_width_widest']:.2g}" if "half_width_widest" in run else "",
+        number(run["rows_used"]),
+        f"{run['rows_refused'] / max(run['rows_read'], 1):.2%}",
+        f"{sum(run['seconds'].values()):,.1f}" if "seconds" in run else "",
+    ]
 
 
 def dictionary(tables: list[Table], *, as_json: bool) -> None:

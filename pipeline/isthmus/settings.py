@@ -16,13 +16,14 @@ import os
 import tomllib
 from pathlib import Path
 from typing import Any, Literal
+from urllib.parse import urlsplit
 
 from pydantic import BaseModel, ConfigDict, Field, ValidationError, model_validator
 from pydantic.fields import FieldInfo
 
 from isthmus.errors import SettingsError, StoreError
 
-__all__ = ["Columns", "Gates", "Graph", "Log", "Run", "Score", "Settings", "Window", "load", "to_toml"]
+__all__ = ["Columns", "Gates", "Graph", "Log", "Run", "Score", "Settings", "Signals", "Window", "load", "to_toml"]
 
 Distance = Literal["hops", "contacts", "amount"]
 Method = Literal["auto", "exact", "pivots", "paths"]
@@ -150,6 +151,36 @@ class Run(Section):
         return int(float(number) * (1024 if text[-2] == "i" else 1000) ** power)
 
 
+class Signals(Section):
+    """What a run tells machines. Each is off while empty; none holds a party's key or a secret."""
+
+    log: str = _key("", 'file that gets one JSON object per line; "-": stderr, instead of the lines for people')
+    prometheus: str = _key(
+        "",
+        "file of the node exporter's textfile folder, ending in .prom; one per series (needs isthmus[prometheus])",
+        pattern=r"^(.*\.prom)?$",
+    )
+    openlineage: str = _key(
+        "",
+        "file that gets one OpenLineage event per line, or http(s) address of an endpoint (needs isthmus[openlineage])",
+    )
+
+    @model_validator(mode="after")
+    def _without_secrets(self) -> Signals:
+        if "://" in self.openlineage:
+            told = urlsplit(self.openlineage)
+            if told.scheme not in ("http", "https") or not told.hostname:
+                raise ValueError(
+                    f'signals.openlineage starts with "{told.scheme}://"; give a file or an http(s) address'
+                )
+            if "@" in told.netloc or told.query or told.fragment:
+                raise ValueError(
+                    "signals.openlineage holds more than scheme, host, port and path; credentials come from the "
+                    "environment, as OPENLINEAGE_API_KEY"
+                )
+        return self
+
+
 class Settings(Section):
     """One log's configuration."""
 
@@ -164,6 +195,7 @@ class Settings(Section):
     score: Score = Field(default_factory=Score)
     gates: Gates = Field(default_factory=Gates)
     run: Run = Field(default_factory=Run)
+    signals: Signals = Field(default_factory=Signals)
 
     @model_validator(mode="after")
     def _possible_together(self) -> Settings:
@@ -201,14 +233,14 @@ class Settings(Section):
     @property
     def definition(self) -> str:
         """16 hex digits that name everything that changes results: not where it runs, not where files lie."""
-        told = self.model_dump(mode="json", exclude={"run": True, "gates": True, "log": {"path"}})
+        told = self.model_dump(mode="json", exclude={"run": True, "gates": True, "signals": True, "log": {"path"}})
         return hashlib.sha256(json.dumps(told, sort_keys=True).encode()).hexdigest()[:16]
 
 
 def load(path: str | Path) -> Settings:
     """Read a configuration file.
 
-    Relative `log.path`, `run.warehouse` and `run.work` come back resolved against the file's folder.
+    Relative paths (of log, warehouse, work folder and signals) come back resolved against the file's folder.
 
     Raises SettingsError (unknown key, wrong type, impossible value, not TOML) and StoreError (no such file).
     """
@@ -228,8 +260,10 @@ def load(path: str | Path) -> Settings:
         update={key: _resolve(home, getattr(settings.run, key)) for key in ("warehouse", "work")}
     )
     log = settings.log.model_copy(update={"path": _resolve(home, settings.log.path)})
+    files = {key: value for key, value in settings.signals if value and (key, value) != ("log", "-")}
+    signals = settings.signals.model_copy(update={key: _resolve(home, value) for key, value in files.items()})
     _apart(path, log.path, run)
-    return settings.model_copy(update={"run": run, "log": log})
+    return settings.model_copy(update={"run": run, "log": log, "signals": signals})
 
 
 def _apart(path: Path, log: str, run: Run) -> None:

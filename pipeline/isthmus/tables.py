@@ -156,7 +156,7 @@ RUNS = Table(
         Column(
             "gates",
             pl.List(pl.Struct({"gate": pl.String, "state": pl.String, "figure": pl.Float64, "limit": pl.Float64})),
-            "every gate: its state (passed, warned, accepted, off, nothing to compare with), its figure, its limit",
+            "every gate: its state (ok, warn, accepted, off, nothing to compare with), its figure, its limit",
         ),
         _number("predicted_seconds", "what the plan expected scoring to take", "seconds", nullable=True),
         _number("predicted_bytes", "what the plan expected scoring to need", "bytes", nullable=True),

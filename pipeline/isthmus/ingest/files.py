@@ -60,6 +60,11 @@ class LogFile:
         return self.state[0]
 
     @property
+    def changed(self) -> int:
+        """When it was last changed, in nanoseconds since 1970."""
+        return self.state[1]
+
+    @property
     def rows(self) -> int:
         return sum(group.rows for group in self.groups)
 

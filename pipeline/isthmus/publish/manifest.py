@@ -5,6 +5,7 @@ from __future__ import annotations
 import hashlib
 import importlib.metadata
 import json
+import platform
 from collections.abc import Sequence
 from dataclasses import asdict
 from datetime import UTC, date, datetime
@@ -15,6 +16,8 @@ import numpy as np
 from isthmus.betweenness import Estimate, Plan
 from isthmus.graph import Graph
 from isthmus.ingest import Reading, Survey
+from isthmus.publish.history import replaced
+from isthmus.publish.night import Night
 from isthmus.settings import Settings
 from isthmus.tables import LAYOUT
 from isthmus.watch import Watch
@@ -96,7 +99,7 @@ def run_row(
 
 def manifest(
     settings: Settings,
-    as_of: date,
+    night: Night,
     found: Survey,
     reading: Reading,
     plan: Plan,
@@ -104,17 +107,33 @@ def manifest(
     component_share: float,
     frozen: Sequence[date],
 ) -> dict[str, Any]:
-    """What run.json tells beyond `runs`."""
+    """What run.json tells beyond `runs`. Called before the night is published, while the run it replaces is there."""
     return {
         "series": settings.series,
-        "as_of": as_of,
+        "as_of": night.as_of,
         "layout": LAYOUT,
+        "versions": _versions(plan.engine),
         "seconds": watch.seconds,
+        "stages": [
+            {"stage": stage, "seconds": seconds, "peak_memory_bytes": watch.peaks[stage]}
+            for stage, seconds in watch.seconds.items()
+        ],
+        "gates": watch.gates,
         "outcomes": reading.outcomes,
         "missing_days": reading.missing_days,
         "plan": asdict(plan),
+        "predictions": {
+            "score_seconds": {"predicted": plan.predicted_seconds, "measured": watch.seconds["score"]},
+            "score_bytes": {"predicted": plan.predicted_bytes, "measured": watch.peaks["score"]},
+        },
         "inputs": [
-            {"file": file.name, "bytes": file.size, "changed_ns": file.state[1], "rows": file.rows}
+            {
+                "file": file.name,
+                "bytes": file.size,
+                "changed": _moment(file.changed),
+                "changed_ns": file.state[1],
+                "rows": file.rows,
+            }
             for file in found.files
         ],
         "schema": found.schema,
@@ -122,7 +141,18 @@ def manifest(
         "component_share": component_share,
         "late": {"policy": settings.run.late, "not_restated": list(frozen)},
         "settings": settings.model_dump(mode="json"),
+        "replaces": replaced(night),
     }
+
+
+def _versions(engine: str) -> dict[str, str]:
+    """Of everything that results could depend on."""
+    libraries = ("isthmus", "numpy", "polars", "pyarrow", "dask", engine)
+    return {"python": platform.python_version()} | {name: importlib.metadata.version(name) for name in libraries}
+
+
+def _moment(nanoseconds: int) -> datetime:
+    return datetime.fromtimestamp(nanoseconds // 10**9, UTC)
 
 
 def _version() -> str:

@@ -1,0 +1,5 @@
+"""What a run tells machines: JSON log lines, a Prometheus text file, OpenLineage events. Never a party's key."""
+
+from isthmus.signals.follow import examine, follow
+
+__all__ = ["examine", "follow"]
