@@ -62,8 +62,8 @@ WEEKDAYS = np.array([1.05, 1.0, 1.0, 1.05, 1.3, 0.7, 0.45])  # Monday first
 
 # Shares of a day's rows; all dirt together stays below one row in a hundred.
 SPOILT = {
-    "null_key": 0.0008,
-    "empty_key": 0.0004,
+    "null_key": 0.0004,
+    "empty_key": 0.0003,
     "null_time": 0.0004,
     "odd_time": 0.0006,
     "negative_amount": 0.0006,
