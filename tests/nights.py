@@ -105,11 +105,11 @@ class Site:
         return pl.read_parquet(self.warehouse / name / "series=s" / f"as_of={AS_OF}" / f"{name}.parquet")
 
     def published(self) -> dict[str, bytes]:
-        """Every file in the warehouse, hidden ones too, and its bytes."""
+        """Every file that readers may come across in the warehouse, hidden ones beside theirs too, and its bytes."""
         return {
             str(path.relative_to(self.warehouse)): path.read_bytes()
             for path in sorted(self.warehouse.rglob("*"))
-            if path.is_file()
+            if path.is_file() and path.relative_to(self.warehouse).parts[0] not in (".nights", ".leases")
         }
 
     def tree(self) -> dict[str, tuple[Any, ...]]:

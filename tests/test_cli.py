@@ -6,6 +6,7 @@ import contextlib
 import errno
 import io
 import json
+import os
 import re
 import shutil
 import signal
@@ -20,7 +21,7 @@ import pytest
 from rich.console import Console as RichConsole
 
 import isthmus as package
-from isthmus import cli, forecast, nightly, store
+from isthmus import cli, forecast, nightly
 from isthmus.console import Console, number, printable
 from isthmus.tables import PARTITION, TABLES
 from nights import AS_OF, BETWEEN, DAYS, PAIRS, Site, isthmus, noon, rows
@@ -334,10 +335,8 @@ def test_ctrl_c(site: Site, monkeypatch: pytest.MonkeyPatch, during: str) -> Non
     if during == "score":
         monkeypatch.setattr(nightly, "measure", interrupt)
     else:
-        rename = store.os.replace
-        monkeypatch.setattr(
-            store.os, "replace", lambda a, b: interrupt() if Path(b).name == "ties.parquet" else rename(a, b)
-        )
+        rename = os.replace
+        monkeypatch.setattr(os, "replace", lambda a, b: interrupt() if Path(b).name == "current" else rename(a, b))
     said = site.score()
     assert said.code == INTERRUPTED
     assert "interrupted" in said.err

@@ -83,8 +83,9 @@ WRONG = {
         LEAST + '[run]\nworkers = 2\nscheduler = "tcp://x:1"',
         ["run.workers = 2", 'run.scheduler = "tcp://x:1"', "keep one"],
     ),
-    "far warehouse": (LEAST + '[run]\nwarehouse = "s3://b/w"', ['run.warehouse = "s3://b/w"', "only local folders"]),
-    "far work": (LEAST + '[run]\nwork = "gs://b/w"', ['run.work = "gs://b/w"', "only local folders"]),
+    "far warehouse": (LEAST + '[run]\nwarehouse = "gs://b/w"', ["run.warehouse: gs:// is not known", "s3://"]),
+    "no bucket": (LEAST + '[run]\nwarehouse = "s3:///"', ["run.warehouse: s3:// names no bucket", "BUCKET/PREFIX"]),
+    "far work": (LEAST + '[run]\nwork = "s3://b/w"', ['run.work = "s3://b/w"', "only folders"]),
     # signals
     "no .prom": (LEAST + '[signals]\nprometheus = "m.txt"', ['signals.prometheus = "m.txt"', "ending in .prom"]),
     "far signal": (LEAST + '[signals]\nopenlineage = "ftp://h/x"', ['"ftp://"', "a file or an http(s) address"]),

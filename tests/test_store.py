@@ -5,11 +5,11 @@ from __future__ import annotations
 import errno
 import json
 import os
+import shutil
 from pathlib import Path
 
 import pytest
 
-from isthmus import store
 from isthmus.errors import SettingsError, StoreError
 from isthmus.store import Batch, claim, examine, fresh, story, sweep
 
@@ -54,7 +54,7 @@ def test_the_last_file_is_away_while_the_others_change(tmp_path: Path, monkeypat
         seen.append((target.name, (tmp_path / "c/last").exists(), (tmp_path / "a/one").exists()))
         rename(source, target)
 
-    monkeypatch.setattr(store.os, "replace", watch)
+    monkeypatch.setattr(os, "replace", watch)
     with batch_of(tmp_path, "new") as batch:
         batch.commit()
     assert seen == [("one", False, True), ("two", False, True), ("last", False, True)]
@@ -86,9 +86,9 @@ def test_a_rename_that_fails_undoes_the_others(
     def no_links(*_: object) -> None:
         raise OSError(errno.EPERM, "no hard links here")
 
-    monkeypatch.setattr(store.os, "replace", fail_once)
+    monkeypatch.setattr(os, "replace", fail_once)
     if not links:
-        monkeypatch.setattr(store.os, "link", no_links)
+        monkeypatch.setattr(os, "link", no_links)
     expected = StoreError if isinstance(error, OSError) else KeyboardInterrupt
     with pytest.raises(expected), batch_of(tmp_path, "new") as batch:
         batch.commit()
@@ -102,8 +102,8 @@ def test_nothing_changes_when_the_old_files_cannot_be_kept(tmp_path: Path, monke
     def full(*_: object) -> None:
         raise OSError(errno.ENOSPC, "No space left on device")
 
-    monkeypatch.setattr(store.os, "link", full)
-    monkeypatch.setattr(store.shutil, "copy2", full)
+    monkeypatch.setattr(os, "link", full)
+    monkeypatch.setattr(shutil, "copy2", full)
     with pytest.raises(StoreError, match="cannot publish: No space left"), batch_of(tmp_path, "new") as batch:
         batch.commit()
     assert files(tmp_path) == {"a/one": "old", "b/two": "old", "c/last": "old"}
@@ -186,7 +186,7 @@ def test_examine_finds_what_cannot_be_written(tmp_path: Path, monkeypatch: pytes
     with pytest.raises(StoreError, match=r"cannot use run\.work .*/file: it is not a folder"):
         examine(tmp_path / "file" / "below", 1, "run.work")
     # root may write anywhere, so a refusal is pretended
-    monkeypatch.setattr(store.os, "access", lambda path, mode: Path(path) != tmp_path)
+    monkeypatch.setattr(os, "access", lambda path, mode: Path(path) != tmp_path)
     with pytest.raises(StoreError, match=rf"cannot use run\.work {tmp_path}: this user may not write there"):
         examine(tmp_path / "new", 1, "run.work")
 

@@ -193,5 +193,5 @@ def test_an_apostrophe_in_the_path_does_not_break_the_query(site: Site, tmp_path
 
     moved = tmp_path / "it's here"
     moved.symlink_to(site.warehouse)
-    first = duckdb.sql(top_brokers(Night(moved, "s", AS_OF), first=3)).fetchall()
+    first = duckdb.sql(top_brokers(Night.of(moved, "s", AS_OF), first=3)).fetchall()
     assert [row[0] for row in first] == [1, 2, 3]

@@ -237,9 +237,10 @@ def history(
     """
     from isthmus.publish import nights_of
     from isthmus.settings import load
+    from isthmus.store import place
 
     settings = load(config)
-    found = nights_of(Path(settings.run.warehouse), settings.series, nights)
+    found = nights_of(place(settings.run.warehouse), settings.series, nights)
     reports.history(Console(as_json=as_json), settings, found, show_all=show_all)
 
 

@@ -50,7 +50,7 @@ class Forecast:
 
 def foresee(settings: Settings, first_day: date, last_day: date) -> Forecast:
     """Survey the log, read a sample of the window, and plan. Raises what a night would raise for the same faults."""
-    store.examine(Path(settings.run.warehouse), LAYOUT, "run.warehouse")
+    store.place(settings.run.warehouse).examine(LAYOUT, "run.warehouse")
     store.examine(Path(settings.run.work) / f"series={settings.series}", LAYOUT, "run.work")
     with open_door(threads=settings.run.threads) as door:
         found = survey(settings.log, first_day, last_day, door)
@@ -80,7 +80,7 @@ def _gates(
 ) -> tuple[tuple[str, ...], str]:
     """What the gates say of the rows looked at. Days can only be missed, and counted, where all rows were."""
     whole = sample.rows >= found.rows
-    before = reference(Night(Path(settings.run.warehouse), settings.series, last_day))
+    before = reference(Night.of(settings.run.warehouse, settings.series, last_day))
     used = [theirs for theirs in settings.log.columns.model_dump().values() if theirs]
     days = [first_day + timedelta(days=at) for at in range((last_day - first_day).days + 1)]
     warnings: list[str] = []

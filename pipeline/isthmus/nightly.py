@@ -71,21 +71,39 @@ def run_night(
     left as they are, for the record.
     """
     with follow(settings, *window_of(settings, as_of), watch) as tell:
-        outcome = _night(settings, as_of, watch, accept, frozen)
+        outcome = _leased(settings, as_of, watch, accept, frozen)
         tell(outcome.manifest)
     return outcome
 
 
-def _night(settings: Settings, as_of: date, watch: Watch, accept: frozenset[str], frozen: Sequence[date]) -> Outcome:
+def _leased(settings: Settings, as_of: date, watch: Watch, accept: frozenset[str], frozen: Sequence[date]) -> Outcome:
+    """The night, with both folders to itself: the work folder, and the series in the warehouse."""
+    work, leased = Path(settings.run.work) / f"series={settings.series}", f"series={settings.series}"
+    warehouse = store.place(settings.run.warehouse, scratch=work / "outgoing")
+    warehouse.claim(LAYOUT, "run.warehouse")
+    store.claim(work, LAYOUT, "run.work")
+    with store.lease(store.Folder(work), leased), store.lease(warehouse, leased) as held:
+        with held.guard():
+            warehouse.sweep(settings.series)
+        store.sweep(work)
+        return _measured_and_published(
+            settings, Night(warehouse, settings.series, as_of), work, watch, accept, frozen, held
+        )
+
+
+def _measured_and_published(
+    settings: Settings,
+    night: Night,
+    work: Path,
+    watch: Watch,
+    accept: frozenset[str],
+    frozen: Sequence[date],
+    held: store.Lease,
+) -> Outcome:
     started_at = datetime.now(UTC)
     deadline = Deadline.of(settings, datetime.now())
+    as_of = night.as_of
     first_day, last_day = window_of(settings, as_of)
-    warehouse, work = Path(settings.run.warehouse), Path(settings.run.work) / f"series={settings.series}"
-    store.claim(warehouse, LAYOUT, "run.warehouse")
-    store.claim(work, LAYOUT, "run.work")
-    store.sweep(warehouse, f"*/series={settings.series}/*")
-    store.sweep(work)
-    night = Night(warehouse, settings.series, as_of)
     before = reference(night)
     gatekeeper = Gatekeeper(settings.gates, watch.warning, accept, watch.gate)
     run = settings.run
@@ -111,6 +129,7 @@ def _night(settings: Settings, as_of: date, watch: Watch, accept: frozenset[str]
             before=before,
         )
         with watch.stage("graph"):
+            held.check()
             built = Graph.from_ties(reading.ties, directed=settings.graph.directed, distance=settings.graph.distance)
             built.save(store.fresh(work / "snapshot"))
             graph = Graph.open(work / "snapshot")
@@ -149,6 +168,7 @@ def _night(settings: Settings, as_of: date, watch: Watch, accept: frozenset[str]
             refused=reading.refused,
             top=settings.score.top,
             more=more,
+            guard=held.guard,
         )
     checkpoint.clear()
     return Outcome(night, scores, row | more)

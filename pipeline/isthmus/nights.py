@@ -5,7 +5,6 @@ from __future__ import annotations
 from collections.abc import Iterator
 from dataclasses import dataclass
 from datetime import date, timedelta
-from pathlib import Path
 
 from isthmus.cluster import open_door
 from isthmus.deadline import Deadline
@@ -14,6 +13,7 @@ from isthmus.ingest import holds, states_of, survey
 from isthmus.nightly import Outcome, run_night, window_of
 from isthmus.publish import Night, complete, published, record_of
 from isthmus.settings import Settings
+from isthmus.store import place
 from isthmus.watch import Watch
 
 __all__ = ["Result", "backfill", "changed_since", "score"]
@@ -60,7 +60,7 @@ def backfill(
     changed = set(changed_since(settings, None))
     for number in range((last - first).days + 1):
         day = first + timedelta(days=number)
-        night = Night(Path(settings.run.warehouse), settings.series, day)
+        night = Night.of(settings.run.warehouse, settings.series, day)
         if not again and day not in changed and complete(night, settings.definition):
             yield Result(day)
             continue
@@ -83,7 +83,7 @@ def changed_since(settings: Settings, but: date | None) -> list[date]:
     A file counts as changed when it is gone, or its size or time is another; and a file that was not there counts when
     its name and footer say that it can hold a day of the window.
     """
-    nights = published(Night(Path(settings.run.warehouse), settings.series, but or date.min))
+    nights = published(place(settings.run.warehouse), settings.series)
     if not nights:
         return []
     try:

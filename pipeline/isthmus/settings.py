@@ -13,6 +13,7 @@ import difflib
 import hashlib
 import json
 import os
+import re
 import tomllib
 from pathlib import Path
 from typing import Any, Literal
@@ -117,8 +118,17 @@ class Gates(Section):
 class Run(Section):
     """Where and with what the night runs. Nothing here changes a result, as long as its method fits the memory."""
 
-    warehouse: str = _key("warehouse", "folder of the published tables", min_length=1)
-    work: str = _key("work", "folder of daily ties and snapshots, which readers never see", min_length=1)
+    warehouse: str = _key(
+        "warehouse",
+        "folder of the published tables, or s3://bucket/prefix, abfs://container/prefix, az://container/prefix; "
+        "credentials come from the environment only",
+        min_length=1,
+    )
+    work: str = _key(
+        "work",
+        "local or shared folder of daily ties and memory-mapped snapshots, which readers never see",
+        min_length=1,
+    )
     workers: int = _key(0, "0: in this process; N: that many local processes", "processes", ge=0, le=1024)
     threads: int = _key(0, "per process; 0: all cores", "threads", ge=0, le=4096)
     scheduler: str = _key("", "address of a running Dask scheduler; empty: none")
@@ -204,9 +214,10 @@ class Settings(Section):
             raise ValueError(
                 f'log.columns.sender and log.columns.receiver are both "{columns.sender}"; name the column of each side'
             )
-        for key in ("warehouse", "work"):
-            if "://" in (value := getattr(self.run, key)):
-                raise ValueError(f'run.{key} = "{value}": only local folders are written; mount the bucket')
+        if "://" in self.run.work:
+            raise ValueError(f'run.work = "{_masked(self.run.work)}": only folders are mapped into memory; name one')
+        if fault := _fault_of(self.run.warehouse):
+            raise ValueError(f"run.warehouse: {fault}")
         if self.graph.distance == "amount" and not self.log.columns.amount:
             raise ValueError('graph.distance = "amount" needs log.columns.amount; name the column')
         if self.score.max_hops and self.score.engine == "networkit":
@@ -268,7 +279,7 @@ def load(path: str | Path) -> Settings:
 
 def _apart(path: Path, log: str, run: Run) -> None:
     """Raise SettingsError when what is written would be read as a log, or both folders are one."""
-    warehouse, work = Path(run.warehouse).resolve(), Path(run.work).resolve()
+    warehouse, work = Path(run.warehouse).resolve(), Path(run.work).resolve()  # a URL is below no folder
     if warehouse == work:
         raise SettingsError(
             f"settings {path}:\n  run.warehouse and run.work are both {warehouse}; readers must not see work"
@@ -328,8 +339,27 @@ def _lower(message: str) -> str:
 
 
 def _show(value: object) -> str:
-    text = json.dumps(value, default=str, ensure_ascii=False)
+    text = _masked(json.dumps(value, default=str, ensure_ascii=False))
     return text if len(text) <= 80 else text[:77] + "..."
+
+
+def _masked(text: str) -> str:
+    """Without what stands before the @ of a URL, or in its query: it may be a secret."""
+    return re.sub(r"[?#].*", "?***", re.sub(r"://[^/\"]*@", "://***@", text)) if "://" in text else text
+
+
+def _fault_of(warehouse: str) -> str:
+    """What is wrong with a warehouse's URL, without quoting what may be a secret; empty: nothing, or a folder."""
+    scheme, mark, rest = warehouse.partition("://")
+    if not mark:
+        return ""
+    if scheme not in ("s3", "abfs", "az"):
+        return f"{scheme}:// is not known; use a folder, s3://, abfs:// or az://"
+    if "@" in rest or "?" in rest or "#" in rest:
+        return "a URL must not hold a name, password, key or query; credentials come from the environment of the driver"
+    if not rest.strip("/"):
+        return f"{scheme}:// names no bucket; write {scheme}://BUCKET/PREFIX"
+    return ""
 
 
 def to_toml(settings: Settings) -> str:

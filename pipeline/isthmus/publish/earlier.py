@@ -1,10 +1,11 @@
-"""What earlier nights of a series tell a new one."""
+"""What the warehouse tells of earlier runs: to the gates, to people, and to a run that replaces one."""
 
 from __future__ import annotations
 
 import json
 from collections.abc import Iterator
 from contextlib import suppress
+from dataclasses import replace
 from datetime import date, timedelta
 from typing import Any
 
@@ -12,28 +13,34 @@ import polars as pl
 
 from isthmus.gates import FIRST_PARTIES, WEEKS, Reference
 from isthmus.publish.night import Night
+from isthmus.store import Place
 
-__all__ = ["complete", "published", "record_of", "reference", "volume_of"]
+__all__ = ["complete", "nights_of", "published", "record_of", "reference", "replaced", "volume_of"]
 
-
-def published(night: Night) -> list[Night]:
-    """All nights of the same series that are published whole, oldest first."""
-    found = []
-    for folder in (night.warehouse / "runs" / f"series={night.series}").glob("as_of=*"):
-        with suppress(ValueError):
-            other = Night(night.warehouse, night.series, date.fromisoformat(folder.name.removeprefix("as_of=")))
-            if other.manifest.exists():
-                found.append(other)
-    return sorted(found, key=lambda other: other.as_of)
+# Runs that a night remembers to have replaced; and what it remembers of each.
+MOST_REPLACED = 20
+REMEMBERED = (
+    *("run_id", "definition", "version", "revision", "finished_at", "method", "half_width_widest"),
+    *("rows_read", "rows_used", "rows_refused", "parties"),
+)
 
 
 def record_of(night: Night) -> dict[str, Any]:
-    """What run.json tells of a night; empty when it is not published or cannot be read."""
-    with suppress(OSError, ValueError):
-        told = json.loads(night.manifest.read_text(encoding="utf-8"))
+    """What run.json tells of a night; empty when there is none or it is not readable: then the night is not complete.
+
+    Raises StoreError.
+    """
+    with suppress(ValueError):
+        told = json.loads(night.fetch("runs", "run.json") or b"null")
         if isinstance(told, dict):
             return told
     return {}
+
+
+def published(warehouse: Place, series: str) -> list[Night]:
+    """All nights of a series that have a run.json, oldest first. Raises StoreError."""
+    nights = (Night(warehouse, series, day) for day in _days(warehouse, series, "runs"))
+    return [night for night in nights if "run.json" in warehouse.below(f"runs/{night.name}")]
 
 
 def complete(night: Night, definition: str) -> bool:
@@ -42,14 +49,13 @@ def complete(night: Night, definition: str) -> bool:
 
 
 def reference(night: Night) -> Reference | None:
-    """The last night before this one, for the gates."""
-    for other in reversed([each for each in published(night) if each.as_of < night.as_of]):
-        told = record_of(other)
-        with suppress(OSError, pl.exceptions.PolarsError):
-            first = pl.scan_parquet(other.table("scores")).filter(pl.col("rank") <= FIRST_PARTIES).select("party")
-            return Reference(
-                other.as_of, told.get("schema", {}), told.get("component_share"), frozenset(first.collect()["party"])
-            )
+    """The last published night before this one, for the gates."""
+    for day in reversed(_days(night.warehouse, night.series, "runs")):
+        other = replace(night, as_of=day)
+        if day < night.as_of and (told := record_of(other)):
+            first = pl.read_parquet(other.fetch("scores") or b"", columns=["party", "rank"])
+            keys = first.filter(pl.col("rank") <= FIRST_PARTIES)["party"]
+            return Reference(day, told.get("schema", {}), told.get("component_share"), frozenset(keys))
     return None
 
 
@@ -61,6 +67,44 @@ def volume_of(night: Night) -> dict[date, int]:
 def _volumes(night: Night) -> Iterator[tuple[date, int]]:
     for week in range(1, WEEKS + 1):
         day = night.as_of - timedelta(weeks=week)
-        rows = record_of(Night(night.warehouse, night.series, day)).get("volume", {}).get(str(day))
+        rows = record_of(replace(night, as_of=day)).get("volume", {}).get(str(day))
         if rows is not None:
             yield day, int(rows)
+
+
+def replaced(night: Night) -> list[dict[str, Any]]:
+    """The runs that publishing this night now would replace, newest first, at most the last 20."""
+    before = record_of(night)
+    if not before:
+        return []
+    told = {name: before[name] for name in REMEMBERED if name in before}
+    return [told, *before.get("replaces", [])][:MOST_REPLACED]
+
+
+def nights_of(warehouse: Place, series: str, last: int) -> list[dict[str, Any]]:
+    """The `last` days up to the newest night of the series, oldest first, none before its first night.
+
+    Each is {as_of, state} and, of a published night, `run`: its run.json. The state is published, incomplete (some of
+    its files are there, and no readable run.json) or missing. Raises StoreError.
+    """
+    tables = [table for table in warehouse.below("") if not table.startswith(".")]
+    found = {day for table in tables for day in _days(warehouse, series, table)}
+    if not found:
+        return []
+    newest = max(found)
+    days = [newest - timedelta(days=back) for back in range(min(last, (newest - min(found)).days + 1))]
+    nights: list[dict[str, Any]] = []
+    for day in reversed(days):
+        run = record_of(Night(warehouse, series, day)) if day in found else {}
+        state = "published" if run else "incomplete" if day in found else "missing"
+        nights.append({"as_of": day, "state": state} | ({"run": run} if run else {}))
+    return nights
+
+
+def _days(warehouse: Place, series: str, table: str) -> list[date]:
+    """Days that have a folder in a table."""
+    days = []
+    for name in warehouse.below(f"{table}/series={series}"):
+        with suppress(ValueError):
+            days.append(date.fromisoformat(name.removeprefix("as_of=")))
+    return sorted(days)

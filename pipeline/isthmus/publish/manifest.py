@@ -16,7 +16,7 @@ import numpy as np
 from isthmus.betweenness import Estimate, Plan
 from isthmus.graph import Graph
 from isthmus.ingest import Reading, Survey
-from isthmus.publish.history import replaced
+from isthmus.publish.earlier import replaced
 from isthmus.publish.night import Night
 from isthmus.settings import Settings
 from isthmus.tables import LAYOUT

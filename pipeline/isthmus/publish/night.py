@@ -1,8 +1,9 @@
-"""One night's tables and manifest, written beside their places and renamed, `run.json` last."""
+"""One night's tables and manifest, made whole and then put where readers look, `run.json` last."""
 
 from __future__ import annotations
 
 import json
+from contextlib import nullcontext
 from dataclasses import dataclass
 from datetime import date
 from pathlib import Path
@@ -11,7 +12,7 @@ from typing import Any
 import polars as pl
 
 from isthmus.betweenness import Estimate
-from isthmus.store import Batch
+from isthmus.store import Files, Guard, Place, place
 from isthmus.tables import REFUSED, RUNS, SCORES, TIES, Table, conform
 
 __all__ = ["Night", "publish"]
@@ -19,21 +20,34 @@ __all__ = ["Night", "publish"]
 
 @dataclass(frozen=True)
 class Night:
-    """Where a night's files are: one folder per table, named so that any engine reads series and as_of from it."""
+    """Where a night's files are: one folder per table, named so that any engine reads series and as_of from it.
 
-    warehouse: Path
+    `str(warehouse)` is the folder or URL, as settings have it.
+    """
+
+    warehouse: Place
     series: str
     as_of: date
 
-    def file(self, table: str, name: str) -> Path:
-        return self.warehouse / table / f"series={self.series}" / f"as_of={self.as_of}" / name
-
-    def table(self, table: str) -> Path:
-        return self.file(table, f"{table}.parquet")
+    @classmethod
+    def of(cls, warehouse: str | Path, series: str, as_of: date) -> Night:
+        """The night in the warehouse that a setting names. Raises SettingsError when its driver is missing."""
+        return cls(place(warehouse), series, as_of)
 
     @property
-    def manifest(self) -> Path:
-        return self.file("runs", "run.json")
+    def name(self) -> str:
+        return f"series={self.series}/as_of={self.as_of}"
+
+    def path(self, table: str, name: str = "") -> str:
+        """Below the warehouse. `name`: of the file, when it is not the table itself."""
+        return f"{table}/{self.name}/{name or f'{table}.parquet'}"
+
+    def fetch(self, table: str, name: str = "") -> bytes | None:
+        """The bytes of a published file, None where there is none. Raises StoreError."""
+        return self.warehouse.fetch(self.path(table, name))
+
+    def table(self, table: str) -> str:
+        return f"{self.warehouse}/{self.path(table)}"
 
 
 def publish(
@@ -46,11 +60,13 @@ def publish(
     refused: pl.DataFrame,
     top: int,
     more: dict[str, Any],
+    guard: Guard = nullcontext,
 ) -> pl.DataFrame:
     """Publish a night and return its scores.
 
-    `run` holds the columns of the table `runs`; `more` is what run.json tells beyond them. Raises StoreError; until
-    the last rename the night has no run.json, so a reader can tell an incomplete night.
+    `run` holds the columns of the table `runs`; `more` is what run.json tells beyond them; `guard` is the lease's.
+    Raises StoreError, and TryAgain when the lease was lost. A night's first publication has no run.json until all
+    else is there; how a later one switches is told in store/folder.py and store/bucket.py.
     """
     marked = pl.lit(run["run_id"]).alias("run_id")
     scores = conform(
@@ -64,9 +80,9 @@ def publish(
         (RUNS, conform(pl.DataFrame([run], schema=RUNS.schema), RUNS)),
     ]
     manifest = json.dumps(run | more, indent=2, default=str, ensure_ascii=False) + "\n"
-    with Batch() as batch:
-        for table, frame in frames:
-            batch.add(night.table(table.name), lambda path, frame=frame: frame.write_parquet(path))  # type: ignore[misc]
-        batch.add(night.manifest, lambda path: path.write_text(manifest, encoding="utf-8"))
-        batch.commit()
+    files: Files = [
+        *((night.path(table.name), frame.write_parquet) for table, frame in frames),
+        (night.path("runs", "run.json"), lambda path: path.write_text(manifest, encoding="utf-8")),
+    ]
+    night.warehouse.publish(night.name, files, guard)
     return scores

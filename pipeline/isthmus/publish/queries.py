@@ -9,7 +9,7 @@ __all__ = ["top_brokers"]
 
 def top_brokers(night: Night, first: int = 10) -> str:
     """The night's first parties by betweenness, with their intervals."""
-    files = str(night.warehouse / "scores" / "*" / "*" / "scores.parquet").replace("'", "''")
+    files = f"{night.warehouse}/scores/*/*/scores.parquet".replace("'", "''")
     return f"""\
 SELECT rank, party, betweenness, lower, upper, rank_best, rank_worst, degree
 FROM read_parquet('{files}', hive_partitioning = true)

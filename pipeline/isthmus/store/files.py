@@ -1,4 +1,4 @@
-"""The one place that knows how files are put where readers look for them.
+"""Files in a local or shared folder that appear whole.
 
 A file is written beside its final place under a hidden name and then renamed over it, so that a reader sees the old
 file or the new one, never half of one. What a killed run leaves behind has hidden names only, and `sweep` removes it.
@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import json
 import os
+import re
 import shutil
 import uuid
 from collections.abc import Callable, Iterator
@@ -17,10 +18,22 @@ from pathlib import Path
 
 from isthmus.errors import SettingsError, StoreError
 
-__all__ = ["Batch", "claim", "examine", "fresh", "story", "sweep"]
+__all__ = [
+    "LAYOUT_FILE",
+    "Batch",
+    "beside",
+    "claim",
+    "examine",
+    "flush",
+    "forget",
+    "fresh",
+    "layout_in",
+    "story",
+    "sweep",
+]
 
+LAYOUT_FILE = "layout.json"
 _MARK = ".unfinished-"
-_LAYOUT = "layout.json"
 
 
 @contextmanager
@@ -28,12 +41,22 @@ def story(doing: str) -> Iterator[None]:
     """Turn an operating system's refusal into a StoreError that says what was being done."""
     try:
         yield
-    except OSError as error:
-        where = f" {error.filename}" if error.filename else ""
+    except Exception as error:
+        if not (refusal := _refusal(error)):
+            raise
+        where = f" {refusal.filename}" if refusal.filename else ""
         raise StoreError(
-            f"cannot {doing}{where}: {error.strerror or error}; check that the folder exists, that this user may "
+            f"cannot {doing}{where}: {refusal.strerror or refusal}; check that the folder exists, that this user may "
             "write there, and that the disk has room"
         ) from error
+
+
+def _refusal(error: Exception) -> OSError | None:
+    """The operating system's refusal; Polars wraps it in errors of its own, which end in its number."""
+    if isinstance(error, OSError):
+        return error
+    number = re.search(r"\(os error (\d+)\)$", str(error))
+    return OSError(int(number[1]), os.strerror(int(number[1]))) if number else None
 
 
 class Batch:
@@ -51,24 +74,24 @@ class Batch:
 
     def __exit__(self, *_: object) -> None:
         for hidden, _path in self._pairs:
-            _forget(hidden)
+            forget(hidden)
         self._pairs.clear()
 
     def add(self, path: Path, write: Callable[[Path], object]) -> None:
         """Have `write` fill a hidden file beside `path`. Raises StoreError."""
-        hidden = _beside(path)
+        hidden = beside(path)
         with story("write"):
             path.parent.mkdir(parents=True, exist_ok=True)
             self._pairs.append((hidden, path))
             write(hidden)
-            _flush(hidden)
+            flush(hidden)
 
     def commit(self) -> None:
         """Rename everything into place. Until the last rename the night counts as incomplete.
 
         What stood there before is kept until then, and put back when a rename fails. Raises StoreError.
         """
-        before = {path: _beside(path) for _, path in self._pairs}
+        before = {path: beside(path) for _, path in self._pairs}
         with story("publish"):
             try:
                 for path, kept in before.items():
@@ -77,10 +100,10 @@ class Batch:
                 self._rename(before)
             finally:
                 for kept in before.values():
-                    _forget(kept)
+                    forget(kept)
             self._pairs.clear()
             for folder in {path.parent for path in before}:
-                _flush(folder)
+                flush(folder)
 
     def _rename(self, before: dict[Path, Path]) -> None:
         try:
@@ -95,11 +118,13 @@ class Batch:
             raise
 
 
-def _beside(path: Path) -> Path:
+def beside(path: Path) -> Path:
+    """A hidden name in the same folder, which `sweep` removes."""
     return path.with_name(f"{_MARK}{uuid.uuid4().hex[:12]}-{path.name}")
 
 
-def _flush(path: Path) -> None:
+def flush(path: Path) -> None:
+    """Have the disk hold the file, or the names in the folder."""
     descriptor = os.open(path, os.O_RDONLY)
     try:
         os.fsync(descriptor)
@@ -122,7 +147,8 @@ def _put_back(path: Path, kept: Path) -> None:
         path.unlink(missing_ok=True)
 
 
-def _forget(path: Path) -> None:
+def forget(path: Path) -> None:
+    """Remove a file if that is possible."""
     with suppress(OSError):
         path.unlink()
 
@@ -133,7 +159,7 @@ def examine(folder: Path, layout: int, key: str) -> int:
     `key` is the setting that names the folder. Raises SettingsError when a newer isthmus wrote it, StoreError when it
     cannot be written.
     """
-    marker = folder / _LAYOUT
+    marker = folder / LAYOUT_FILE
     with story(f"use {key}"):
         there = next(path for path in (folder, *folder.parents) if path.exists())
         if not there.is_dir():
@@ -141,11 +167,17 @@ def examine(folder: Path, layout: int, key: str) -> int:
         if not os.access(there, os.W_OK | os.X_OK):
             raise PermissionError(EACCES, "this user may not write there", str(there))
         text = marker.read_text(encoding="utf-8", errors="replace") if marker.exists() else ""
+    return layout_in(text, str(folder), layout, key)
+
+
+def layout_in(text: str, folder: str, layout: int, key: str) -> int:
+    """The layout that a marker's text tells (empty text: 0). Raises what `examine` raises."""
     if not text:
         return 0
     try:
         found = int(json.loads(text)["layout"])
     except (ValueError, KeyError, TypeError):
+        marker = f"{folder}/{LAYOUT_FILE}"
         raise StoreError(f"{marker} is not readable as JSON with a number `layout`; restore or remove it") from None
     if found > layout:
         raise SettingsError(
@@ -158,11 +190,11 @@ def examine(folder: Path, layout: int, key: str) -> int:
 def claim(folder: Path, layout: int, key: str) -> None:
     """Make the folder ours to write, or raise what `examine` raises."""
     if examine(folder, layout, key) == layout:
-        for leftover in folder.glob(f"{_MARK}*-{_LAYOUT}"):
-            _forget(leftover)
+        for leftover in folder.glob(f"{_MARK}*-{LAYOUT_FILE}"):
+            forget(leftover)
         return
     with Batch() as batch:
-        batch.add(folder / _LAYOUT, lambda path: path.write_text(json.dumps({"layout": layout}) + "\n"))
+        batch.add(folder / LAYOUT_FILE, lambda path: path.write_text(json.dumps({"layout": layout}) + "\n"))
         batch.commit()
 
 

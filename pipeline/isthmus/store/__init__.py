@@ -1,0 +1,22 @@
+"""The one room that knows how files are put where readers look for them: folders, object stores, leases."""
+
+from isthmus.store.files import Batch, claim, examine, fresh, story, sweep
+from isthmus.store.folder import Folder
+from isthmus.store.leases import Lease, lease
+from isthmus.store.places import Files, Guard, Place, place
+
+__all__ = [
+    "Batch",
+    "Files",
+    "Folder",
+    "Guard",
+    "Lease",
+    "Place",
+    "claim",
+    "examine",
+    "fresh",
+    "lease",
+    "place",
+    "story",
+    "sweep",
+]

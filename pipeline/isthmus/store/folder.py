@@ -1,0 +1,279 @@
+"""A warehouse in a local or shared folder: all files of a night switch at one instant.
+
+    WAREHOUSE/.nights/series=s/as_of=D/000007-5f0c2a9b1e34/scores.parquet.data   a generation, written and flushed whole
+    WAREHOUSE/.nights/series=s/as_of=D/current -> 000007-5f0c2a9b1e34            what readers see
+    WAREHOUSE/scores/series=s/as_of=D/scores.parquet -> ../../../.nights/series=s/as_of=D/current/scores.parquet.data
+
+Replacing a night is one rename of the link `current`. Public files are links, not folders, because readers that search
+folders do not all follow linked ones; files of a generation have names of their own, because readers that search for
+`**/scores.parquet` from the top look into hidden folders too. The generation before the current one stays until the
+next publication, for readers that have resolved its path. At every instant the public paths name one whole night; a
+query that opens two tables, one before the switch and one after it, sees rows of two runs, which `run_id` tells apart,
+and a reader that opens one file twice may see that it is another. Who needs all from one run resolves `current` once
+and reads there.
+
+Guaranteed where links, renames and `flock` work: local disks, and NFS from version 4 on.
+"""
+
+from __future__ import annotations
+
+import fcntl
+import os
+import shutil
+import time
+import uuid
+from collections.abc import Iterator
+from contextlib import contextmanager, suppress
+from errno import EACCES, EAGAIN, ENOSYS, EOPNOTSUPP, EPERM
+from pathlib import Path
+
+from isthmus.errors import StoreError, TryAgain
+from isthmus.store import files as _files
+from isthmus.store.files import beside, flush, forget, story
+from isthmus.store.places import Files
+from isthmus.store.register import Guard, Moved, Seen
+
+__all__ = ["Folder"]
+
+_NIGHTS, _LEASES, _CURRENT = ".nights", ".leases", "current"
+_PATIENCE = 10.0  # seconds to wait for a lock that is normally held for milliseconds
+
+
+class Folder:
+    def __init__(self, path: Path) -> None:
+        self.path = path
+
+    def __str__(self) -> str:
+        return str(self.path)
+
+    def examine(self, layout: int, key: str) -> int:
+        return _files.examine(self.path, layout, key)
+
+    def claim(self, layout: int, key: str) -> None:
+        _files.claim(self.path, layout, key)
+        probe = beside(self.path / "link")
+        with story("use"):
+            try:
+                os.symlink(_CURRENT, probe)
+            except OSError as error:
+                if error.errno not in (EPERM, ENOSYS, EOPNOTSUPP):
+                    raise
+                raise StoreError(
+                    f"{key}: the file system of {self.path} has no symbolic links, which a night needs to appear at "
+                    f"one instant ({error.strerror}); name a folder on another"
+                ) from None
+            finally:
+                forget(probe)
+
+    def fetch(self, path: str) -> bytes | None:
+        with story("read"):
+            try:
+                return (self.path / path).read_bytes()
+            except (FileNotFoundError, NotADirectoryError):
+                return None
+
+    def below(self, path: str) -> list[str]:
+        with story("list"):
+            try:
+                return sorted(os.listdir(self.path / path))
+            except (FileNotFoundError, NotADirectoryError):
+                return []
+
+    def register(self, name: str) -> LockedFile:
+        return LockedFile(self.path / _LEASES / f"{name}.json")
+
+    def sweep(self, series: str) -> None:
+        _files.sweep(self.path, f"*/series={series}/*")
+        _files.sweep(self.path, f"{_NIGHTS}/series={series}/*")
+        with story("sweep"):
+            for home in (self.path / _NIGHTS / f"series={series}").glob("*"):
+                _sweep_generations(home)
+
+    def publish(self, night: str, files: Files, guard: Guard) -> None:
+        home = self.path / _NIGHTS / night
+        public = [self.path / path for path, _ in files]
+        mine = _new_generation(home)
+        links: dict[Path, Path] = {}
+        try:
+            with story("write"):
+                for path, write in files:
+                    target = _kept(mine, Path(path))
+                    write(target)
+                    flush(target)
+                for folder in (mine, home):
+                    flush(folder)
+                _make_links(home, public, links)
+            with story("publish"), guard():
+                _put_current_back(home)
+                _adopt(home, public, links)
+                _switch(home, mine, public, links)
+                with suppress(OSError):  # the night is published; what cannot be removed goes with the next sweep
+                    _sweep_generations(home)
+        except BaseException:
+            if _current(home) != mine.name:
+                shutil.rmtree(mine, ignore_errors=True)
+            raise
+        finally:
+            for hidden in links.values():
+                forget(hidden)
+
+
+def _current(home: Path) -> str:
+    """The name of the generation that readers see; empty: none."""
+    try:
+        return os.readlink(home / _CURRENT)
+    except OSError:
+        return ""
+
+
+def _kept(generation: Path, public: Path) -> Path:
+    return generation / f"{public.name}.data"
+
+
+def _number(generation: str) -> int:
+    head = generation.partition("-")[0]
+    return int(head) if head.isdigit() else 0
+
+
+def _new_generation(home: Path) -> Path:
+    with story("write"):
+        home.mkdir(parents=True, exist_ok=True)
+        number = 1 + max((_number(path.name) for path in home.iterdir()), default=0)
+        folder = home / f"{number:06d}-{uuid.uuid4().hex[:12]}"
+        folder.mkdir()
+    return folder
+
+
+def _point(home: Path, generation: str) -> None:
+    hidden = beside(home / _CURRENT)
+    try:
+        os.symlink(generation, hidden)
+        os.replace(hidden, home / _CURRENT)
+    finally:
+        forget(hidden)
+
+
+def _make_links(home: Path, public: list[Path], links: dict[Path, Path]) -> None:
+    """Fill `links` (public path -> hidden link beside it) for the paths that are not yet links to the current night."""
+    for path in public:
+        path.parent.mkdir(parents=True, exist_ok=True)
+        # '..' follows the folder as it really lies, which may be a link to elsewhere
+        target = os.path.relpath(_kept(home.resolve() / _CURRENT, path), path.parent.resolve())
+        if not path.is_symlink() or os.readlink(path) != target:
+            links[path] = beside(path)
+            os.symlink(target, links[path])
+
+
+def _put_current_back(home: Path) -> None:
+    """A copy of a warehouse that followed links has a folder `current`, and plain public files, which are adopted."""
+    current = home / _CURRENT
+    if current.is_dir() and not current.is_symlink():
+        os.rename(current, home / f"000000-{uuid.uuid4().hex[:12]}")
+
+
+def _adopt(home: Path, public: list[Path], links: dict[Path, Path]) -> None:
+    """Make a generation of a night that still has plain files, so that it too is replaced at one instant."""
+    if not any(path in links and path.exists() for path in public):
+        return
+    kept = _new_generation(home)
+    there = [path for path in public if path.exists()]
+    for path in there:
+        try:
+            os.link(path.resolve(), _kept(kept, path))
+        except OSError:  # not every file system has hard links
+            shutil.copy2(path, _kept(kept, path))
+            flush(_kept(kept, path))
+    flush(kept)
+    _point(home, kept.name)
+    for path in there:
+        if path in links:
+            os.replace(links[path], path)
+            del links[path]
+
+
+def _switch(home: Path, mine: Path, public: list[Path], links: dict[Path, Path]) -> None:
+    """The switch, then the links of a first publication; undone when one of them fails."""
+    before, made = _current(home), []
+    try:
+        _point(home, mine.name)
+        for path, hidden in links.items():
+            made.append(path)
+            os.replace(hidden, path)
+        for folder in {home, *(path.parent for path in public)}:
+            flush(folder)
+    except BaseException:
+        for path in made:
+            forget(path)
+        with suppress(OSError):
+            if before:
+                _point(home, before)
+            else:
+                (home / _CURRENT).unlink()
+        raise
+
+
+def _sweep_generations(home: Path) -> None:
+    """Keep the current generation and the one before it."""
+    current = _current(home)
+    if not current and (home / _CURRENT).exists():
+        return  # a copied warehouse, see _put_current_back
+    older = [path.name for path in home.iterdir() if path.is_dir() and _number(path.name) < _number(current)]
+    keep = {_CURRENT, current, max(older, key=_number, default="")}
+    for path in home.iterdir():
+        if path.name not in keep:
+            shutil.rmtree(path, ignore_errors=True)
+
+
+class LockedFile:
+    """A register in a folder: compare and swap under a lock of the file system, which dies with its process."""
+
+    def __init__(self, path: Path) -> None:
+        self._path, self._lock = path, path.with_suffix(".lock")
+
+    def read(self) -> Seen:
+        with story("read the lease"):
+            try:
+                return Seen(self._path.read_bytes(), None)
+            except FileNotFoundError:
+                return Seen(None, None)
+
+    def swap(self, seen: Seen, text: bytes) -> Seen:
+        with self.hold():
+            if self.read() != seen:
+                raise Moved
+            with story("write the lease"):
+                hidden = self._path.with_suffix(".unfinished")  # nobody else writes while the lock is held
+                hidden.write_bytes(text)
+                os.replace(hidden, self._path)
+        return Seen(text, None)
+
+    def age(self) -> float:
+        with story("read the lease"):
+            self._lock.touch()  # the file system's own now, also where a server keeps it
+            return self._lock.stat().st_mtime - self._path.stat().st_mtime
+
+    @contextmanager
+    def hold(self) -> Iterator[None]:
+        with story("lock the lease"):
+            self._lock.parent.mkdir(parents=True, exist_ok=True)
+            descriptor = os.open(self._lock, os.O_RDWR | os.O_CREAT, 0o666)
+        try:
+            self._wait(descriptor)
+            yield
+        finally:
+            os.close(descriptor)
+
+    def _wait(self, descriptor: int) -> None:
+        until = time.monotonic() + _PATIENCE
+        while True:
+            try:
+                fcntl.flock(descriptor, fcntl.LOCK_EX | fcntl.LOCK_NB)
+                return
+            except OSError as error:
+                if error.errno not in (EACCES, EAGAIN):
+                    raise StoreError(
+                        f"cannot lock {self._lock}: {error.strerror}; name a folder on a file system with locks"
+                    ) from None
+            if time.monotonic() > until:
+                raise TryAgain(f"{self._lock} is locked by a run that does not move; run the same command later")
+            time.sleep(0.01)

@@ -1,0 +1,59 @@
+"""Where nights are published: a folder or a bucket, told apart by the setting's text."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from pathlib import Path
+from typing import Protocol
+
+from isthmus.store.register import Guard, Register
+
+__all__ = ["Files", "Guard", "Place", "place"]
+
+# Path below the place -> the function that writes it, in the order in which they are to appear.
+Files = Sequence[tuple[str, Callable[[Path], object]]]
+
+
+class Place(Protocol):
+    """`str` of a place is what a person would type."""
+
+    def examine(self, layout: int, key: str) -> int:
+        """The layout that the place has (0: none yet); changes nothing.
+
+        `key` is the setting that names the place. Raises SettingsError when a newer isthmus wrote it, StoreError.
+        """
+
+    def claim(self, layout: int, key: str) -> None:
+        """Make the place ours to write, or raise what `examine` raises."""
+
+    def fetch(self, path: str) -> bytes | None:
+        """The bytes of a file below the place, None where there is none. Raises StoreError."""
+
+    def below(self, path: str) -> list[str]:
+        """The names directly below a path, sorted; none where there is no such path. Raises StoreError."""
+
+    def register(self, name: str) -> Register:
+        """The register of a lease."""
+
+    def sweep(self, series: str) -> None:
+        """Remove what killed runs of this series left. To be called under the lease's guard. Raises StoreError."""
+
+    def publish(self, night: str, files: Files, guard: Guard) -> None:
+        """Replace the files of a night, such as `series=s/as_of=2026-11-30`.
+
+        Raises StoreError with what was there before still in place, and what `guard` raises.
+        """
+
+
+def place(text: str | Path, scratch: Path | None = None) -> Place:
+    """The place that a setting names. `scratch`: a local folder in which files for an object store are made.
+
+    Raises SettingsError when the driver of an object store is not installed.
+    """
+    if "://" in str(text):
+        from isthmus.store.bucket import Bucket
+
+        return Bucket(str(text), scratch)
+    from isthmus.store.folder import Folder
+
+    return Folder(Path(text))
