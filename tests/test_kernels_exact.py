@@ -21,6 +21,7 @@ from isthmus.betweenness.engine_numba import exact, kernels_weighted, pivots, re
 from isthmus.betweenness.engine_numba.accelerate import COMPILED, count_bits, kernel, lowest_bit
 from isthmus.betweenness.engine_numba.kernels_moments import MOMENTS, note
 from isthmus.betweenness.engine_numba.sequences import GRID, PivotEvidence
+from isthmus.errors import SettingsError
 from isthmus.graph import Arrays
 from kernel_graphs import Case, arrays, cases, chain_of_gates, scattered
 
@@ -337,3 +338,27 @@ def test_the_two_oracles_agree(case: Case) -> None:
     for hops in (0, 2):
         listed = np.array(oracles.dependencies(n, arcs, directed, max_hops=hops), float)
         np.testing.assert_allclose(oracles.brandes(n, arcs, directed, hops), listed, atol=1e-12)
+
+
+@pytest.mark.parametrize("lengths", [False, True])
+@pytest.mark.parametrize("directed", [True, False])
+def test_more_paths_than_a_float_can_count_are_refused(directed: bool, lengths: bool) -> None:
+    """Not miscounted without a word: wide layers, one after another, each tied to all of the next."""
+    wide, layers = 40, 200
+    arcs = [
+        (layer * wide + a, (layer + 1) * wide + b)
+        for layer in range(layers - 1)
+        for a in range(wide)
+        for b in range(wide)
+    ]
+    graph = arrays(layers * wide, arcs, directed, [1] * len(arcs) if lengths else None)
+    sources = pivots.prepare_sources(graph, 1, lanes=8, structure=False)
+    first = int(np.flatnonzero(sources.reduced.member[np.argsort(sources.reduced.holder)] == 0)[0])
+    # overflow is the point; numpy tells of it where the compiler is off
+    told = r"too many to count; use score.method = \"paths\""
+    with np.errstate(over="ignore", invalid="ignore"), pytest.raises(SettingsError, match=told):
+        exact.sweep(
+            sources.reduced.arrays, np.array([first], np.int32), np.ones(1), np.zeros(graph.n), np.zeros(0),
+            np.zeros(0), np.zeros((0, MOMENTS)), exact.GO_ON, copies=np.ones(graph.n), targets=np.ones(graph.n),
+            lanes=8, max_hops=0,
+        )  # fmt: skip

@@ -125,7 +125,7 @@ class TestMemory:
         assert (tight.threads, tight.lanes) == (1, 32)
         estimate = measure(graph, tight, score)
         np.testing.assert_allclose(estimate.pairs, measure(graph, make_plan(graph, score, 2, two), score).pairs, 1e-10)
-        with pytest.raises(SettingsError, match=r"exact needs .* GiB .* more than run.memory") as error:
+        with pytest.raises(SettingsError, match=r"exact needs 0\.\d MiB .* more than run.memory = 0\.\d MiB") as error:
             make_plan(graph, score, 2, one - 56 * 9 * N - 1)
         assert error.value.exit_code == 78
 
@@ -159,3 +159,37 @@ def test_more_draws_than_sources_are_never_planned(build: Any) -> None:
         estimate = betweenness(graph, method="pivots", half_width=half_width, top=0)
         assert estimate.samples <= graph.n
         assert estimate.half_widths.max() <= half_width
+
+
+@pytest.mark.parametrize("directed", [True, False])
+@pytest.mark.parametrize("shape", ["star", "path", "pairs"])
+def test_what_structure_settles_whole(build: Any, monkeypatch: pytest.MonkeyPatch, shape: str, directed: bool) -> None:
+    """No source is left to probe or to sweep, however large the graph."""
+    monkeypatch.setattr(costs, "TINY", 0)
+    n = 400
+    arcs = {
+        "star": [(0, leaf) for leaf in range(1, n)],
+        "path": [(at, at + 1) for at in range(n - 1)],
+        "pairs": [(at, at + 1) for at in range(0, n, 2)],
+    }[shape]
+    graph = build(n, arcs, directed)
+    score = Score()
+    plan = make_plan(graph, score, 2, MEMORY)
+    assert (plan.method, plan.predicted_seconds) == ("exact", 0.0)
+    expected = np.zeros(n)
+    if shape == "star" and not directed:
+        expected[0] = (n - 1) * (n - 2) / 2
+    if shape == "path":
+        expected = np.arange(n) * np.arange(n)[::-1].astype(float)
+    for method in ("exact", "pivots", "paths"):
+        asked = Score(method=method, samples=0 if method == "exact" else n, top=0)
+        found = measure(graph, make_plan(graph, asked, 2, MEMORY), asked)
+        if method != "paths" or not directed:
+            np.testing.assert_allclose(found.pairs, expected, rtol=1e-9)
+
+
+def test_everybody_among_the_first_is_no_reason_to_stop_early(build: Any) -> None:
+    graph = build(60, scattered(60, 200, 1), True)
+    for method, samples in (("paths", 20_000), ("pivots", 60)):
+        score = Score(method=method, samples=samples)
+        assert measure(graph, make_plan(graph, score, 1, MEMORY), score).samples == samples

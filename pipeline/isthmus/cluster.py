@@ -7,6 +7,8 @@ functions run behind all three doors. Results come back in the order of the task
 from __future__ import annotations
 
 import os
+import signal
+import threading
 from collections import deque
 from collections.abc import Callable, Iterable, Iterator, Sequence
 from concurrent.futures import Future, ThreadPoolExecutor, wait
@@ -145,6 +147,19 @@ class _Elsewhere:
             ) from None
 
 
+@contextmanager
+def _ours_alone(number: int) -> Iterator[None]:
+    """Processes started meanwhile do not hear the signal: Ctrl-C goes to all, but is ours to answer."""
+    if threading.current_thread() is not threading.main_thread():
+        yield
+        return
+    before = signal.signal(number, signal.SIG_IGN)
+    try:
+        yield
+    finally:
+        signal.signal(number, before)
+
+
 def _expect_answer(scheduler: str) -> None:
     """Ask the scheduler who it is: Dask's client would wait for ever for one that is up but stopped."""
     import asyncio
@@ -197,8 +212,8 @@ def open_door(
         limit = memory // workers
         # A worker runs `each` tasks at once, so no library inside a task may take more than one thread by itself.
         env = dict.fromkeys(("OMP_NUM_THREADS", "POLARS_MAX_THREADS", "NUMBA_NUM_THREADS"), "1")
-        with (
-            LocalCluster(
+        with _ours_alone(signal.SIGINT):
+            local = LocalCluster(
                 n_workers=workers,
                 threads_per_worker=each,
                 memory_limit=limit or None,
@@ -209,9 +224,8 @@ def open_door(
                 scheduler_kwargs={"dashboard": False},
                 local_directory=scratch or None,
                 silence_logs=50,
-            ) as local,
-            Client(local, set_as_default=False) as client,
-        ):
+            )
+        with local, Client(local, set_as_default=False) as client:
             yield _Elsewhere(client, limit)
     else:
         yield Here(threads)

@@ -116,7 +116,7 @@ class Gates(Section):
 
 
 class Run(Section):
-    """Where and with what the night runs. Nothing here changes a result, as long as its method fits the memory."""
+    """Where and with what the night runs. Nothing here changes a result, as long as the memory is not short."""
 
     warehouse: str = _key(
         "warehouse",
@@ -144,7 +144,7 @@ class Run(Section):
     )
     memory: str = _key(
         "16GiB",
-        "planned against before the work starts: a number and KiB, MiB, GiB or TiB",
+        "planned against before the work starts, beside the program's own 0.4 GiB: a number and KiB, MiB, GiB or TiB",
         pattern=r"^[1-9][0-9]*(\.[0-9]+)? ?[KMGT]i?B$",
     )
 

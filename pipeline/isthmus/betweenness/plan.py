@@ -16,7 +16,7 @@ from isthmus.errors import SettingsError
 from isthmus.graph import Graph
 from isthmus.settings import Score
 
-__all__ = ["Plan", "Planner", "make_plan", "spell_seconds"]
+__all__ = ["Plan", "Planner", "make_plan", "spell_bytes", "spell_seconds"]
 
 
 @dataclass(frozen=True)
@@ -86,6 +86,11 @@ def make_plan(graph: Graph, score: Score, threads: int, memory_bytes: int) -> Pl
     best = min(offers, key=lambda o: (max(o.half_width, score.half_width), o.predicted_seconds))
     others = "".join(f"; {o.method} would reach about ±{o.half_width:.2g}" for o in offers if o is not best)
     return replace(best, reason=f"{why}; {best.reason}{others}")
+
+
+def spell_bytes(count: float) -> str:
+    """Bytes in the unit that a person would use."""
+    return f"{count / 2**30:.1f} GiB" if count >= 2**30 else f"{count / 2**20:.1f} MiB"
 
 
 def spell_seconds(seconds: float) -> str:

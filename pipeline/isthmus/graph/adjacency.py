@@ -5,15 +5,16 @@ from __future__ import annotations
 import json
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any, Literal
+from typing import Any, get_args
 
 import numpy as np
 import polars as pl
 from numpy.typing import NDArray
 from scipy import sparse
 
-from isthmus.errors import DataRefused, StoreError
+from isthmus.errors import DataRefused, SettingsError, StoreError
 from isthmus.graph.arrays import Arrays, Ids, Ints
+from isthmus.settings import Distance
 
 __all__ = ["LENGTH_OF_WEAKEST", "Graph", "ids_of"]
 
@@ -44,15 +45,17 @@ class Graph(Arrays):
         ties: pl.DataFrame,
         *,
         directed: bool = True,
-        distance: Literal["hops", "contacts", "amount"] = "hops",
+        distance: Distance = "hops",
     ) -> Graph:
         """Build from a frame with columns `sender` and `receiver` and, where `distance` asks, that strength.
 
-        Repeated ties add their strengths up; self-contacts are left out. With a weighted distance, a tie of
-        strength 0 is infinitely long, so it is left out as well, but its parties stay.
+        Repeated ties add their strengths up. Self-contacts are left out, and with a weighted distance ties whose
+        strength is 0 or no number, for they are infinitely long; the parties stay in either case.
 
-        Raises DataRefused when a column is missing or a key is null.
+        Raises SettingsError for another distance, DataRefused when a column is missing or a key is null.
         """
+        if distance not in (choices := get_args(Distance)):
+            raise SettingsError(f"distance = {distance!r} is not known; it is one of {', '.join(choices)}")
         needed = {"sender", "receiver"} | ({distance} - {"hops"})
         if missing := sorted(needed - set(ties.columns)):
             raise DataRefused(f"ties lack the column {', '.join(missing)}; they have {', '.join(ties.columns)}")
@@ -150,5 +153,7 @@ def _lookup(keys: pl.Series, parties: pl.Series) -> pl.Series:
 def _rows(matrix: sparse.csr_array, weighted: bool, weakest: float) -> tuple[Ints, Ids, Ints | None]:
     lengths = None
     if weighted:
-        lengths = np.maximum(np.rint(LENGTH_OF_WEAKEST * (weakest / matrix.data)), 1).astype(np.int64)
+        # above six million parties a little shorter, so that the longest route still fits 62 bits
+        longest = LENGTH_OF_WEAKEST >> max(0, (LENGTH_OF_WEAKEST * matrix.shape[0]).bit_length() - 62)
+        lengths = np.maximum(np.rint(longest * (weakest / matrix.data)), 1).astype(np.int64)
     return matrix.indptr.astype(np.int64), matrix.indices.astype(np.int32), lengths

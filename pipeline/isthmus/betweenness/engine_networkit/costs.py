@@ -7,7 +7,7 @@ from functools import cached_property
 
 from isthmus.betweenness.engine_networkit import library as engine
 from isthmus.betweenness.engine_networkit.bounds import Bound, certain_zeros, paths_bound, pivots_bound
-from isthmus.betweenness.plan import Plan, spell_seconds
+from isthmus.betweenness.plan import Plan, spell_bytes, spell_seconds
 from isthmus.errors import SettingsError
 from isthmus.graph import Graph
 from isthmus.settings import Score
@@ -164,8 +164,8 @@ class _Planner:
         room = (self.memory - base) // each if each else threads
         if room < 1:
             raise SettingsError(
-                f"{method} needs {(base + each) / 2**30:.1f} GiB for {graph.n:,} parties and {graph.ties:,} ties, more "
-                f"than run.memory = {self.memory / 2**30:.1f} GiB; raise run.memory or shorten window.days"
+                f"{method} needs {spell_bytes(base + each)} for {graph.n:,} parties and {graph.ties:,} ties, more "
+                f"than run.memory = {spell_bytes(self.memory)}; raise run.memory or shorten window.days"
             )
         threads = int(min(threads, room))
         return base + threads * each, threads

@@ -13,7 +13,7 @@ from scipy.special import ndtri
 
 from isthmus.betweenness.engine_numba import blocks, exact, paths, pivots
 from isthmus.betweenness.engine_numba.reductions import Reduced
-from isthmus.betweenness.plan import Plan, spell_seconds
+from isthmus.betweenness.plan import Plan, spell_bytes, spell_seconds
 from isthmus.cluster import Here
 from isthmus.errors import SettingsError
 from isthmus.graph import Graph
@@ -72,9 +72,11 @@ class _Planner:
             # from the middle of equal stretches: sources at one end of the numbering reach more than at the other
             stretches = min(work.blocks, 4 * threads)
             tasks = [(job, (2 * at + 1) * work.blocks // (2 * stretches)) for at in range(stretches)]
-            each, _ = _probe(blocks.exact_block, tasks[:1], 1, job)
-            seconds = work.blocks * each / threads
-            if seconds < HOPELESS * self.budget:
+            seconds = 0.0  # and so it stays where structure settles everything
+            if tasks:
+                each, _ = _probe(blocks.exact_block, tasks[:1], 1, job)
+                seconds = work.blocks * each / threads
+            if tasks and seconds < HOPELESS * self.budget:
                 each, _ = _probe(blocks.exact_block, tasks, threads, job)
                 seconds = work.blocks * each
         said = f"exact takes about {spell_seconds(seconds)} on {threads} thread{'s' if threads > 1 else ''}{left}"
@@ -191,10 +193,9 @@ class _Planner:
             threads = min(self.threads, (self.memory - base) // one)
             if threads >= 1:
                 return lanes, int(threads), int(base + threads * one)
-        least = (base + each(choices[-1])) / 2**30
         raise SettingsError(
-            f"{method} needs {least:.2f} GiB for {graph.n:,} parties and {graph.ties:,} ties, more than run.memory = "
-            f"{self.memory / 2**30:.2f} GiB; raise run.memory or shorten window.days"
+            f"{method} needs {spell_bytes(base + each(choices[-1]))} for {graph.n:,} parties and {graph.ties:,} ties, "
+            f"more than run.memory = {spell_bytes(self.memory)}; raise run.memory or shorten window.days"
         )
 
     def _job(self, lanes: int) -> blocks.Job:

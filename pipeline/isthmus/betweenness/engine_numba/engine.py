@@ -94,7 +94,7 @@ def _pivots(job: blocks.Job, plan: Plan, score: Score, door: Door, progress: Pro
     sources = blocks.load_pivots(job)
     n = sources.draws.size
     most = min(score.samples or n, n)
-    rules = _rules(plan, score, most)
+    rules = _rules(plan, score, most, n)
     alone = bool(score.samples) and not (score.half_width or score.top)
     evidence = PivotEvidence(n, sources.scale, 1 - score.confidence, horizon=most if alone else 0)
     if going.kept is not None:
@@ -116,7 +116,7 @@ def _pivots(job: blocks.Job, plan: Plan, score: Score, door: Door, progress: Pro
 
 def _paths(job: blocks.Job, plan: Plan, score: Score, door: Door, progress: Progress, going: _Going) -> Verdict:
     prepared = blocks.load_paths(job)
-    rules = _rules(plan, score, score.samples)
+    rules = _rules(plan, score, score.samples, prepared.n)
     tally: paths.Tally = going.kept or paths.Tally.empty(prepared.n)
     evidence = paths.PathEvidence(prepared, tally, 1 - score.confidence)
     tasks = ((job, *block) for block in paths.plan_blocks(plan.lanes, score.samples, tally.taken))
@@ -130,8 +130,10 @@ def _paths(job: blocks.Job, plan: Plan, score: Score, door: Door, progress: Prog
     return watch(evidence, _each(partials, add), looks, rules, _share(progress, plan.samples), spent=going.spent)
 
 
-def _rules(plan: Plan, score: Score, samples: int) -> Rules:
-    return Rules(samples, score.half_width, score.top, score.minutes, repeat=plan.reached)
+def _rules(plan: Plan, score: Score, samples: int, parties: int) -> Rules:
+    # where everybody is among the first, that is no reason to stop before what else was asked for
+    top = 0 if score.top >= parties and (score.samples or score.half_width) else score.top
+    return Rules(samples, score.half_width, top, score.minutes, repeat=plan.reached)
 
 
 def _each(partials: Iterator[Partial], add: Callable[[Partial], None]) -> Iterator[None]:

@@ -11,6 +11,7 @@ import numpy as np
 from isthmus.betweenness.engine_numba.kernels_moments import MOMENTS
 from isthmus.betweenness.engine_numba.reductions import Reduced
 from isthmus.betweenness.engine_numba.subgraphs import Bytes, Floats
+from isthmus.errors import SettingsError
 from isthmus.graph.arrays import Arrays, Ids
 
 # Work of a block, in arcs and vertices touched per batch of lanes: about an eighth of a second where neighbours are
@@ -96,7 +97,26 @@ def sweep(
     graph: Arrays, sources: Ids, weights: Floats, score: Floats, reached: Floats, unit: Floats, moments: Floats,
     stop: Bytes, *, copies: Floats, targets: Floats, lanes: int, max_hops: int,
 ) -> Floats:  # fmt: skip
-    """The kernel that fits the graph, imported on first use; arguments as in kernels_lanes.lanes_sweep."""
+    """The kernel that fits the graph, imported on first use; arguments as in kernels_lanes.lanes_sweep.
+
+    Raises SettingsError when more shortest paths run to a vertex than float64 can count.
+    """
+    reach = _sweep(
+        graph, sources, weights, score, reached, unit, moments, stop,
+        copies=copies, targets=targets, lanes=lanes, max_hops=max_hops,
+    )  # fmt: skip
+    if np.isnan(reach).any():
+        raise SettingsError(
+            'more than 10^300 shortest paths run between two parties, too many to count; use score.method = "paths" or '
+            'score.engine = "networkit"'
+        )
+    return reach
+
+
+def _sweep(
+    graph: Arrays, sources: Ids, weights: Floats, score: Floats, reached: Floats, unit: Floats, moments: Floats,
+    stop: Bytes, *, copies: Floats, targets: Floats, lanes: int, max_hops: int,
+) -> Floats:  # fmt: skip
     if graph.out_lengths is not None:
         from isthmus.betweenness.engine_numba.kernels_weighted import weighted_sweep
 

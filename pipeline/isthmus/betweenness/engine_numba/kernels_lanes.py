@@ -24,6 +24,8 @@ Axes: v = vertices, l = lanes.
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 
 from isthmus.betweenness.engine_numba.accelerate import count_bits, kernel, lowest_bit
@@ -31,6 +33,7 @@ from isthmus.betweenness.engine_numba.kernels_moments import note
 
 _ONE = np.uint64(1)
 _NONE = np.uint64(0)
+_MOST = 1e300  # paths to one vertex: beyond, float64 is near its end, and a result would be wrong without a word
 _SPARSE = 6  # up to this many lanes, going lane by lane is cheaper than a full row
 
 
@@ -112,6 +115,18 @@ def _keep_backward(rows, v, acc, spare, weight, copies, target, mask, lanes):
 
 
 @kernel
+def _too_many(rows, record_v, record_mask, end):
+    """Whether a path count is past _MOST; they grow from level to level, so none is missed."""
+    for i in range(end):
+        v, mask = record_v[i], record_mask[i]
+        while mask != _NONE:
+            if not rows[v, lowest_bit(mask)] <= _MOST:
+                return True
+            mask &= mask - _ONE
+    return False
+
+
+@kernel
 def lanes_sweep(
     out_ptr,
     out_adj,
@@ -142,7 +157,8 @@ def lanes_sweep(
         the source's weight says; or float64[0], float64[0, MOMENTS]: not wanted
     stop: uint8[1], not 0: the result is not wanted any more, whatever it is
 
-    Returns float64[k]: sum of T over the vertices each source reaches, itself left out.
+    Returns float64[k]: sum of T over the vertices each source reaches, itself left out; all NaN when more shortest
+    paths than float64 can count lead to a vertex.
     """
     n = out_ptr.size - 1
     rows = np.empty((n, lanes))  # left as it comes: pages that no source reaches are then never touched
@@ -158,6 +174,7 @@ def lanes_sweep(
     spare = np.empty((3, lanes))
     reach = np.zeros(sources.size)
     longest = n if max_hops == 0 else max_hops
+    all_copies = copies.sum()
 
     for first in range(0, sources.size, lanes):
         used = min(lanes, sources.size - first)
@@ -216,6 +233,10 @@ def lanes_sweep(
                 level_start[depth + 1] = end
         for i in range(begin, end):
             now[record_v[i]] = _NONE
+        # With `all` vertices on so many levels there are at most (all / depth) ** depth paths.
+        if depth * math.log(all_copies / max(depth, 1)) > 690.0 and _too_many(rows, record_v, record_mask, end):
+            reach[:] = math.nan
+            return reach
 
         # Backward. The rows of the deeper level, whose lanes `now` holds, are g already.
         for level in range(depth, -1, -1):

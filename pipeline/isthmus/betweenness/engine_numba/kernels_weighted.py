@@ -11,6 +11,8 @@ differ so much that the ring would outgrow the graph, a heap does the same work.
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 
 from isthmus.betweenness.engine_numba.accelerate import kernel, lowest_bit
@@ -20,6 +22,7 @@ _FAR = np.int64(2**62)
 _ONE = np.uint64(1)
 _NONE = np.uint64(0)
 MOST_BUCKETS = 2**22
+_MOST = 1e300  # paths to one vertex, see kernels_lanes
 
 
 @kernel
@@ -204,6 +207,9 @@ def weighted_sweep(
             settled = _forward_heap(s, out_ptr, out_adj, out_lengths, distance, sigma, before, order, keys, items)
         for i in range(settled - 1, 0, -1):
             w = order[i]
+            if not sigma[w] <= _MOST:
+                reach[:] = math.nan
+                return reach
             delta = sigma[w] * acc[w]
             score[w] += weight * delta
             if moments.size:
