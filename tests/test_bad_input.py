@@ -551,7 +551,7 @@ def test_a_full_disk(site: Site, monkeypatch: pytest.MonkeyPatch) -> None:
 KILLED = """
 import os, signal, sys
 from pathlib import Path
-from isthmus import cli, nightly
+from isthmus import cli, nightly, watch
 from isthmus.store import folder
 from isthmus.ingest import window
 
@@ -568,13 +568,25 @@ if what == "read":
     window.read_part = die
 elif what == "score":
     nightly.measure = die
+elif what == "stage":
+    begin = watch.Watch.stage
+    watch.Watch.stage = lambda self, stage: die() if stage == name else begin(self, stage)
 elif what == "flush":
     folder.flush = die_before(name, folder.flush)
 elif what == "rename":
     os.replace = die_before(name, os.replace)
 cli.main(arguments)
 """
-INSTANTS = ["read", "score", "flush run.json.data", "rename current", "rename refused.parquet", "rename run.json"]
+STAGES = ["survey", "read", "combine", "graph", "plan", "score", "publish"]
+INSTANTS = [
+    *(f"stage {stage}" for stage in STAGES),
+    "read",
+    "score",
+    "flush run.json.data",
+    "rename current",
+    "rename refused.parquet",
+    "rename run.json",
+]
 
 
 def kill(site: Site, instant: str) -> None:

@@ -29,7 +29,7 @@ TINY = 20_000_000
 NOMINAL_ARCS_PER_SECOND = {False: 1e8, True: 5e6}
 # So many times over the time allowed, one block is enough to know.
 HOPELESS = 4
-# The probe of paths grows until it takes so long.
+# Probes grow until they take about so long.
 PROBE_SECONDS = 0.3
 # Half-widths come out at this many z * standard error (benchmarks/README.md): pivots pay for unknown variances.
 PIVOTS_OVER_LIMIT = 1.5
@@ -69,14 +69,15 @@ class _Planner:
             job = self._job(lanes)
             reduced, work = blocks.load_exact(job)
             left = _what_is_left(reduced, self.graph)
-            # from the middle of equal stretches: sources at one end of the numbering reach more than at the other
-            stretches = min(work.blocks, 4 * threads)
-            tasks = [(job, (2 * at + 1) * work.blocks // (2 * stretches)) for at in range(stretches)]
             seconds = 0.0  # and so it stays where structure settles everything
-            if tasks:
-                each, _ = _probe(blocks.exact_block, tasks[:1], 1, job)
+            if work.blocks:
+                each, _ = _probe(blocks.exact_block, [(job, work.blocks // 2)], 1, job)
                 seconds = work.blocks * each / threads
-            if tasks and seconds < HOPELESS * self.budget:
+            if work.blocks and seconds < HOPELESS * self.budget:
+                # from the middle of equal stretches: sources at one end of the numbering reach more than at the other;
+                # many of them where blocks are short, or starting the threads would count for more than the blocks
+                stretches = min(work.blocks, max(4 * threads, int(PROBE_SECONDS / each)))
+                tasks = [(job, (2 * at + 1) * work.blocks // (2 * stretches)) for at in range(stretches)]
                 each, _ = _probe(blocks.exact_block, tasks, threads, job)
                 seconds = work.blocks * each
         said = f"exact takes about {spell_seconds(seconds)} on {threads} thread{'s' if threads > 1 else ''}{left}"
