@@ -303,14 +303,22 @@ def test_frozen_at_the_switch_it_keeps_the_lock(tmp_path: Path, monkeypatch: pyt
     assert {(tmp_path / name).read_text() for name in FILES} == {"first"}
 
 
+# frozen while no heartbeat holds the lock: that case is the test before
 FROZEN_NIGHT = """
-import os, signal, sys
+import os, signal, sys, threading
+from contextlib import contextmanager
 from isthmus import cli, nightly
-from isthmus.store import leases
+from isthmus.store import folder, leases
 leases.BEAT = 0.05
-measure = nightly.measure
+locked, hold, measure = threading.RLock(), folder.LockedFile.hold, nightly.measure
+@contextmanager
+def held(self):
+    with locked, hold(self):
+        yield
+folder.LockedFile.hold = held
 def freeze(*arguments, **more):
-    os.kill(os.getpid(), signal.SIGSTOP)
+    with locked:
+        os.kill(os.getpid(), signal.SIGSTOP)
     return measure(*arguments, **more)
 nightly.measure = freeze
 cli.main(sys.argv[1:])
