@@ -194,8 +194,25 @@ def test_who_lost_it_is_stopped_at_work(site_of_leases: Place) -> None:
 
 # --- processes that die and freeze ---------------------------------------------------------------------------------
 
-HOLDER = """
-import os, signal, sys, time
+# `freeze` stops the process while none of its heartbeats holds the lock; what follows otherwise is a test of its own
+FREEZE = """
+import os, signal, sys, threading, time
+from contextlib import contextmanager
+from isthmus.store import folder
+locked, hold = threading.RLock(), folder.LockedFile.hold
+
+@contextmanager
+def held(self):
+    with locked, hold(self):
+        yield
+
+def freeze():
+    with locked:
+        os.kill(os.getpid(), signal.SIGSTOP)
+
+folder.LockedFile.hold = held
+"""
+HOLDER = f"""{FREEZE}
 from isthmus import store
 from isthmus.errors import IsthmusError
 place, how = store.Folder(__import__("pathlib").Path(sys.argv[1])), sys.argv[2]
@@ -203,7 +220,7 @@ place, how = store.Folder(__import__("pathlib").Path(sys.argv[1])), sys.argv[2]
 def write(path):
     path.write_text("first")
     if how == "writing":
-        os.kill(os.getpid(), signal.SIGSTOP)
+        freeze()
 try:
     with store.lease(place, "series=s", beat=0.05) as held:
         print("held", flush=True)
@@ -211,7 +228,7 @@ try:
             with held.guard():
                 os.kill(os.getpid(), signal.SIGSTOP)
         elif how == "working":
-            os.kill(os.getpid(), signal.SIGSTOP)
+            freeze()
         elif how == "dies":
             time.sleep(60)
         place.publish("series=s/as_of=2026-03-04", [(name, write) for name in sys.argv[3:]], held.guard)
@@ -303,24 +320,12 @@ def test_frozen_at_the_switch_it_keeps_the_lock(tmp_path: Path, monkeypatch: pyt
     assert {(tmp_path / name).read_text() for name in FILES} == {"first"}
 
 
-# frozen while no heartbeat holds the lock: that case is the test before
-FROZEN_NIGHT = """
-import os, signal, sys, threading
-from contextlib import contextmanager
+FROZEN_NIGHT = f"""{FREEZE}
 from isthmus import cli, nightly
-from isthmus.store import folder, leases
+from isthmus.store import leases
 leases.BEAT = 0.05
-locked, hold, measure = threading.RLock(), folder.LockedFile.hold, nightly.measure
-@contextmanager
-def held(self):
-    with locked, hold(self):
-        yield
-folder.LockedFile.hold = held
-def freeze(*arguments, **more):
-    with locked:
-        os.kill(os.getpid(), signal.SIGSTOP)
-    return measure(*arguments, **more)
-nightly.measure = freeze
+measure = nightly.measure
+nightly.measure = lambda *arguments, **more: freeze() or measure(*arguments, **more)
 cli.main(sys.argv[1:])
 """
 
