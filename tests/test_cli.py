@@ -353,7 +353,7 @@ def test_a_disk_that_fails_outside_the_store_is_told_too(site: Site, monkeypatch
     before = site.published()
     said = site.score()
     assert said.code == 74
-    assert "No space left on device: '/mnt/days/ties.arrow'; check" in said.err
+    assert "cannot keep results below /mnt/days/ties.arrow: No space left on device; check" in said.err
     assert site.published() == before
 
 

@@ -27,7 +27,16 @@ def judged(
     """gate -> (figure, state), the warnings, and what stops the night."""
     found: dict[str, tuple[Any, ...]] = {}
     warned: list[str] = []
-    told = {"rows": 1000, "refused": {}, "missing_days": (), "volume": {}, "last_day": DAY, "drift": {}, "before": None}
+    told = {
+        "rows": 1000,
+        "refused": {},
+        "missing_days": (),
+        "volume": {},
+        "volume_before": {},
+        "last_day": DAY,
+        "drift": {},
+        "before": None,
+    }
     scored = {"component_share": 0.8, "first_parties": frozenset("abcd"), "before": facts.get("before")}
     keeper = Gatekeeper(
         gates or Gates(),
@@ -77,7 +86,8 @@ def test_keys_that_are_null(share: int) -> None:
 
 
 @pytest.mark.parametrize(
-    ("last", "state"), [(100, "ok"), (81, "ok"), (79, "warn"), (126, "warn"), (201, "stop"), (49, "stop"), (0, "stop")]
+    ("last", "state"),
+    [(100, "ok"), (81, "ok"), (79, "warn"), (126, "warn"), (200, "stop"), (125, "warn"), (50, "stop"), (0, "stop")],
 )
 def test_volume_against_the_same_weekdays(last: int, state: str) -> None:
     volume = {DAY - timedelta(weeks=week): rows for week, rows in enumerate([last, 90, 100, 100, 110, 5000])}
@@ -88,6 +98,14 @@ def test_volume_against_the_same_weekdays(last: int, state: str) -> None:
     if state == "stop":
         assert f"volume: {DAY} has {last} rows" in stopped
         assert "of 4 same weekdays" in stopped
+
+
+@pytest.mark.parametrize(("now", "state"), [(60, "ok"), (50, "stop"), (199, "ok"), (200, "stop"), (0, "stop")])
+def test_a_day_that_was_counted_before(now: int, state: str) -> None:
+    other = DAY - timedelta(days=3)
+    found, _, stopped = judged(volume={DAY: 5, other: now}, volume_before={other: 100, DAY - timedelta(days=9): 1})
+    assert found["redelivery"][1] == state
+    assert (f"{other} has {now} rows, and had 100 when it was counted before" in stopped) == (state == "stop")
 
 
 def test_one_weekday_before_says_nothing() -> None:
@@ -153,6 +171,7 @@ def test_every_gate_can_be_off_or_accepted(gate: str) -> None:
         "refused": {"sender is null": 500},
         "missing_days": (DAY,),
         "volume": {DAY - timedelta(weeks=week): 100 * bool(week) for week in range(5)},
+        "volume_before": {DAY - timedelta(weeks=1): 1000},
         "drift": {"x": ("is gone", False)},
         "before": BEFORE,
         "component_share": 0.1,

@@ -206,6 +206,42 @@ def test_freeze(two_nights: Site) -> None:
     assert record(site, BEFORE)["revision"] == 1
 
 
+def test_a_day_cut_short_afterwards_restates_nothing(two_nights: Site) -> None:
+    """Neither tonight, which holds the day as well, nor the night before."""
+    site = two_nights
+    assert night(site, AS_OF).code == 0
+    before = [tables(site, as_of) for as_of in (BEFORE, AS_OF)]
+    site.write(rows(DAYS[2], PAIRS[:2]), DAYS[2])
+    said = night(site, AS_OF)
+    assert said.code == 65
+    assert f"redelivery: {DAYS[2]} has 2 rows, and had 8 when it was counted before" in said.err
+    said = night(site, AS_OF, "--accept", "redelivery")
+    assert said.code == 65
+    assert f"night of {BEFORE}: a gate stops the night" in said.err
+    assert tables(site, BEFORE) == before[0]
+    assert tables(site, AS_OF) != before[1]
+    # once somebody has looked at that night too, late rows may restate it again
+    assert night(site, BEFORE, "--accept", "redelivery").code == 0
+    site.write(rows(DAYS[2], PAIRS[:3]), DAYS[2])
+    said = night(site, AS_OF)
+    assert said.code == 0
+    assert f"{BEFORE}  restated, revision 4" in said.err
+
+
+def test_a_log_that_is_kept_for_a_shorter_time_restates_nothing(two_nights: Site) -> None:
+    site = two_nights
+    assert night(site, AS_OF).code == 0
+    before = tables(site, BEFORE)
+    shutil.rmtree(site.file(DAYS[0]).parent)
+    shutil.rmtree(site.file(DAYS[1]).parent)
+    day = AS_OF + timedelta(days=1)
+    site.write(rows(day), day)
+    said = night(site, day)
+    assert said.code == 0
+    assert "restated" not in said.err
+    assert tables(site, BEFORE) == before
+
+
 def test_a_late_file_with_a_new_name_is_noticed(two_nights: Site) -> None:
     site = two_nights
     assert night(site, AS_OF).code == 0
@@ -396,3 +432,31 @@ def test_a_truncated_checkpoint_counts_as_none(tmp_path: Path) -> None:
     for damaged in (raw[:-1], raw[:20], b"", raw[:-1] + b"\0", b"\0" + raw[1:]):
         path.write_bytes(damaged)
         assert Checkpoint(path, "a night").load() is None
+
+
+def test_sigterm_is_no_fault_that_anything_deals_with(site: Site) -> None:
+    """Where faults are passed over, as by signals, a request to stop must not be."""
+    program = (
+        "import os, signal, sys\nfrom isthmus import cli\nfrom isthmus.signals import lines\n"
+        "class Signal:\n"
+        "    def hear(self, event, run, figures):\n"
+        "        if event == 'stage_started':\n            os.kill(os.getpid(), signal.SIGTERM)\n"
+        "lines.signal = lambda settings: Signal()\ncli.main(sys.argv[1:])"
+    )
+    site.config.write_text(site.config.read_text() + '\n[signals]\nlog = "nights.jsonl"\n')
+    command = [sys.executable, "-c", program, "score", str(site.config), "--as-of", str(AS_OF)]
+    ran = subprocess.run(command, capture_output=True, text=True)
+    assert ran.returncode == 75
+    assert "asked to stop by SIGTERM" in ran.stderr
+    assert not list(site.warehouse.rglob("run.json"))
+
+
+def test_a_night_before_whose_scores_are_damaged_stops_nothing(site: Site) -> None:
+    assert night(site, AS_OF).code == 0
+    day = AS_OF + timedelta(days=1)
+    site.write(rows(day), day)
+    (site.warehouse / f"scores/series=s/as_of={AS_OF}/scores.parquet").write_bytes(b"no Parquet")
+    assert night(site, day).code == 0
+    states = {gate["gate"]: gate["state"] for gate in record(site, day)["gates"]}
+    assert states["overlap"] == "nothing to compare with"
+    assert states["component"] == "ok"

@@ -18,7 +18,7 @@ from nights import AS_OF, DAYS, PAIRS, Site, rows
 
 SAME = ("scores", "ties", "refused")
 # columns of `runs` that tell of the run and not of the night
-OF_THE_RUN = {"seconds", "stages", "predictions", "replaces", "peak_memory_bytes", "started_at", "finished_at"}
+OF_THE_RUN = {"gates", "seconds", "stages", "predictions", "replaces", "peak_memory_bytes", "started_at", "finished_at"}
 
 
 def tables(files: dict[str, bytes]) -> dict[str, bytes]:

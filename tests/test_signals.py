@@ -78,7 +78,7 @@ def test_a_published_night_in_lines(site: Site) -> None:
     assert site.score().code == 0
     told = lines(site)
     assert [line["event"] for line in told if not line["event"].startswith("stage")] == [
-        *("run_started", *["gate"] * 7, "published")
+        *("run_started", *["gate"] * 8, "published")
     ]
     for event in ("stage_started", "stage_ended"):
         assert [line["stage"] for line in told if line["event"] == event] == STAGES
@@ -478,7 +478,7 @@ def test_run_json_explains_the_night(site: Site) -> None:
         {"gate": "nulls", "figure": 0.0, "limit": 1.0, "state": "ok"},
     ]
     unknown = {gate["gate"] for gate in told["gates"] if gate["state"] == "nothing to compare with"}
-    assert unknown == {"volume", "schema_drift", "component", "overlap"}
+    assert unknown == {"volume", "redelivery", "schema_drift", "component", "overlap"}
     assert set(told["versions"]) == {"isthmus", "python", "numpy", "polars", "pyarrow", "dask", "networkit"}
     assert told["versions"]["polars"] == pl.__version__
     assert [stage["stage"] for stage in told["stages"]] == STAGES[:-1]

@@ -18,10 +18,10 @@ from isthmus.console import Console
 from isthmus.errors import (
     INTERNAL,
     INTERRUPTED,
+    AskedToStop,
     GateStopped,
     IsthmusError,
     StoreError,
-    TryAgain,
     exit_code_of,
     places_of,
 )
@@ -180,6 +180,7 @@ def backfill(
 def _raise_first(results: list[Result]) -> None:
     for result in results:
         if result.error:
+            result.error.args = (f"night of {result.as_of}: {result.error}",)
             raise result.error
 
 
@@ -307,10 +308,7 @@ def main(arguments: list[str] | None = None) -> None:
 
 
 def _asked_to_stop(*_: object) -> None:
-    raise TryAgain(
-        "asked to stop by SIGTERM; nothing is half-published, what was read and measured is kept: the same command "
-        "goes on from there"
-    )
+    raise AskedToStop
 
 
 def _exit_code(arguments: list[str] | None) -> int:
@@ -326,6 +324,9 @@ def _exit_code(arguments: list[str] | None) -> int:
     except IsthmusError as error:
         say(f"isthmus: {error}")
         return error.exit_code
+    except AskedToStop as stop:
+        say(f"isthmus: {stop}")
+        return exit_code_of(stop)
     except (KeyboardInterrupt, typer.Abort):
         say("isthmus: interrupted; the night is published whole or not at all, run the same command again")
         return INTERRUPTED

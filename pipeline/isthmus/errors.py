@@ -20,6 +20,7 @@ from pathlib import Path
 __all__ = [
     "INTERNAL",
     "INTERRUPTED",
+    "AskedToStop",
     "DataRefused",
     "GateStopped",
     "IsthmusError",
@@ -70,10 +71,22 @@ class TryAgain(IsthmusError):
     exit_code = 75
 
 
+class AskedToStop(BaseException):
+    """SIGTERM. Like KeyboardInterrupt no Exception, so that nothing that deals with faults takes it for one."""
+
+    def __init__(self) -> None:
+        super().__init__(
+            "asked to stop by SIGTERM; nothing is half-published, what was read and measured is kept: the same command "
+            "goes on from there"
+        )
+
+
 def exit_code_of(error: BaseException) -> int:
     """The exit code that this error ends a command with."""
     if isinstance(error, IsthmusError):
         return error.exit_code
+    if isinstance(error, AskedToStop):
+        return TryAgain.exit_code
     if isinstance(error, KeyboardInterrupt):
         return INTERRUPTED
     return StoreError.exit_code if isinstance(error, OSError) else INTERNAL

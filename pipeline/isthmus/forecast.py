@@ -14,7 +14,7 @@ from isthmus.errors import DataRefused, GateStopped
 from isthmus.gates import Gatekeeper
 from isthmus.graph import Graph
 from isthmus.ingest import Sample, Survey, drift, in_window, sample_ties, survey
-from isthmus.publish import Night, reference
+from isthmus.publish import Night, counted_before, reference, volume_of
 from isthmus.settings import Settings
 from isthmus.tables import LAYOUT
 
@@ -80,7 +80,8 @@ def _gates(
 ) -> tuple[tuple[str, ...], str]:
     """What the gates say of the rows looked at. Days can only be missed, and counted, where all rows were."""
     whole = sample.rows >= found.rows
-    before = reference(Night.of(settings.run.warehouse, settings.series, last_day))
+    night = Night.of(settings.run.warehouse, settings.series, last_day)
+    before = reference(night)
     used = [theirs for theirs in settings.log.columns.model_dump().values() if theirs]
     days = [first_day + timedelta(days=at) for at in range((last_day - first_day).days + 1)]
     warnings: list[str] = []
@@ -89,7 +90,8 @@ def _gates(
             rows=in_window(sample.outcomes),
             refused=sample.outcomes["refused"],
             missing_days=tuple(day for day in days if day not in sample.days) if whole else (),
-            volume=sample.volume if whole else {},
+            volume=volume_of(night) | sample.volume if whole else {},
+            volume_before=(before.volume if before else {}) | counted_before(night) if whole else {},
             last_day=last_day,
             drift=drift(before.columns, found.schema, used) if before and before.columns else {},
             before=before,

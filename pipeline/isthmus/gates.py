@@ -7,7 +7,7 @@ the same, and the record says so. The defaults are this project's own, not a sta
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from datetime import date, timedelta
 from statistics import median
 from typing import Literal
@@ -18,7 +18,7 @@ from isthmus.settings import Gate, Gates
 __all__ = ["FIRST_PARTIES", "GATES", "WEEKS", "Gatekeeper", "Reference"]
 
 State = Literal["ok", "warn", "stop", "accepted", "off", "nothing to compare with"]
-GATES = ("missing_days", "refused", "nulls", "volume", "schema_drift", "component", "overlap")
+GATES = ("missing_days", "refused", "nulls", "volume", "redelivery", "schema_drift", "component", "overlap")
 FIRST_PARTIES = 100
 WEEKS = 4  # same weekdays that a day's volume is held against
 FEWEST = 2  # fewer say nothing
@@ -33,6 +33,7 @@ class Reference:
     columns: Mapping[str, str]
     component_share: float | None
     first_parties: frozenset[str]
+    volume: dict[date, int] = field(default_factory=dict)
 
 
 @dataclass
@@ -55,12 +56,14 @@ class Gatekeeper:
         refused: Mapping[str, int],
         missing_days: tuple[date, ...],
         volume: Mapping[date, int],
+        volume_before: Mapping[date, int],
         last_day: date,
         drift: Mapping[str, tuple[str, bool]],
         before: Reference | None,
     ) -> None:
         """rows: of the window, whatever became of them; refused: reason -> rows; volume: day -> rows, of this window
-        and of earlier nights'; drift: the log's column -> (what changed, whether that is harmless).
+        and of earlier nights'; volume_before: the same days as they were counted before; drift: the log's column ->
+        (what changed, whether that is harmless).
         """
         gates, stops = self.gates, list[str]()
         total = sum(refused.values())
@@ -85,6 +88,7 @@ class Gatekeeper:
             look="the job that writes the log: a join that finds no key gives nulls",
         )  # fmt: skip
         self._volume(stops, volume, last_day)
+        self._redelivery(stops, volume, volume_before)
         self._columns(stops, drift, before)
         self._close(stops)
 
@@ -121,15 +125,28 @@ class Gatekeeper:
         gate, away = self.gates.volume, 1.0
         if times is not None:
             away = max(times, 1 / times) if times else float("inf")
-        if gate == "stop" and away <= self.gates.volume_stop:
+        if gate == "stop" and away < self.gates.volume_stop:
             gate = "warn"
         self._judge(
             stops, "volume", gate, times, self.gates.volume_stop if gate == "stop" else self.gates.volume_warn,
-            broken=away > self.gates.volume_warn,
+            broken=away >= self.gates.volume_warn,
             text=f"{last_day} has {volume.get(last_day, 0)} rows, {0.0 if times is None else times:.2f} times the "
             f"median of {len(alike)} same weekdays before; gates.volume_warn is a factor of "
             f"{self.gates.volume_warn:g} either way, gates.volume_stop {self.gates.volume_stop:g}",
             look="whether the last day has arrived whole, or twice; a public holiday is a reason to accept",
+        )  # fmt: skip
+
+    def _redelivery(self, stops: list[str], volume: Mapping[date, int], before: Mapping[date, int]) -> None:
+        """Days that were counted before: late rows change them a little, half a file or a second copy much."""
+        known = {day: rows for day, rows in before.items() if rows and day in volume}
+        moved = {day: max(volume[day] / rows, rows / max(volume[day], 0.5)) for day, rows in known.items()}
+        worst = max(moved, key=lambda day: moved[day], default=None)
+        self._judge(
+            stops, "redelivery", self.gates.redelivery, moved.get(worst) if worst else None,
+            self.gates.redelivery_limit, broken=worst is not None and moved[worst] >= self.gates.redelivery_limit,
+            text="" if worst is None else f"{worst} has {volume[worst]} rows, and had {known[worst]} when it was "
+            f"counted before; gates.redelivery_limit is a factor of {self.gates.redelivery_limit:g} either way",
+            look="whether the day was delivered again in part, or a second time",
         )  # fmt: skip
 
     def _columns(self, stops: list[str], drift: Mapping[str, tuple[str, bool]], before: Reference | None) -> None:

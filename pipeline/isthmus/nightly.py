@@ -20,6 +20,7 @@ from isthmus.ingest import drift, read_window, survey
 from isthmus.publish import (
     Night,
     checkpoint_key,
+    counted_before,
     input_id_of,
     manifest,
     plan_once,
@@ -64,19 +65,28 @@ def run_night(
     watch: Watch,
     accept: frozenset[str] = frozenset(),
     frozen: Sequence[date] = (),
+    deadline: Deadline | None = None,
 ) -> Outcome:
     """Read, measure, publish. Raises the errors of errors.py; whatever was published before stays until the end.
 
     accept: gates whose stop is published knowingly. frozen: published nights that late rows have changed and that are
-    left as they are, for the record.
+    left as they are, for the record. deadline: one that several nights share, else the night's own.
     """
+    deadline = deadline or Deadline.of(settings, datetime.now())
     with follow(settings, *window_of(settings, as_of), watch) as tell:
-        outcome = _leased(settings, as_of, watch, accept, frozen)
+        outcome = _leased(settings, as_of, watch, accept, frozen, deadline)
         tell(outcome.manifest)
     return outcome
 
 
-def _leased(settings: Settings, as_of: date, watch: Watch, accept: frozenset[str], frozen: Sequence[date]) -> Outcome:
+def _leased(
+    settings: Settings,
+    as_of: date,
+    watch: Watch,
+    accept: frozenset[str],
+    frozen: Sequence[date],
+    deadline: Deadline,
+) -> Outcome:
     """The night, with both folders to itself: the work folder, and the series in the warehouse."""
     work, leased = Path(settings.run.work) / f"series={settings.series}", f"series={settings.series}"
     warehouse = store.place(settings.run.warehouse, scratch=work / "outgoing")
@@ -87,7 +97,7 @@ def _leased(settings: Settings, as_of: date, watch: Watch, accept: frozenset[str
             warehouse.sweep(settings.series)
         store.sweep(work)
         return _measured_and_published(
-            settings, Night(warehouse, settings.series, as_of), work, watch, accept, frozen, held
+            settings, Night(warehouse, settings.series, as_of), work, watch, accept, frozen, deadline, held
         )
 
 
@@ -98,10 +108,10 @@ def _measured_and_published(
     watch: Watch,
     accept: frozenset[str],
     frozen: Sequence[date],
+    deadline: Deadline,
     held: store.Lease,
 ) -> Outcome:
     started_at = datetime.now(UTC)
-    deadline = Deadline.of(settings, datetime.now())
     as_of = night.as_of
     first_day, last_day = window_of(settings, as_of)
     before = reference(night)
@@ -124,6 +134,7 @@ def _measured_and_published(
             refused=reading.outcomes["refused"],
             missing_days=reading.missing_days,
             volume=volume_of(night) | reading.volume,
+            volume_before=(before.volume if before else {}) | counted_before(night),
             last_day=last_day,
             drift=drift(before.columns, found.schema, used) if before and before.columns else {},
             before=before,

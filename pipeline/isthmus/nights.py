@@ -46,7 +46,7 @@ def score(
         if deadline.left <= 0:
             watch.warning(f"no time was left to restate {_days(late[at:])}; run again, or `isthmus backfill`")
             break
-        results.append(_one(settings, day, watch.anew(), accept))
+        results.append(_one(_without_metrics(settings), day, watch.anew(), _accepted(settings, day), deadline))
     return results
 
 
@@ -64,24 +64,38 @@ def backfill(
         if not again and day not in changed and complete(night, settings.definition):
             yield Result(day)
             continue
-        result = _one(settings, day, watch.anew(), accept)
+        result = _one(_without_metrics(settings), day, watch.anew(), accept)
         yield result
         if result.error:
             return
 
 
-def _one(settings: Settings, day: date, watch: Watch, accept: frozenset[str]) -> Result:
+def _one(
+    settings: Settings, day: date, watch: Watch, accept: frozenset[str], deadline: Deadline | None = None
+) -> Result:
     try:
-        return Result(day, run_night(settings, day, watch, accept))
+        return Result(day, run_night(settings, day, watch, accept, deadline=deadline))
     except IsthmusError as error:
         return Result(day, error=error)
+
+
+def _without_metrics(settings: Settings) -> Settings:
+    """The metrics are of the night that was due: one computed after it, or of long ago, must not take their place."""
+    return settings.model_copy(update={"signals": settings.signals.model_copy(update={"prometheus": ""})})
+
+
+def _accepted(settings: Settings, day: date) -> frozenset[str]:
+    """The gates that were accepted when the night was published: who looked at it then has decided."""
+    told = record_of(Night.of(settings.run.warehouse, settings.series, day))
+    return frozenset(gate["gate"] for gate in told.get("gates", []) if gate["state"] == "accepted")
 
 
 def changed_since(settings: Settings, but: date | None) -> list[date]:
     """Published nights of this definition whose files have changed since, oldest first, without `but`.
 
-    A file counts as changed when it is gone, or its size or time is another; and a file that was not there counts when
-    its name and footer say that it can hold a day of the window.
+    A file counts as changed when its size or time is another; and a file that was not there counts when its name and
+    footer say that it can hold a day of the window. A night of which a file is gone is left as it is: logs are kept for
+    a shorter time than warehouses, and what is left of the window could only make it worse.
     """
     nights = published(place(settings.run.warehouse), settings.series)
     if not nights:
@@ -98,7 +112,9 @@ def _changed(settings: Settings, night: Night, now: dict[str, tuple[int, int]]) 
     if told.get("definition") != settings.definition:
         return False
     read = {each["file"]: (each["bytes"], each.get("changed_ns")) for each in told.get("inputs", [])}
-    if any(now.get(name) != state for name, state in read.items()):
+    if any(name not in now for name in read):
+        return False
+    if any(now[name] != state for name, state in read.items()):
         return True
     window = window_of(settings, night.as_of)
     if not any(name not in read and holds(name, *window) for name in now):

@@ -184,7 +184,9 @@ def _figures(run: dict[str, Any], before: dict[str, Any]) -> list[str]:
     if not run:
         return [""] * 7
     changed = [name for name in ("definition", "version") if before and before.get(name) != run.get(name)]
-    gates = [f"{gate['gate']}: {gate['state']}" for gate in run.get("gates", []) if gate["state"] in ("warn", "stop")]
+    gates = [
+        f"{gate['gate']}: {gate['state']}" for gate in run.get("gates", []) if gate["state"] in ("warn", "accepted")
+    ]
     return [
         run.get("method", ""),
         " ".join(changed),

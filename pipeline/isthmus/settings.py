@@ -108,6 +108,8 @@ class Gates(Section):
     volume: Gate = _key("stop", "the last day's rows are far from the median of the same weekdays before")
     volume_warn: float = _key(1.25, "a warning from this factor on, either way", "times the median", gt=1)
     volume_stop: float = _key(2.0, "a stop from this factor on, either way", "times the median", gt=1)
+    redelivery: Gate = _key("stop", "a day's rows changed by `redelivery_limit` or more since it was counted before")
+    redelivery_limit: float = _key(2.0, "from this factor on, either way", "times the rows before", gt=1)
     schema_drift: Gate = _key("stop", "the log's columns changed since the night before; wider types only warn")
     component: Gate = _key("warn", "the largest component's share moved further than `component_change`")
     component_change: float = _key(0.1, "largest move since the night before", "share of parties", ge=0, le=1)

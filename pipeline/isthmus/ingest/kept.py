@@ -38,11 +38,11 @@ def keep(folder: Path, scratch: Path, fill: Callable[[Path], Facts]) -> Facts:
     When another attempt at the same result was quicker, its result stays. Raises StoreError.
     """
     making = scratch / f"{folder.name}-{os.getpid()}-{time.monotonic_ns()}"
-    with story("keep results below"):
+    with story("keep results below", making):
         making.mkdir(parents=True)
         folder.parent.mkdir(parents=True, exist_ok=True)
-    facts = fill(making)
-    with story("keep results below"):
+    with story("keep results below", making):
+        facts = fill(making)
         files = {path.name: [path.stat().st_size, _digest(path)] for path in sorted(making.iterdir())}
         (making / CONTENTS).write_text(json.dumps({"facts": facts, "files": files}))
         if recall(folder) is None:

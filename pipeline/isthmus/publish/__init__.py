@@ -1,6 +1,15 @@
 """Frames -> the warehouse folder that readers see. What is published changes only by being replaced whole."""
 
-from isthmus.publish.earlier import complete, nights_of, published, record_of, reference, replaced, volume_of
+from isthmus.publish.earlier import (
+    complete,
+    counted_before,
+    nights_of,
+    published,
+    record_of,
+    reference,
+    replaced,
+    volume_of,
+)
 from isthmus.publish.manifest import input_id_of, manifest, revision_of, run_id_of, run_row
 from isthmus.publish.night import Night, publish
 from isthmus.publish.plans import checkpoint_key, plan_once, remember
@@ -9,6 +18,7 @@ __all__ = [
     "Night",
     "checkpoint_key",
     "complete",
+    "counted_before",
     "input_id_of",
     "manifest",
     "nights_of",

@@ -15,7 +15,7 @@ from isthmus.gates import FIRST_PARTIES, WEEKS, Reference
 from isthmus.publish.night import Night
 from isthmus.store import Place
 
-__all__ = ["complete", "nights_of", "published", "record_of", "reference", "replaced", "volume_of"]
+__all__ = ["complete", "counted_before", "nights_of", "published", "record_of", "reference", "replaced", "volume_of"]
 
 # Runs that a night remembers to have replaced; and what it remembers of each.
 MOST_REPLACED = 20
@@ -53,10 +53,23 @@ def reference(night: Night) -> Reference | None:
     for day in reversed(_days(night.warehouse, night.series, "runs")):
         other = replace(night, as_of=day)
         if day < night.as_of and (told := record_of(other)):
-            first = pl.read_parquet(other.fetch("scores") or b"", columns=["party", "rank"])
-            keys = first.filter(pl.col("rank") <= FIRST_PARTIES)["party"]
-            return Reference(day, told.get("schema", {}), told.get("component_share"), frozenset(keys))
+            return Reference(
+                day, told.get("schema", {}), told.get("component_share"), _first_parties(other), counted_before(other)
+            )
     return None
+
+
+def counted_before(night: Night) -> dict[date, int]:
+    """Day -> rows, as the night was published last; empty when it is not."""
+    return {date.fromisoformat(day): int(rows) for day, rows in record_of(night).get("volume", {}).items()}
+
+
+def _first_parties(night: Night) -> frozenset[str]:
+    """Empty when the night's scores cannot be read: that is for the night's own readers to find, not for this one."""
+    with suppress(pl.exceptions.PolarsError):
+        scores = pl.read_parquet(night.fetch("scores") or b"", columns=["party", "rank"])
+        return frozenset(scores.filter(pl.col("rank") <= FIRST_PARTIES)["party"])
+    return frozenset()
 
 
 def volume_of(night: Night) -> dict[date, int]:

@@ -6,7 +6,7 @@ from dataclasses import dataclass, field
 from datetime import UTC, date, datetime
 from typing import Any, Protocol
 
-from isthmus.errors import GateStopped, IsthmusError, TryAgain, exit_code_of, places_of
+from isthmus.errors import AskedToStop, GateStopped, IsthmusError, TryAgain, exit_code_of, places_of
 from isthmus.settings import Settings
 from isthmus.watch import Watch
 
@@ -55,7 +55,7 @@ class Run:
         """Remember what ended it. `from_outside`: it was asked to stop or had to wait; its own work found no fault."""
         self.ended_at = datetime.now(UTC)
         self.exit_code = exit_code_of(error)
-        self.from_outside = isinstance(error, TryAgain | KeyboardInterrupt)
+        self.from_outside = isinstance(error, TryAgain | AskedToStop | KeyboardInterrupt)
         self.state = "stopped" if self.from_outside or isinstance(error, GateStopped) else "failed"
         self.message = _message(error)
 
@@ -68,7 +68,7 @@ class Signal(Protocol):
 
 def _message(error: BaseException) -> str:
     """What may be told to anyone. A library's message may quote the log, so only our own are passed on."""
-    if isinstance(error, IsthmusError):
+    if isinstance(error, IsthmusError | AskedToStop):
         return str(error)
     if isinstance(error, KeyboardInterrupt):
         return "interrupted from the keyboard"

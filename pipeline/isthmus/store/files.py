@@ -13,7 +13,7 @@ import shutil
 import uuid
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager, suppress
-from errno import EACCES, ENOTDIR
+from errno import EACCES, EIO, ENOTDIR
 from pathlib import Path
 
 from isthmus.errors import SettingsError, StoreError
@@ -37,24 +37,29 @@ _MARK = ".unfinished-"
 
 
 @contextmanager
-def story(doing: str) -> Iterator[None]:
-    """Turn an operating system's refusal into a StoreError that says what was being done."""
+def story(doing: str, where: object = "") -> Iterator[None]:
+    """Turn an operating system's refusal into a StoreError that says what was being done.
+
+    `where`: said when the refusal names no file.
+    """
     try:
         yield
     except Exception as error:
         if not (refusal := _refusal(error)):
             raise
-        where = f" {refusal.filename}" if refusal.filename else ""
+        place = f" {refusal.filename or where}" if refusal.filename or where else ""
         raise StoreError(
-            f"cannot {doing}{where}: {refusal.strerror or refusal}; check that the folder exists, that this user may "
+            f"cannot {doing}{place}: {refusal.strerror or refusal}; check that the folder exists, that this user may "
             "write there, and that the disk has room"
         ) from error
 
 
 def _refusal(error: Exception) -> OSError | None:
-    """The operating system's refusal; Polars wraps it in errors of its own, which end in its number."""
+    """The operating system's refusal; Polars wraps it in errors of its own, which end in its number, or hides it."""
     if isinstance(error, OSError):
         return error
+    if "transport error" in str(error):  # of a Parquet footer that found no room
+        return OSError(EIO, "not everything could be written")
     number = re.search(r"\(os error (\d+)\)$", str(error))
     return OSError(int(number[1]), os.strerror(int(number[1]))) if number else None
 

@@ -95,7 +95,7 @@ class Folder:
         mine = _new_generation(home)
         links: dict[Path, Path] = {}
         try:
-            with story("write"):
+            with story("write", self.path):
                 for path, write in files:
                     target = _kept(mine, Path(path))
                     write(target)
@@ -103,7 +103,7 @@ class Folder:
                 for folder in (mine, home):
                     flush(folder)
                 _make_links(home, public, links)
-            with story("publish"), guard():
+            with story("publish", self.path), guard():
                 _put_current_back(home)
                 _adopt(home, public, links)
                 _switch(home, mine, public, links)
