@@ -382,7 +382,7 @@ def test_every_kind_of_odd_amount_has_its_reason(site: Site) -> None:
 def test_two_parties_score_nothing_and_are_told_why(site: Site) -> None:
     for day in DAYS:
         site.write(rows(day, [("ada@k1", "ben@k2")]), day)
-    said = site.score()
+    said = site.score("--accept", "redelivery")
     assert said.code == 0
     assert "2 parties: with fewer than three nobody can stand between others" in said.err
     scores = site.table("scores")
