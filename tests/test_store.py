@@ -1,112 +1,50 @@
-"""Files appear whole or not at all, and come back when something fails half-way."""
+"""Files appear whole or not at all."""
 
 from __future__ import annotations
 
 import errno
 import json
 import os
-import shutil
 from pathlib import Path
 
 import pytest
 
 from isthmus.errors import SettingsError, StoreError
-from isthmus.store import Batch, claim, examine, fresh, story, sweep
+from isthmus.store import claim, examine, fresh, put, story, sweep
 
 
 def files(folder: Path) -> dict[str, str]:
     return {str(path.relative_to(folder)): path.read_text() for path in folder.rglob("*") if path.is_file()}
 
 
-def batch_of(folder: Path, text: str) -> Batch:
-    batch = Batch()
-    for name in ("a/one", "b/two", "c/last"):
-        batch.add(folder / name, lambda path: path.write_text(text))
-    return batch
+def test_the_old_file_is_seen_until_the_new_one_is_whole(tmp_path: Path) -> None:
+    put(tmp_path / "a/one", lambda path: path.write_text("old"))
+
+    def write(path: Path) -> None:
+        path.write_text("new")
+        assert (tmp_path / "a/one").read_text() == "old"
+        assert path.name.startswith(".unfinished-")
+
+    put(tmp_path / "a/one", write)
+    assert files(tmp_path) == {"a/one": "new"}
 
 
-def test_nothing_is_seen_before_the_commit(tmp_path: Path) -> None:
-    with batch_of(tmp_path, "old") as batch:
-        batch.commit()
-    old = files(tmp_path)
-    assert old == {"a/one": "old", "b/two": "old", "c/last": "old"}
-    with batch_of(tmp_path, "new") as batch:
-        now = files(tmp_path)
-        assert {name: now[name] for name in old} == old
-        assert all(Path(name).name.startswith(".unfinished-") for name in now.keys() - old.keys())
-        batch.commit()
-    assert files(tmp_path) == {"a/one": "new", "b/two": "new", "c/last": "new"}
-
-
-def test_what_is_not_committed_goes(tmp_path: Path) -> None:
-    with pytest.raises(ZeroDivisionError), batch_of(tmp_path, "new"):
-        raise ZeroDivisionError
-    assert files(tmp_path) == {}
-
-
-def test_the_last_file_is_away_while_the_others_change(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
-    with batch_of(tmp_path, "old") as batch:
-        batch.commit()
-    seen = []
-    rename = os.replace
-
-    def watch(source: Path, target: Path) -> None:
-        seen.append((target.name, (tmp_path / "c/last").exists(), (tmp_path / "a/one").exists()))
-        rename(source, target)
-
-    monkeypatch.setattr(os, "replace", watch)
-    with batch_of(tmp_path, "new") as batch:
-        batch.commit()
-    assert seen == [("one", False, True), ("two", False, True), ("last", False, True)]
-
-
-@pytest.mark.parametrize("links", [True, False])
-@pytest.mark.parametrize("at", [0, 1, 2])
-@pytest.mark.parametrize("before", [{}, {"b/two": "old"}, {"a/one": "old", "b/two": "old", "c/last": "old"}])
+@pytest.mark.parametrize("before", [{}, {"a/one": "old"}])
 @pytest.mark.parametrize("error", [OSError(errno.EACCES, "no"), KeyboardInterrupt()])
-def test_a_rename_that_fails_undoes_the_others(
-    tmp_path: Path,
-    monkeypatch: pytest.MonkeyPatch,
-    links: bool,
-    at: int,
-    before: dict[str, str],
-    error: BaseException,
+def test_a_rename_that_fails_changes_nothing(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, before: dict[str, str], error: BaseException
 ) -> None:
     for name, text in before.items():
         (tmp_path / name).parent.mkdir()
         (tmp_path / name).write_text(text)
-    rename, calls = os.replace, []
 
-    def fail_once(source: Path, target: Path) -> None:
-        calls.append(target)
-        if len(calls) == at + 1:
-            raise error
-        rename(source, target)
+    def fail(*_: object) -> None:
+        raise error
 
-    def no_links(*_: object) -> None:
-        raise OSError(errno.EPERM, "no hard links here")
-
-    monkeypatch.setattr(os, "replace", fail_once)
-    if not links:
-        monkeypatch.setattr(os, "link", no_links)
-    expected = StoreError if isinstance(error, OSError) else KeyboardInterrupt
-    with pytest.raises(expected), batch_of(tmp_path, "new") as batch:
-        batch.commit()
+    monkeypatch.setattr(os, "replace", fail)
+    with pytest.raises(StoreError if isinstance(error, OSError) else KeyboardInterrupt):
+        put(tmp_path / "a/one", lambda path: path.write_text("new"))
     assert files(tmp_path) == before
-
-
-def test_nothing_changes_when_the_old_files_cannot_be_kept(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
-    with batch_of(tmp_path, "old") as batch:
-        batch.commit()
-
-    def full(*_: object) -> None:
-        raise OSError(errno.ENOSPC, "No space left on device")
-
-    monkeypatch.setattr(os, "link", full)
-    monkeypatch.setattr(shutil, "copy2", full)
-    with pytest.raises(StoreError, match="cannot publish: No space left"), batch_of(tmp_path, "new") as batch:
-        batch.commit()
-    assert files(tmp_path) == {"a/one": "old", "b/two": "old", "c/last": "old"}
 
 
 def test_a_writer_that_fails_leaves_nothing(tmp_path: Path) -> None:
@@ -114,8 +52,8 @@ def test_a_writer_that_fails_leaves_nothing(tmp_path: Path) -> None:
         path.write_text("ha")
         raise OSError(errno.ENOSPC, "No space left on device", str(path))
 
-    with pytest.raises(StoreError, match=r"cannot write .*No space left.*disk has room"), Batch() as batch:
-        batch.add(tmp_path / "file", half)
+    with pytest.raises(StoreError, match=r"cannot write .*No space left.*disk has room"):
+        put(tmp_path / "file", half)
     assert files(tmp_path) == {}
 
 

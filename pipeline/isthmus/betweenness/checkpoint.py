@@ -14,7 +14,7 @@ from contextlib import suppress
 from pathlib import Path
 from typing import Any
 
-from isthmus.store import Batch
+from isthmus.store import put
 
 __all__ = ["Checkpoint"]
 
@@ -48,9 +48,7 @@ class Checkpoint:
         if began < self._next:
             return
         payload = pickle.dumps(state(), protocol=pickle.HIGHEST_PROTOCOL)
-        with Batch() as batch:
-            batch.add(self._path, lambda path: path.write_bytes(self._digest(payload) + payload))
-            batch.commit()
+        put(self._path, lambda path: path.write_bytes(self._digest(payload) + payload))
         ended = time.monotonic()
         self._next = ended + max(self._every, (ended - began) / SHARE)
 

@@ -9,7 +9,7 @@ from pathlib import Path
 from isthmus.betweenness import Estimate, Plan, make_plan
 from isthmus.graph import Graph
 from isthmus.settings import Run, Score
-from isthmus.store import Batch
+from isthmus.store import put
 
 __all__ = ["checkpoint_key", "plan_once", "remember"]
 
@@ -45,6 +45,4 @@ def checkpoint_key(input_id: str, plan: Plan) -> str:
 
 
 def _keep(path: Path, input_id: str, plan: Plan) -> None:
-    with Batch() as batch:
-        batch.add(path, lambda target: target.write_text(json.dumps({"input_id": input_id, "plan": asdict(plan)})))
-        batch.commit()
+    put(path, lambda target: target.write_text(json.dumps({"input_id": input_id, "plan": asdict(plan)})))

@@ -1,12 +1,11 @@
 """The one room that knows how files are put where readers look for them: folders, object stores, leases."""
 
-from isthmus.store.files import Batch, claim, examine, fresh, story, sweep
+from isthmus.store.files import claim, examine, fresh, put, story, sweep
 from isthmus.store.folder import Folder
 from isthmus.store.leases import Lease, lease
 from isthmus.store.places import Files, Guard, Place, place
 
 __all__ = [
-    "Batch",
     "Files",
     "Folder",
     "Guard",
@@ -17,6 +16,7 @@ __all__ = [
     "fresh",
     "lease",
     "place",
+    "put",
     "story",
     "sweep",
 ]

@@ -20,7 +20,6 @@ from isthmus.errors import SettingsError, StoreError
 
 __all__ = [
     "LAYOUT_FILE",
-    "Batch",
     "beside",
     "claim",
     "examine",
@@ -28,6 +27,7 @@ __all__ = [
     "forget",
     "fresh",
     "layout_in",
+    "put",
     "story",
     "sweep",
 ]
@@ -64,63 +64,18 @@ def _refusal(error: Exception) -> OSError | None:
     return OSError(int(number[1]), os.strerror(int(number[1]))) if number else None
 
 
-class Batch:
-    """Files that are to appear together: all written and flushed first, then renamed one after the other.
-
-    The renames follow the order in which files were added, so the last one added is the marker of completeness.
-    Used as a context manager, whatever is not committed at its end is removed again.
-    """
-
-    def __init__(self) -> None:
-        self._pairs: list[tuple[Path, Path]] = []
-
-    def __enter__(self) -> Batch:
-        return self
-
-    def __exit__(self, *_: object) -> None:
-        for hidden, _path in self._pairs:
-            forget(hidden)
-        self._pairs.clear()
-
-    def add(self, path: Path, write: Callable[[Path], object]) -> None:
-        """Have `write` fill a hidden file beside `path`. Raises StoreError."""
-        hidden = beside(path)
-        with story("write"):
+def put(path: Path, write: Callable[[Path], object]) -> None:
+    """Have `write` fill a hidden file beside `path`, then rename it over whatever stands there. Raises StoreError."""
+    hidden = beside(path)
+    try:
+        with story("write", path):
             path.parent.mkdir(parents=True, exist_ok=True)
-            self._pairs.append((hidden, path))
             write(hidden)
             flush(hidden)
-
-    def commit(self) -> None:
-        """Rename everything into place. Until the last rename the night counts as incomplete.
-
-        What stood there before is kept until then, and put back when a rename fails. Raises StoreError.
-        """
-        before = {path: beside(path) for _, path in self._pairs}
-        with story("publish"):
-            try:
-                for path, kept in before.items():
-                    if path.exists():
-                        _keep(path, kept)
-                self._rename(before)
-            finally:
-                for kept in before.values():
-                    forget(kept)
-            self._pairs.clear()
-            for folder in {path.parent for path in before}:
-                flush(folder)
-
-    def _rename(self, before: dict[Path, Path]) -> None:
-        try:
-            if len(self._pairs) > 1:
-                self._pairs[-1][1].unlink(missing_ok=True)
-            for hidden, path in self._pairs:
-                os.replace(hidden, path)
-        except BaseException:
-            for path, kept in before.items():
-                with suppress(OSError):
-                    _put_back(path, kept)
-            raise
+            os.replace(hidden, path)
+            flush(path.parent)
+    finally:
+        forget(hidden)
 
 
 def beside(path: Path) -> Path:
@@ -135,21 +90,6 @@ def flush(path: Path) -> None:
         os.fsync(descriptor)
     finally:
         os.close(descriptor)
-
-
-def _keep(path: Path, kept: Path) -> None:
-    try:
-        os.link(path, kept)
-    except OSError:  # not every file system has hard links
-        shutil.copy2(path, kept)
-
-
-def _put_back(path: Path, kept: Path) -> None:
-    """`path` as it was before: what was kept of it, or nothing."""
-    if kept.exists():
-        os.replace(kept, path)
-    else:
-        path.unlink(missing_ok=True)
 
 
 def forget(path: Path) -> None:
@@ -198,9 +138,7 @@ def claim(folder: Path, layout: int, key: str) -> None:
         for leftover in folder.glob(f"{_MARK}*-{LAYOUT_FILE}"):
             forget(leftover)
         return
-    with Batch() as batch:
-        batch.add(folder / LAYOUT_FILE, lambda path: path.write_text(json.dumps({"layout": layout}) + "\n"))
-        batch.commit()
+    put(folder / LAYOUT_FILE, lambda path: path.write_text(json.dumps({"layout": layout}) + "\n"))
 
 
 def sweep(folder: Path, within: str = "**") -> int:
