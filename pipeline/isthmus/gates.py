@@ -150,16 +150,16 @@ class Gatekeeper:
         )  # fmt: skip
 
     def _columns(self, stops: list[str], drift: Mapping[str, tuple[str, bool]], before: Reference | None) -> None:
-        for name, (what, harmless) in drift.items():
-            gate: Gate = "warn" if harmless and self.gates.schema_drift == "stop" else self.gates.schema_drift
-            self._judge(
-                stops, "schema_drift", gate, 1.0, 0.0, broken=True,
-                text=f"the log's column {name!r} {what} since the night of {before.as_of if before else 'before'}",
-                look="what changed in the log; a unit that changed makes amounts wrong by a factor",
-            )  # fmt: skip
-        if not drift:
-            figure = None if before is None or not before.columns else 0.0
-            self._judge(stops, "schema_drift", self.gates.schema_drift, figure, 0.0, broken=False, text="", look="")
+        gate = self.gates.schema_drift
+        if gate == "stop" and all(harmless for _, harmless in drift.values()):
+            gate = "warn"
+        told = ", ".join(f"column {name!r} {what}" for name, (what, _) in drift.items())
+        known = before is not None and bool(before.columns)
+        self._judge(
+            stops, "schema_drift", gate, float(len(drift)) if known else None, 0.0, broken=bool(drift),
+            text=f"the log has changed since the night of {before.as_of if before else 'before'}: {told}",
+            look="what changed in the log; a unit that changed makes amounts wrong by a factor",
+        )  # fmt: skip
 
     def _judge(
         self,
