@@ -22,7 +22,6 @@ from isthmus.betweenness.engine_numba.accelerate import COMPILED
 from isthmus.betweenness.engine_numba.intervals import (
     Bounds,
     clopper_pearson,
-    closeness_to_limit,
     path_bounds,
 )
 from isthmus.betweenness.engine_numba.sequences import (
@@ -210,13 +209,6 @@ def test_intervals_of_paths_come_to_freemans_scale_and_split_delta() -> None:
     assert bounds.lower == pytest.approx([0.1 + 2 * lower[0], 0.2, 0, 2 * lower[3]])
     assert bounds.upper == pytest.approx([0.1 + 2 * upper[0], 0.2, 0, 0.11])
     assert bounds.std_error == pytest.approx([2 * math.sqrt(0.3 * 0.7 / 100), 0, 0, 2 * math.sqrt(0.05 * 0.95 / 100)])
-
-
-def test_closeness_to_the_limit() -> None:
-    """Two parties at delta .1: z is the .975 quantile of the normal distribution."""
-    middle, half = np.array([0.5, 0.3]), np.array([0.04, 0.02])
-    bounds = Bounds(middle, middle - half, middle + half, np.array([0.01, 0.01]))
-    assert closeness_to_limit(bounds, 0.9) == pytest.approx([4 / 1.959964, 2 / 1.959964], rel=1e-6)
 
 
 @settings(max_examples=150, deadline=None)

@@ -10,7 +10,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.special import betainccinv, betaincinv, ndtri
+from scipy.special import betainccinv, betaincinv
 
 Floats = NDArray[np.float64]
 
@@ -43,19 +43,6 @@ def clopper_pearson(counts: NDArray[np.int64], samples: int, alpha: float) -> tu
     none = c == 0
     upper[none] = -np.expm1(np.log(alpha / 2) / samples)
     return lower[which], upper[which]
-
-
-def closeness_to_limit(bounds: Bounds, confidence: float, top: int = 100) -> Floats:
-    """half-width / (z * standard error) of the `top` highest estimates, z the quantile for n at once.
-
-    With n intervals and a normal error this cannot be under 1, so it says how much the intervals give away.
-    """
-    n = bounds.estimate.size
-    z = -ndtri((1 - confidence) / (2 * n))
-    first = np.argsort(-bounds.estimate, kind="stable")[:top]
-    first = first[bounds.std_error[first] > 0]
-    ratios: Floats = bounds.half_width[first] / (z * bounds.std_error[first])
-    return ratios
 
 
 def path_bounds(
