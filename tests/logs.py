@@ -12,7 +12,7 @@ import pyarrow.parquet as pq
 
 from isthmus.cluster import open_door
 from isthmus.ingest import Reading, Survey, read_window, survey
-from isthmus.settings import Columns, Log
+from isthmus.settings import PlainColumns, PlainLog
 from isthmus.watch import Watch
 
 FIRST, LAST = date(2026, 3, 1), date(2026, 3, 3)
@@ -49,11 +49,11 @@ def write(path: Path, rows: pa.Table, **options: Any) -> Path:
     return path
 
 
-def log_of(path: Path | str, *, amount: bool = False, id: bool = False) -> Log:
-    return Log(path=str(path), columns=Columns(amount="amount" if amount else "", id="id" if id else ""))
+def log_of(path: Path | str, *, amount: bool = False, id: bool = False) -> PlainLog:
+    return PlainLog(path=str(path), columns=PlainColumns(amount="amount" if amount else "", id="id" if id else ""))
 
 
-def look(log: Log, first: date = FIRST, last: date = LAST) -> Survey:
+def look(log: PlainLog, first: date = FIRST, last: date = LAST) -> Survey:
     with open_door(threads=1) as door:
         return survey(log, first, last, door)
 

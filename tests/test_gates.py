@@ -14,7 +14,7 @@ from isthmus.cluster import open_door
 from isthmus.errors import GateStopped
 from isthmus.gates import GATES, Gatekeeper, Reference
 from isthmus.ingest import drift, read_window, survey
-from isthmus.settings import Gates, Log
+from isthmus.settings import Gates, PlainLog
 from isthmus.watch import Watch
 from nights import AS_OF, DAYS, PAIRS, Site, isthmus, rows
 
@@ -59,7 +59,7 @@ def test_rows_outside_the_window_do_not_dilute_the_refused(tmp_path: Path) -> No
     times = [day] * 4 + [day - timedelta(days=90)] * 396
     senders = [None, "a", None, "b"] + ["c"] * 396
     pl.DataFrame({"sender": senders, "receiver": ["d"] * 400, "time": times}).write_parquet(tmp_path / "one.parquet")
-    log = Log(path=str(tmp_path))
+    log = PlainLog(path=str(tmp_path))
     with open_door() as door:
         found = survey(log, day.date(), day.date(), door)
         reading = read_window(found, log, day.date(), day.date(), tmp_path / "work", door, Watch())

@@ -19,7 +19,7 @@ from isthmus.cluster import open_door
 from isthmus.errors import DataRefused
 from isthmus.ingest import files, read_window, survey
 from isthmus.nightly import run_night
-from isthmus.settings import Columns, Graph, Log, Run, Score, Settings, Window
+from isthmus.settings import Graph, PlainColumns, PlainLog, Run, Score, Settings, Window
 from isthmus.watch import Watch
 from logs import column
 from oracle_ingest import File, Row, micro
@@ -81,7 +81,7 @@ def logs(draw, keys=None) -> tuple[list[File], dict]:
     return found, how
 
 
-def write(root: Path, found: list[File], how: dict) -> Log:
+def write(root: Path, found: list[File], how: dict) -> PlainLog:
     for file, key_type in zip(found, how["key types"], strict=True):
         unit = how["time"].unit
         schema = pa.schema(
@@ -106,7 +106,7 @@ def write(root: Path, found: list[File], how: dict) -> Log:
                 ]
                 writer.write_table(pa.table(columns, schema=schema))
     amount, id = ("amount" if how["amounts"] else ""), ("id" if how["ids"] else "")
-    return Log(path=str(root), columns=Columns(amount=amount, id=id))
+    return PlainLog(path=str(root), columns=PlainColumns(amount=amount, id=id))
 
 
 # no deadline: the machine that runs the tests may be busy with something else

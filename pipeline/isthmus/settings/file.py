@@ -1,0 +1,148 @@
+"""Settings from a TOML file, what is wrong with them in words, and settings as a TOML file.
+
+Relative paths are taken from the folder of the configuration file, because a scheduler's current folder is
+nobody's intention.
+"""
+
+from __future__ import annotations
+
+import difflib
+import json
+import os
+import tomllib
+from pathlib import Path
+
+from pydantic import ValidationError
+from pydantic.fields import FieldInfo
+
+from isthmus.errors import SettingsError, StoreError
+from isthmus.settings.models import Run, Settings, masked
+from isthmus.settings.section import Section
+
+__all__ = ["load", "to_toml"]
+
+
+def load(path: str | Path) -> Settings:
+    """Read a configuration file.
+
+    Relative paths (of log, warehouse, work folder and signals) come back resolved against the file's folder.
+
+    Raises SettingsError (unknown key, wrong type, impossible value, not TOML) and StoreError (no such file).
+    """
+    path = Path(path)
+    try:
+        raw = tomllib.loads(path.read_text(encoding="utf-8"))
+    except OSError as error:
+        raise StoreError(f"cannot read settings {path}: {error.strerror}; give the path of a TOML file") from None
+    except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:
+        raise SettingsError(f"{path} is not TOML: {error}; mend that line") from None
+    try:
+        settings = Settings.model_validate(raw)
+    except ValidationError as error:
+        raise SettingsError(_explain(path, error)) from None
+    home = path.resolve().parent
+    run = settings.run.model_copy(
+        update={key: _resolve(home, getattr(settings.run, key)) for key in ("warehouse", "work")}
+    )
+    log = settings.log.model_copy(update={"path": _resolve(home, settings.log.path)})
+    files = {key: value for key, value in settings.signals if value and (key, value) != ("log", "-")}
+    signals = settings.signals.model_copy(update={key: _resolve(home, value) for key, value in files.items()})
+    _apart(path, log.path, run)
+    return settings.model_copy(update={"run": run, "log": log, "signals": signals})
+
+
+def _apart(path: Path, log: str, run: Run) -> None:
+    """Raise SettingsError when what is written would be read as a log, or both folders are one."""
+    warehouse, work = Path(run.warehouse).resolve(), Path(run.work).resolve()  # a URL is below no folder
+    if warehouse == work:
+        raise SettingsError(
+            f"settings {path}:\n  run.warehouse and run.work are both {warehouse}; readers must not see work"
+        )
+    for key, folder in (("run.warehouse", warehouse), ("run.work", work)):
+        if folder.is_relative_to(Path(log).resolve()):
+            raise SettingsError(
+                f"settings {path}:\n  {key} = {folder} lies inside log.path = {log}, so it would be read "
+                "as a log; name a folder outside"
+            )
+
+
+def _resolve(home: Path, text: str) -> str:
+    return text if "://" in text else str(home / os.path.expanduser(text))
+
+
+def _explain(path: Path, error: ValidationError) -> str:
+    """One line per fault: the key's path, the value, and what would be right."""
+    lines = []
+    for fault in error.errors():
+        where = [str(step) for step in fault["loc"]]
+        key = ".".join(where) or "settings"
+        if fault["type"] == "extra_forbidden":
+            known = list(_section(where[:-1]).model_fields)
+            near = difflib.get_close_matches(where[-1], known, n=1, cutoff=0.5)
+            hint = f"did you mean {near[0]}?" if near else f"known here: {', '.join(known)}"
+            lines.append(f"{key} = {_show(fault['input'])}: unknown key; {hint}")
+        elif fault["type"] == "missing":
+            lines.append(f"{key}: missing; {_meaning(where)}")
+        elif fault["type"] == "model_type":
+            lines.append(f"{key} = {_show(fault['input'])}: a section, not a value; write it as [{key}]")
+        elif fault["type"] == "value_error":
+            lines.append(str(fault["ctx"]["error"]))
+        else:
+            hint = _meaning(where)
+            lines.append(f"{key} = {_show(fault['input'])}: {_lower(fault['msg'])}" + (f" ({hint})" if hint else ""))
+    return f"settings {path}:\n" + "\n".join(f"  {line}" for line in lines)
+
+
+def _section(steps: list[str]) -> type[Section]:
+    section: type[Section] = Settings
+    for step in steps:
+        section = section.model_fields[step].annotation  # type: ignore[assignment]
+    return section
+
+
+def _meaning(steps: list[str]) -> str:
+    try:
+        field = _section(steps[:-1]).model_fields[steps[-1]]
+        return field.description or (field.annotation.__doc__ or "").strip()
+    except (KeyError, AttributeError, IndexError):
+        return ""
+
+
+def _lower(message: str) -> str:
+    return message[:1].lower() + message[1:]
+
+
+def _show(value: object) -> str:
+    text = masked(json.dumps(value, default=str, ensure_ascii=False))
+    return text if len(text) <= 80 else text[:77] + "..."
+
+
+def to_toml(settings: Settings) -> str:
+    """The settings as a TOML file with every key, its unit, default and meaning as a comment."""
+    lines: list[str] = []
+    _write_section(settings, "", lines)
+    return "\n".join(lines).strip() + "\n"
+
+
+def _write_section(section: Section, name: str, lines: list[str]) -> None:
+    if name:
+        lines += ["", f"# {(type(section).__doc__ or '').strip()}", f"[{name}]"]
+    inner: list[tuple[str, Section]] = []
+    for key, field in type(section).model_fields.items():
+        value = getattr(section, key)
+        if isinstance(value, Section):
+            inner.append((f"{name}.{key}" if name else key, value))
+        else:
+            lines.append(f"# {_comment(field)}")
+            lines.append(f"{key} = {json.dumps(value, ensure_ascii=False)}")
+    for path, value in inner:
+        _write_section(value, path, lines)
+
+
+def _comment(field: FieldInfo) -> str:
+    extra = field.json_schema_extra
+    unit = extra.get("unit") if isinstance(extra, dict) else ""
+    default = "required" if field.is_required() else f"default {json.dumps(field.default, ensure_ascii=False)}"
+    choices = getattr(field.annotation, "__args__", ())
+    words = f"; one of {', '.join(choices)}" if choices and all(isinstance(c, str) for c in choices) else ""
+    return f"{field.description} [{f'{unit}, ' if unit else ''}{default}{words}]"

@@ -1,0 +1,35 @@
+"""`[log]` of every kind: where the rows come from, and how they are to be understood."""
+
+from __future__ import annotations
+
+from typing import Literal
+
+from pydantic import Field
+
+from isthmus.settings.section import Section, column, key
+
+__all__ = ["PATH", "PlainColumns", "PlainLog"]
+
+PATH = "folder or glob of Parquet files; a folder may hold date partitions such as dt=2026-11-30"
+
+
+class PlainColumns(Section):
+    """Our name = the log's own column name."""
+
+    sender: str = column("sender", "string integer", "who contacted or paid; any string or integer type")
+    receiver: str = column("receiver", "string integer", "who was contacted or paid; any string or integer type")
+    time: str = column(
+        "time", "timestamp date", "when: a timestamp of any unit or zone, or a date; without a zone it is UTC"
+    )
+    amount: str = column("", "number integer", "what it was worth, 0 or more; empty: the log has no amounts")
+    id: str = column(
+        "", "string integer", "identifies a row, so that one delivered twice counts once; empty: no such column"
+    )
+
+
+class PlainLog(Section):
+    """Where the rows come from."""
+
+    path: str = key(..., PATH, min_length=1)
+    kind: Literal["plain"] = key("plain", "how the rows are to be understood")
+    columns: PlainColumns = Field(default_factory=PlainColumns)
