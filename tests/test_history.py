@@ -1,16 +1,17 @@
-"""`isthmus history`: the recent nights, from the warehouse alone."""
+"""`isthmus history`: the recent nights, from the warehouse and, of runs that published nothing, the work folder."""
 
 from __future__ import annotations
 
 import json
 import re
 import shutil
+from collections.abc import Callable
 from datetime import timedelta
 from pathlib import Path
 
 import pytest
 
-from nights import AS_OF, DAYS, PAIRS, Said, Site, isthmus, rows
+from nights import AS_OF, DAYS, PAIRS, PARTIES, Said, Site, isthmus, rows
 
 ENGINE = '[score]\nengine = "networkit"\n'
 
@@ -113,6 +114,43 @@ def test_runs_of_an_older_isthmus_are_shown(many: Site, tmp_path: Path) -> None:
         del told[name]
     path.write_text(json.dumps(told))
     assert night_lines(history(site, "--all"))[0].split()[:3] == ["2026-03-04", "published", "exact"]
+
+
+def test_a_night_that_a_gate_stopped_tells_which(tmp_path: Path) -> None:
+    site = Site(tmp_path, ENGINE)
+    assert site.score().code == 0
+    next_day = AS_OF + timedelta(days=1)
+    assert isthmus("score", site.config, "--as-of", next_day).code == 65
+    said = history(site)
+    assert night_lines(said)[-1].split() == ["2026-03-05", "stopped", "missing_days:", "stop"]
+    assert "1 day" in said.err
+    assert PARTIES[0] not in said.err
+    site.write(rows(next_day), next_day)
+    assert isthmus("score", site.config, "--as-of", next_day).code == 0
+    assert night_lines(history(site))[-1].split()[:2] == ["2026-03-05", "published"]
+    assert "stopped" not in history(site).err
+
+
+def test_a_run_that_failed_after_the_night_was_published(tmp_path: Path) -> None:
+    site = Site(tmp_path, ENGINE)
+    assert site.score().code == 0
+    site.file(AS_OF).write_bytes(b"not Parquet")
+    assert site.score().code == 65
+    said = history(site)
+    assert night_lines(said)[-1].split()[:2] == ["2026-03-04", "published"]
+    assert "what was published before is still there" in said.err
+
+
+@pytest.mark.parametrize("harm", [Path.unlink, lambda path: path.write_bytes(path.read_bytes()[:-7])])
+def test_a_table_that_is_not_as_published(tmp_path: Path, harm: Callable[[Path], object]) -> None:
+    site = Site(tmp_path, ENGINE)
+    assert site.score().code == 0
+    harm((site.warehouse / "ties" / "series=s" / f"as_of={AS_OF}" / "ties.parquet").resolve())
+    said = history(site)
+    assert night_lines(said)[-1].split()[:2] == ["2026-03-04", "damaged"]
+    assert "ties not as published" in said.err
+    assert "published" in isthmus("backfill", site.config, "--from", AS_OF, "--to", AS_OF).err
+    assert night_lines(history(site))[-1].split()[:2] == ["2026-03-04", "published"]
 
 
 def test_help_teaches() -> None:

@@ -168,7 +168,7 @@ def test_a_store_without_conditions_is_refused(tmp_path: Path, monkeypatch: pyte
 
 
 def publish(place: Place, text: str, guard: store.Guard) -> None:
-    place.publish(NIGHT, [(name, lambda path: path.write_text(text)) for name in FILES], guard)
+    place.publish(NIGHT, [store.File(name, lambda path: path.write_text(text), Path.touch) for name in FILES], guard)
 
 
 def test_who_lost_it_cannot_publish(site_of_leases: Place) -> None:
@@ -231,7 +231,8 @@ try:
             freeze()
         elif how == "dies":
             time.sleep(60)
-        place.publish("series=s/as_of=2026-03-04", [(name, write) for name in sys.argv[3:]], held.guard)
+        files = [store.File(name, write, lambda path: path.touch()) for name in sys.argv[3:]]
+        place.publish("series=s/as_of=2026-03-04", files, held.guard)
 except IsthmusError as error:
     print(error, file=sys.stderr)
     sys.exit(error.exit_code)

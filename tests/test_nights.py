@@ -204,6 +204,20 @@ def test_freeze(two_nights: Site) -> None:
     assert tables(site, BEFORE) == before
     assert record(site)["late"] == {"policy": "freeze", "not_restated": [str(BEFORE)]}
     assert record(site, BEFORE)["revision"] == 1
+    said = isthmus("backfill", site.config, "--from", BEFORE, "--to", AS_OF)
+    assert said.code == 0
+    assert tables(site, BEFORE) == before
+    assert isthmus("backfill", site.config, "--from", BEFORE, "--to", AS_OF, "--again").code == 0
+    assert record(site, BEFORE)["revision"] == 2
+
+
+def test_nights_of_other_settings_are_told_and_left(two_nights: Site) -> None:
+    site = two_nights
+    site.config.write_text(site.config.read_text().replace("[score]", "[score]\ntop = 7"))
+    said = night(site, AS_OF)
+    assert said.code == 0
+    assert f"other settings published has changed; they are left as they are: {BEFORE}" in said.err
+    assert record(site, BEFORE)["revision"] == 1
 
 
 def test_a_day_cut_short_afterwards_restates_nothing(two_nights: Site) -> None:

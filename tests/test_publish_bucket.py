@@ -5,9 +5,14 @@ from __future__ import annotations
 import io
 import itertools
 import json
+import random
+import signal
+import subprocess
+import sys
 import time
+from collections import Counter
 from collections.abc import Iterator
-from contextlib import nullcontext
+from contextlib import nullcontext, suppress
 from pathlib import Path
 
 import polars as pl
@@ -15,7 +20,7 @@ import pytest
 
 from isthmus import store
 from isthmus.errors import StoreError, TryAgain
-from isthmus.store import Place, bucket
+from isthmus.store import File, Place, bucket
 from nights import AS_OF, PARTIES, Site
 from servers import S3, Azurite, azurite, driver
 
@@ -52,7 +57,10 @@ def place(s3: S3) -> Place:
 
 
 def publish(place: Place, text: str, guard: store.Guard) -> None:
-    place.publish(NIGHT, [(name, lambda path, name=name: path.write_text(f"{text} {name}")) for name in NAMES], guard)
+    def file(name: str) -> File:
+        return File(name, lambda path: path.write_text(f"{text} {name}"), Path.touch)
+
+    place.publish(NIGHT, [file(name) for name in NAMES], guard)
 
 
 def published(place: Place, scheme: str = "s3") -> dict[str, str]:
@@ -186,6 +194,85 @@ def test_nobody_answers_or_no_bucket(s3: S3, monkeypatch: pytest.MonkeyPatch) ->
         assert SECRET not in str(error.value)
 
 
+# --- kill -9 -------------------------------------------------------------------------------------------------------
+
+# Publishes runs of different sizes, one after the other, until it is killed.
+PUBLISHER = """
+import itertools, shutil, sys
+from pathlib import Path
+from isthmus import store
+from isthmus.store import bucket
+
+url, prepared, start = sys.argv[1], Path(sys.argv[2]), int(sys.argv[3])
+runs = sorted(prepared.iterdir())
+place = store.place(url)
+print("started", flush=True)
+with store.lease(place, "series=s", beat=0.5) as held:
+    for at in itertools.count(start):
+        files = [store.File(f"{name.split('.')[0]}/series=s/as_of=2026-03-04/{name}",
+                            lambda path, name=name: shutil.copy(runs[at % len(runs)] / name, path), Path.touch)
+                 for name in ("scores.parquet", "runs.parquet")]
+        place.publish("series=s/as_of=2026-03-04", files, held.guard)
+"""
+KILLS = 12
+
+
+def test_killed_at_any_instant_the_pointer_names_one_whole_run(tmp_path: Path, place: Place) -> None:
+    """Must survive: what current.json names is one run, whole; and each copy is one run's table, whole."""
+    home, prepared = f"{place}/.nights/series=s/as_of=2026-03-04", tmp_path / "prepared"
+    for at in range(5):
+        folder, size = prepared / str(at), 100 * (at + 1)
+        folder.mkdir(parents=True)
+        scores = pl.DataFrame({"party": [f"{at}-{party}" for party in range(size)], "run_id": [f"run-{at}"] * size})
+        scores.write_parquet(folder / "scores.parquet")
+        pl.DataFrame({"run_id": [f"run-{at}"], "parties": [size]}).write_parquet(folder / "runs.parquet")
+    reader, draw, told = driver("s3"), random.Random(6), Counter[str]()
+
+    def frame(path: str) -> pl.DataFrame:
+        return pl.read_parquet(io.BytesIO(reader.cat_file(path)))
+
+    def look() -> None:
+        for _ in range(9):
+            try:
+                named = json.loads(reader.cat_file(f"{home}/current.json"))
+                scores, run = (frame(f"{home}/{named[table]}") for table in ("scores", "runs"))
+                break
+            except FileNotFoundError:  # nothing yet; or two publications since the pointer was read
+                told["again"] += 1
+                time.sleep(0.05)
+        else:
+            return
+        told["whole" if whole(scores, run) else "wrong"] += 1
+        with suppress(FileNotFoundError):
+            copy = frame(f"{place}/scores/series=s/as_of=2026-03-04/scores.parquet")
+            told[
+                "copies" if copy.height == len(set(copy["party"])) and copy["run_id"].n_unique() == 1 else "wrong"
+            ] += 1
+
+    for kill in range(KILLS):
+        publisher = subprocess.Popen(
+            [sys.executable, "-c", PUBLISHER, str(place), str(prepared), str(kill)], stdout=subprocess.PIPE
+        )
+        assert publisher.stdout
+        assert publisher.stdout.readline()
+        until = time.monotonic() + draw.uniform(0.5, 2.0)
+        while time.monotonic() < until:
+            look()
+        publisher.send_signal(signal.SIGKILL)
+        publisher.wait()
+        publisher.stdout.close()
+        look()
+    print(told)
+    assert told["wrong"] == 0
+    assert told["whole"] > 2 * KILLS
+    assert told["copies"] > KILLS
+
+
+def whole(scores: pl.DataFrame, run: pl.DataFrame) -> bool:
+    (told,) = run.iter_rows(named=True)
+    return scores.height == told["parties"] and set(scores["run_id"]) == {told["run_id"]}
+
+
 # --- whole nights --------------------------------------------------------------------------------------------------
 
 
@@ -215,7 +302,9 @@ def test_a_night_on_s3(tmp_path: Path, place: Place, s3: S3) -> None:
     s3.asked.clear()
     assert site.score().code == 0
     put = {path.rpartition("/")[2] for path in s3.puts()}
-    assert put == {"series=s.json", "runs.parquet", "run.json"}  # what tells of the run; the tables are the same bytes
+    told = {name for name in put if not name.endswith(".data")}
+    assert told == {"series=s.json", "current.json", "runs.parquet", "run.json"}
+    assert {name.split(".")[0] for name in put - told} == {"runs", "run"}  # the tables are the same bytes
     assert not (tmp_path / "warehouse").exists()
     with store.lease(place, "series=s"):
         said = site.score()

@@ -21,15 +21,22 @@ import pyarrow.dataset
 import pytest
 
 from isthmus.errors import StoreError
-from isthmus.store import Folder
+from isthmus.store import File, Folder
 
 NIGHT = "series=s/as_of=2026-03-04"
 NAMES = [f"{table}/{NIGHT}/{table}.parquet" for table in ("scores", "ties", "refused", "runs")]
 NAMES.append(f"runs/{NIGHT}/run.json")
 
 
-def files(text: str, names: list[str] = NAMES) -> list:
-    return [(name, lambda path: path.write_text(text)) for name in names]
+BLANK = "nothing yet"
+
+
+def files(text: str, names: list[str] = NAMES) -> list[File]:
+    return [File(name, lambda path: path.write_text(text), lambda path: path.write_text(BLANK)) for name in names]
+
+
+def table(name: str, frame: pl.DataFrame) -> File:
+    return File(name, frame.write_parquet, frame.clear().write_parquet)
 
 
 @contextmanager
@@ -82,18 +89,68 @@ def test_the_generation_before_stays_for_readers_that_hold_its_path(tmp_path: Pa
     assert len(generations(tmp_path)) == 2
 
 
-def test_the_first_publication_ends_with_run_json(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
-    appeared = []
+def test_a_first_publication_is_one_instant(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Readers find blank tables, and then all of the night."""
+    states = []
     rename = os.replace
 
     def note(source: Path, target: Path) -> None:
         rename(source, target)
-        appeared.append(Path(target).name)
-        assert all(text == "1" for text in seen(tmp_path).values())
+        states.append(seen(tmp_path))
 
     monkeypatch.setattr(os, "replace", note)
     publish(tmp_path, "1")
-    assert appeared == ["current", *(Path(name).name for name in NAMES)]
+    *before, last = states
+    assert len(before) == 1 + len(NAMES)
+    assert {text for state in before for text in state.values()} == {BLANK}
+    assert last == dict.fromkeys(NAMES, "1")
+    assert len(generations(tmp_path)) == 1
+
+
+def test_readers_that_search_for_any_parquet_meet_no_half_made_file(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """DuckDB and Polars find hidden files too when asked for `*.parquet`."""
+    found = set()
+    for name in ("replace", "symlink", "fsync"):
+        call = getattr(os, name)
+        monkeypatch.setattr(
+            os, name, lambda *a, call=call: (call(*a), found.update(tmp_path.glob("[a-z]*/**/*.parquet")))[0]
+        )
+    publish(tmp_path, "1")
+    publish(tmp_path, "2")
+    assert {path.name for path in found} == {Path(name).name for name in NAMES[:-1]}
+
+
+def test_a_table_that_is_new_appears_with_the_others(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    publish(tmp_path, "old", NAMES[1:])
+    rename = os.replace
+
+    def note(source: Path, target: Path) -> None:
+        rename(source, target)
+        state = seen(tmp_path)
+        new = state.pop(NAMES[0], BLANK)
+        assert (new, set(state.values())) in ((BLANK, {"old"}), ("new", {"new"}))
+
+    monkeypatch.setattr(os, "replace", note)
+    publish(tmp_path, "new")
+    assert seen(tmp_path) == dict.fromkeys(NAMES, "new")
+
+
+def test_a_night_that_stayed_blank_is_swept(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """A run was killed right before its first switch, and that night is never run again."""
+    publish(tmp_path, "1")
+    with monkeypatch.context() as patched:
+        patched.setattr("isthmus.store.folder._switch", lambda *_: os._exit(9))
+        child = os.fork()
+        if not child:
+            Folder(tmp_path).publish(
+                "series=s/as_of=2026-03-05", files("1", [n.replace("-04", "-05") for n in NAMES]), free
+            )
+        assert os.waitpid(child, 0)[1] == 9 << 8
+    assert Counter(seen(tmp_path).values()) == {"1": len(NAMES), BLANK: len(NAMES)}
+    Folder(tmp_path).sweep("s")
+    assert seen(tmp_path) == dict.fromkeys(NAMES, "1")
 
 
 @pytest.mark.parametrize("there", [NAMES, NAMES[:2], NAMES[-1:]])
@@ -115,7 +172,8 @@ def test_a_night_of_plain_files_is_never_missing_or_mixed(
     publish(tmp_path, "new")
     for state in states:
         assert set(there) <= set(state)
-        assert len(set(state.values())) == 1
+        assert set(state.values()) - {BLANK} in ({"old"}, {"new"})
+        assert {state[name] for name in there} == set(state.values()) - {BLANK}
     assert seen(tmp_path) == dict.fromkeys(NAMES, "new")
     assert states[0] == dict.fromkeys(there, "old")
 
@@ -145,7 +203,7 @@ def test_a_table_folder_that_lies_elsewhere(tmp_path: Path) -> None:
 def test_readers_find_one_night_of_one(tmp_path: Path, glob: str) -> None:
     frame = pl.DataFrame({"party": ["a", "b"]})
     for _ in range(2):
-        Folder(tmp_path).publish(NIGHT, [(NAMES[0], frame.write_parquet)], free)
+        Folder(tmp_path).publish(NIGHT, [table(NAMES[0], frame)], free)
     found = duckdb.sql(f"SELECT party, series FROM read_parquet('{tmp_path}/{glob}', hive_partitioning = true)")
     assert sorted(found.fetchall()) == [("a", "s"), ("b", "s")]
     assert pl.read_parquet(tmp_path / glob).height == 2
@@ -241,7 +299,7 @@ def test_a_disk_that_is_full_under_polars(small_disk: Path) -> None:
     was = seen(small_disk)
     frame = pl.DataFrame({"noise": np.random.default_rng(1).random(1 << 18)})
     with pytest.raises(StoreError, match=r"cannot write .*No space left.*disk has room"):
-        Folder(small_disk).publish(NIGHT, [(NAMES[0], frame.write_parquet), *files("new", NAMES[1:])], free)
+        Folder(small_disk).publish(NIGHT, [table(NAMES[0], frame), *files("new", NAMES[1:])], free)
     assert seen(small_disk) == was
 
 
@@ -307,8 +365,11 @@ def publish(root, start, ends):
         place.sweep("s")
         for at in range(start, ends):
             run = runs[at % len(runs)]
-            files = [(f"{table}/series=s/as_of=2026-03-04/{name}", lambda path, data=run[name]: path.write_bytes(data))
-                     for table, name in (("scores", "scores.parquet"), ("runs", "runs.parquet"), ("runs", "run.json"))]
+            files = [
+                store.File(f"{table}/series=s/as_of=2026-03-04/{name}",
+                           lambda path, data=run[name]: path.write_bytes(data), lambda path: path.write_bytes(b"blank"))
+                for table, name in (("scores", "scores.parquet"), ("runs", "runs.parquet"), ("runs", "run.json"))
+            ]
             place.publish("series=s/as_of=2026-03-04", files, held.guard)
             time.sleep(0 if first else 0.01)
 
@@ -345,11 +406,10 @@ for number in range(1, kills) if first else ():
     here = root / str(number)
     def last(): die_before(number); publish(here, 0, 1); os._exit(0)
     status = os.waitpid(forked(last), 0)[1]
-    complete = (here / "runs/series=s/as_of=2026-03-04/run.json").exists()
-    seen = [f for f in here.glob("[a-z]*/*/*/*") if not f.name.startswith(".")]
-    assert len(seen) == 3 or not complete
-    assert {f.name: f.read_bytes() for f in seen}.items() <= runs[0].items()
-    print("complete" if complete else "incomplete" if seen else "nothing", flush=True)
+    seen = {f.name: f.read_bytes() for f in here.glob("[a-z]*/*/*/*") if not f.name.startswith(".")}
+    blank = set(seen.values()) <= {b"blank"}
+    assert blank or seen == runs[0]
+    print("nothing" if not seen else "blank" if blank else "whole", flush=True)
     publish(here, 1, 2)
     assert {f.name: f.read_bytes() for f in here.glob("[a-z]*/*/*/*")} == runs[1]
     assert len(list((here / ".nights/series=s/as_of=2026-03-04").iterdir())) <= 3
@@ -434,7 +494,9 @@ needs_proc = pytest.mark.skipif(not Path("/proc/self/stat").exists(), reason="a 
 def test_killed_at_any_instant_a_reader_finds_one_whole_run(tmp_path: Path) -> None:
     """Must survive: at every instant the public paths name one whole night."""
     prepared, root, stop = prepare(tmp_path / "prepared"), tmp_path / "wh", tmp_path / "stop"
-    Folder(root).publish(NIGHT, [(name, copier(prepared / "0" / Path(name).name)) for name in READ], free)
+    Folder(root).publish(
+        NIGHT, [File(name, copier(prepared / "0" / Path(name).name), Path.touch) for name in READ], free
+    )
     reader, killer = start(READER, root, stop), start(KILLER, root, prepared, KILLS, "again")
     try:
         err = killer.communicate(timeout=60)[1]
@@ -456,10 +518,10 @@ def test_killed_at_any_instant_a_reader_finds_one_whole_run(tmp_path: Path) -> N
 
 @needs_proc
 def test_killed_before_every_call_of_a_first_publication(tmp_path: Path) -> None:
-    """Must survive: no run.json without all tables of that run; the next run completes the night and tidies up."""
+    """Must survive: no night at all, or all of it; the next run completes it and tidies up."""
     killer = start(KILLER, tmp_path / "wh", prepare(tmp_path / "prepared"), MOST_CALLS, "first")
     out, err = killer.communicate(timeout=60)
     assert killer.returncode == 0, err
     found = Counter(out.split())
     print(found)
-    assert set(found) == {"nothing", "incomplete", "complete"}
+    assert set(found) == {"nothing", "blank", "whole"}

@@ -228,20 +228,22 @@ def history(
 ) -> None:
     """The recent nights, newest last: what each published, from what, and how sure.
 
-    Reads the warehouse alone: neither the log nor the work folder. A night is `published`, `incomplete` (a run was
-    killed while publishing; run it again) or `missing` (no run ever published it).
+    Reads no log. A night is `published`, `damaged` (a table is no longer what was published; run it again),
+    `incomplete` (a run was killed while publishing; run it again), `stopped` (by a gate) or `failed`, as the work
+    folder tells, or `missing` (no run came to an end).
 
     \b
     Examples
       isthmus history configs/payments.toml
       isthmus history configs/payments.toml --nights 60 --all
     """
+    from isthmus.endings import endings
     from isthmus.publish import nights_of
     from isthmus.settings import load
     from isthmus.store import place
 
     settings = load(config)
-    found = nights_of(place(settings.run.warehouse), settings.series, nights)
+    found = nights_of(place(settings.run.warehouse), settings.series, nights, endings(settings.work))
     reports.history(Console(as_json=as_json), settings, found, show_all=show_all)
 
 

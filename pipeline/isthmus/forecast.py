@@ -5,7 +5,6 @@ from __future__ import annotations
 from dataclasses import dataclass, replace
 from datetime import date, timedelta
 from math import log
-from pathlib import Path
 
 from isthmus import store
 from isthmus.betweenness import Plan, make_plan
@@ -51,7 +50,7 @@ class Forecast:
 def foresee(settings: Settings, first_day: date, last_day: date) -> Forecast:
     """Survey the log, read a sample of the window, and plan. Raises what a night would raise for the same faults."""
     store.place(settings.run.warehouse).examine(LAYOUT, "run.warehouse")
-    store.examine(Path(settings.run.work) / f"series={settings.series}", LAYOUT, "run.work")
+    store.examine(settings.work, LAYOUT, "run.work")
     with open_door(threads=settings.run.threads) as door:
         found = survey(settings.log, first_day, last_day, door)
     sample = sample_ties(found, settings.log, first_day, last_day, SAMPLE_ROWS)

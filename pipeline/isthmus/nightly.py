@@ -14,6 +14,7 @@ from isthmus import store
 from isthmus.betweenness import Checkpoint, measure
 from isthmus.cluster import open_door
 from isthmus.deadline import Deadline
+from isthmus.endings import told
 from isthmus.gates import FIRST_PARTIES, Gatekeeper
 from isthmus.graph import Graph, describe
 from isthmus.ingest import drift, read_window, survey
@@ -88,7 +89,7 @@ def _leased(
     deadline: Deadline,
 ) -> Outcome:
     """The night, with both folders to itself: the work folder, and the series in the warehouse."""
-    work, leased = Path(settings.run.work) / f"series={settings.series}", f"series={settings.series}"
+    work, leased = settings.work, f"series={settings.series}"
     warehouse = store.place(settings.run.warehouse, scratch=work / "outgoing")
     warehouse.claim(LAYOUT, "run.warehouse")
     store.claim(work, LAYOUT, "run.work")
@@ -96,9 +97,10 @@ def _leased(
         with held.guard():
             warehouse.sweep(settings.series)
         store.sweep(work)
-        return _measured_and_published(
-            settings, Night(warehouse, settings.series, as_of), work, watch, accept, frozen, deadline, held
-        )
+        with told(work, as_of, watch):
+            return _measured_and_published(
+                settings, Night(warehouse, settings.series, as_of), work, watch, accept, frozen, deadline, held
+            )
 
 
 def _measured_and_published(

@@ -5,12 +5,13 @@ from __future__ import annotations
 from collections.abc import Iterator
 from dataclasses import dataclass
 from datetime import date, timedelta
+from typing import Any
 
 from isthmus.cluster import open_door
 from isthmus.deadline import Deadline
 from isthmus.errors import DataRefused, IsthmusError, StoreError
 from isthmus.ingest import holds, states_of, survey
-from isthmus.nightly import Outcome, run_night, window_of
+from isthmus.nightly import Outcome, run_night
 from isthmus.publish import Night, complete, published, record_of
 from isthmus.settings import Settings
 from isthmus.store import place
@@ -36,7 +37,12 @@ def score(
     The first result is that of `as_of`; its errors are raised. The others' errors are in their results. Nights that the
     deadline leaves no time for are told as a warning and found again the next time.
     """
-    late = changed_since(settings, as_of)
+    late, others = changed_since(settings, as_of)
+    if others:
+        watch.warning(
+            f"the log of nights that other settings published has changed; they are left as they are: {_days(others)}; "
+            "`isthmus backfill` computes them by these settings"
+        )
     freeze = settings.run.late == "freeze"
     if late and freeze:
         watch.warning(f"the log of published nights has changed; they are left as they are: {_days(late)}")
@@ -53,11 +59,12 @@ def score(
 def backfill(
     settings: Settings, first: date, last: date, watch: Watch, *, again: bool, accept: frozenset[str] = frozenset()
 ) -> Iterator[Result]:
-    """The nights of first..last, oldest first. Complete ones are skipped unless `again`, or their log has changed.
+    """The nights of first..last, oldest first. Complete ones are skipped unless `again`, or their log has changed and
+    `run.late` is "restate".
 
     Ends after the first night that fails: the error is in its result.
     """
-    changed = set(changed_since(settings, None))
+    changed = set(changed_since(settings, None)[0]) if settings.run.late == "restate" else set()
     for number in range((last - first).days + 1):
         day = first + timedelta(days=number)
         night = Night.of(settings.run.warehouse, settings.series, day)
@@ -90,8 +97,8 @@ def _accepted(settings: Settings, day: date) -> frozenset[str]:
     return frozenset(gate["gate"] for gate in told.get("gates", []) if gate["state"] == "accepted")
 
 
-def changed_since(settings: Settings, but: date | None) -> list[date]:
-    """Published nights of this definition whose files have changed since, oldest first, without `but`.
+def changed_since(settings: Settings, but: date | None) -> tuple[list[date], list[date]]:
+    """Published nights whose files have changed since, oldest first, without `but`: of this definition, of others.
 
     A file counts as changed when its size or time is another; and a file that was not there counts when its name and
     footer say that it can hold a day of the window. A night of which a file is gone is left as it is: logs are kept for
@@ -99,24 +106,26 @@ def changed_since(settings: Settings, but: date | None) -> list[date]:
     """
     nights = published(place(settings.run.warehouse), settings.series)
     if not nights:
-        return []
+        return [], []
     try:
         now = states_of(settings.log)
     except (StoreError, DataRefused):
-        return []  # the night itself will say what is wrong with the log
-    return [night.as_of for night in nights if night.as_of != but and _changed(settings, night, now)]
+        return [], []  # the night itself will say what is wrong with the log
+    mine, others = list[date](), list[date]()
+    for night in nights:
+        told = record_of(night)
+        if night.as_of != but and told and _changed(settings, night, told, now):
+            (mine if told["definition"] == settings.definition else others).append(night.as_of)
+    return mine, others
 
 
-def _changed(settings: Settings, night: Night, now: dict[str, tuple[int, int]]) -> bool:
-    told = record_of(night)
-    if told.get("definition") != settings.definition:
-        return False
+def _changed(settings: Settings, night: Night, told: dict[str, Any], now: dict[str, tuple[int, int]]) -> bool:
     read = {each["file"]: (each["bytes"], each.get("changed_ns")) for each in told.get("inputs", [])}
     if any(name not in now for name in read):
         return False
     if any(now[name] != state for name, state in read.items()):
         return True
-    window = window_of(settings, night.as_of)
+    window = date.fromisoformat(told["window_start"]), night.as_of
     if not any(name not in read and holds(name, *window) for name in now):
         return False
     with open_door(threads=settings.run.threads) as door:

@@ -166,7 +166,7 @@ def history(console: Console, settings: Settings, nights: list[dict[str, Any]], 
             run = each.get("run", {})
             for old in reversed(run.get("replaces", [])) if show_all else ():
                 lines.append([str(each["as_of"]), "replaced", *_figures(old, before)])
-            lines.append([str(each["as_of"]), each["state"], *_figures(run, before)])
+            lines.append([str(each["as_of"]), each["state"], *(_figures(run, before) if run else _ended(each))])
             before = run or before
         console.table(
             f"Series {settings.series}, {nights[0]['as_of']} .. {nights[-1]['as_of']}, in {warehouse}",
@@ -174,6 +174,12 @@ def history(console: Console, settings: Settings, nights: list[dict[str, Any]], 
             lines,
             left=5,
         )
+        for each in nights:
+            if each.get("damaged"):
+                console.say(f"Night of {each['as_of']}: {', '.join(each['damaged'])} not as published; run it again.")
+            if ending := each.get("ending"):
+                again = "; what was published before is still there" if "run" in each else ""
+                console.say(f"Night of {each['as_of']}, run that ended {ending['at']}{again}:\n  {ending['error']}")
         if (last := yesterday()) > nights[-1]["as_of"]:
             console.say(f"No night after {nights[-1]['as_of']}; the last whole day (UTC) is {last}.")
     console.answer({"series": settings.series, "warehouse": warehouse, "nights": nights})
@@ -181,8 +187,6 @@ def history(console: Console, settings: Settings, nights: list[dict[str, Any]], 
 
 def _figures(run: dict[str, Any], before: dict[str, Any]) -> list[str]:
     """The columns of one run. What an older isthmus did not tell is left blank."""
-    if not run:
-        return [""] * 7
     changed = [name for name in ("definition", "version") if before and before.get(name) != run.get(name)]
     gates = [
         f"{gate['gate']}: {gate['state']}" for gate in run.get("gates", []) if gate["state"] in ("warn", "accepted")
@@ -196,6 +200,13 @@ def _figures(run: dict[str, Any], before: dict[str, Any]) -> list[str]:
         f"{run['rows_refused'] / max(run['rows_read'], 1):.2%}",
         f"{sum(run['seconds'].values()):,.1f}" if "seconds" in run else "",
     ]
+
+
+def _ended(night: dict[str, Any]) -> list[str]:
+    """The same columns, of a night that nothing was published of."""
+    ending = night.get("ending", {})
+    stops = ", ".join(f"{gate['gate']}: stop" for gate in ending.get("gates", []) if gate["state"] == "stop")
+    return ["", "", stops or (f"exit {ending['exit_code']}" if ending else ""), *[""] * 4]
 
 
 def dictionary(tables: list[Table], *, as_json: bool) -> None:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from contextlib import suppress
 from dataclasses import replace
 from datetime import date, timedelta
@@ -15,7 +15,17 @@ from isthmus.gates import FIRST_PARTIES, WEEKS, Reference
 from isthmus.publish.night import Night
 from isthmus.store import Place
 
-__all__ = ["complete", "counted_before", "nights_of", "published", "record_of", "reference", "replaced", "volume_of"]
+__all__ = [
+    "complete",
+    "counted_before",
+    "damaged",
+    "nights_of",
+    "published",
+    "record_of",
+    "reference",
+    "replaced",
+    "volume_of",
+]
 
 # Runs that a night remembers to have replaced; and what it remembers of each.
 MOST_REPLACED = 20
@@ -45,7 +55,14 @@ def published(warehouse: Place, series: str) -> list[Night]:
 
 def complete(night: Night, definition: str) -> bool:
     """Whether the night is published whole, by this definition."""
-    return record_of(night).get("definition") == definition
+    told = record_of(night)
+    return told.get("definition") == definition and not damaged(night, told)
+
+
+def damaged(night: Night, told: dict[str, Any]) -> list[str]:
+    """The tables that are gone, or not of the size that the night's run.json (`told`) says. Raises StoreError."""
+    sizes = told.get("tables", {})
+    return [table for table, size in sizes.items() if night.warehouse.size(night.path(table)) != size["bytes"]]
 
 
 def reference(night: Night) -> Reference | None:
@@ -94,24 +111,31 @@ def replaced(night: Night) -> list[dict[str, Any]]:
     return [told, *before.get("replaces", [])][:MOST_REPLACED]
 
 
-def nights_of(warehouse: Place, series: str, last: int) -> list[dict[str, Any]]:
+def nights_of(warehouse: Place, series: str, last: int, endings: Mapping[date, dict[str, Any]]) -> list[dict[str, Any]]:
     """The `last` days up to the newest night of the series, oldest first, none before its first night.
 
-    Each is {as_of, state} and, of a published night, `run`: its run.json. The state is published, incomplete (some of
-    its files are there, and no readable run.json) or missing. Raises StoreError.
+    `endings`: of runs that published nothing, by night. Each night is {as_of, state} and, of a published one, `run`:
+    its run.json, and `damaged`: the tables that are no longer what it tells. The state is published, damaged,
+    incomplete (some of its files are there, and no readable run.json), missing, or what `endings` tell of it; those are
+    under `ending`. Raises StoreError.
     """
     tables = [table for table in warehouse.below("") if not table.startswith(".")]
     found = {day for table in tables for day in _days(warehouse, series, table)}
-    if not found:
+    known = found | endings.keys()
+    if not known:
         return []
-    newest = max(found)
-    days = [newest - timedelta(days=back) for back in range(min(last, (newest - min(found)).days + 1))]
-    nights: list[dict[str, Any]] = []
-    for day in reversed(days):
-        run = record_of(Night(warehouse, series, day)) if day in found else {}
-        state = "published" if run else "incomplete" if day in found else "missing"
-        nights.append({"as_of": day, "state": state} | ({"run": run} if run else {}))
-    return nights
+    newest = max(known)
+    days = [newest - timedelta(days=back) for back in range(min(last, (newest - min(known)).days + 1))]
+    return [_state_of(Night(warehouse, series, day), day in found, endings.get(day, {})) for day in reversed(days)]
+
+
+def _state_of(night: Night, there: bool, ending: dict[str, Any]) -> dict[str, Any]:
+    run = record_of(night) if there else {}
+    told: dict[str, Any] = {"as_of": night.as_of, "state": "incomplete" if there else ending.get("state", "missing")}
+    if run:
+        lost = damaged(night, run)
+        told |= {"state": "damaged" if lost else "published", "run": run, "damaged": lost}
+    return told | ({"ending": ending} if ending else {})
 
 
 def _days(warehouse: Place, series: str, table: str) -> list[date]:

@@ -12,7 +12,7 @@ from typing import Any
 import polars as pl
 
 from isthmus.betweenness import Estimate
-from isthmus.store import Files, Guard, Place, place
+from isthmus.store import File, Guard, Place, place
 from isthmus.tables import REFUSED, RUNS, SCORES, TIES, Table, conform
 
 __all__ = ["Night", "publish"]
@@ -65,8 +65,8 @@ def publish(
     """Publish a night and return its scores.
 
     `run` holds the columns of the table `runs`; `more` is what run.json tells beyond them; `guard` is the lease's.
-    Raises StoreError, and TryAgain when the lease was lost. A night's first publication has no run.json until all
-    else is there; how a later one switches is told in store/folder.py and store/bucket.py.
+    Raises StoreError, and TryAgain when the lease was lost. How a night switches is told in store/folder.py and
+    store/bucket.py.
     """
     marked = pl.lit(run["run_id"]).alias("run_id")
     scores = conform(
@@ -79,10 +79,26 @@ def publish(
         (REFUSED, conform(refused.with_columns(marked), REFUSED)),
         (RUNS, conform(pl.DataFrame([run], schema=RUNS.schema), RUNS)),
     ]
-    manifest = json.dumps(run | more, indent=2, default=str, ensure_ascii=False) + "\n"
-    files: Files = [
-        *((night.path(table.name), frame.write_parquet) for table, frame in frames),
-        (night.path("runs", "run.json"), lambda path: path.write_text(manifest, encoding="utf-8")),
+    told = run | more
+    files = [
+        *(_table_file(night, table, frame, told.setdefault("tables", {})) for table, frame in frames),
+        File(
+            night.path("runs", "run.json"),
+            lambda path: path.write_text(
+                json.dumps(told, indent=2, default=str, ensure_ascii=False) + "\n", encoding="utf-8"
+            ),
+            lambda path: path.write_text("{}\n"),
+        ),
     ]
     night.warehouse.publish(night.name, files, guard)
     return scores
+
+
+def _table_file(night: Night, table: Table, frame: pl.DataFrame, sizes: dict[str, Any]) -> File:
+    """The table's file. What was written is told in `sizes`, so that who comes later can tell whether it is whole."""
+
+    def write(path: Path) -> None:
+        frame.write_parquet(path)
+        sizes[table.name] = {"rows": frame.height, "bytes": path.stat().st_size}
+
+    return File(night.path(table.name), write, frame.clear().write_parquet)

@@ -5,6 +5,7 @@ from __future__ import annotations
 import hashlib
 import json
 import re
+from pathlib import Path
 from typing import Literal
 from urllib.parse import urlsplit
 
@@ -214,6 +215,11 @@ class Settings(Section):
                 "keep one"
             )
         return self
+
+    @property
+    def work(self) -> Path:
+        """The series' own folder below `run.work`."""
+        return Path(self.run.work) / f"series={self.series}"
 
     @property
     def definition(self) -> str:

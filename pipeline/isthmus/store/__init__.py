@@ -1,18 +1,19 @@
 """The one room that knows how files are put where readers look for them: folders, object stores, leases."""
 
-from isthmus.store.files import claim, examine, fresh, put, story, sweep
+from isthmus.store.files import claim, examine, forget, fresh, put, story, sweep
 from isthmus.store.folder import Folder
 from isthmus.store.leases import Lease, lease
-from isthmus.store.places import Files, Guard, Place, place
+from isthmus.store.places import File, Guard, Place, place
 
 __all__ = [
-    "Files",
+    "File",
     "Folder",
     "Guard",
     "Lease",
     "Place",
     "claim",
     "examine",
+    "forget",
     "fresh",
     "lease",
     "place",

@@ -1,9 +1,16 @@
 """A warehouse in an object store, `s3://bucket/prefix` or `abfs://container/prefix`, through fsspec's drivers.
 
-Every file of a night is made whole in a local folder and then written under its own key by one request, in the order
-given, run.json last. A reader of one table sees the old one or the new one. Across tables there is no common instant:
-the switch takes as long as the requests, and `run_id` tells rows of two runs apart. A run that is killed in between is
-finished or replaced by the next one. An object that holds the same bytes already is left alone.
+    WAREHOUSE/.nights/series=s/as_of=D/scores.parquet.9f3c..data   an object named by its content
+    WAREHOUSE/.nights/series=s/as_of=D/current.json                {"scores": "scores.parquet.9f3c..data", ..}
+    WAREHOUSE/scores/series=s/as_of=D/scores.parquet               a copy
+
+Every file of a night is made whole in a local folder and then written by one request. First come the objects named by
+their content, then the one request that replaces `current.json`, which is the instant at which the night is another:
+who reads `current.json` and then the objects beside it that it names has one whole night, old or new, wherever a run
+was killed. What the pointer before named stays for readers that still hold it. Last come the copies under the names
+that any engine finds, in the order given, run.json at the end: each is the old table or the new one, but there is no
+common instant among them; `run_id` tells rows of two runs apart. A run that is killed in between is finished or
+replaced by the next one. An object that holds the same bytes already is left alone.
 
 Two runs: before each request the object's version is read, then the lease, and the request carries the condition that
 the version is still that one. So a run that lost its lease, however late it wakes up, cannot replace what its
@@ -22,8 +29,8 @@ import hashlib
 import json
 import tempfile
 import time
-from collections.abc import Callable, Iterator
-from contextlib import contextmanager
+from collections.abc import Callable, Iterator, Sequence
+from contextlib import contextmanager, suppress
 from datetime import datetime
 from functools import cached_property
 from pathlib import Path
@@ -33,7 +40,7 @@ import fsspec
 
 from isthmus.errors import SettingsError, StoreError, TryAgain
 from isthmus.store.files import LAYOUT_FILE, fresh, layout_in, story
-from isthmus.store.places import Files
+from isthmus.store.places import File
 from isthmus.store.register import Guard, Moved, Seen
 
 __all__ = ["Bucket"]
@@ -41,9 +48,15 @@ __all__ = ["Bucket"]
 PAUSES = (0.25, 1.0, 4.0, 8.0)  # seconds before the second, third, .. attempt
 _DRIVERS = {"s3": ("s3fs", "s3"), "abfs": ("adlfs", "azure"), "az": ("adlfs", "azure")}
 _ONE_REQUEST = 2**30  # bytes
+_CURRENT = "current.json"
 _TRIES = 4  # to write an object that changes meanwhile
 _PASSING = (408, 429)  # timeout, too many requests; other statuses from 400 to 499 will not change
 T = TypeVar("T")
+
+
+def _digest(path: Path) -> str:
+    with open(path, "rb") as bytes_:
+        return hashlib.file_digest(bytes_, lambda: hashlib.blake2b(digest_size=12)).hexdigest()
 
 
 class _Nothing:
@@ -87,6 +100,12 @@ class Bucket:
         except _Absent:
             return None
 
+    def size(self, path: str) -> int | None:
+        try:
+            return int(self.look(path)["size"])
+        except _Absent:
+            return None
+
     def below(self, path: str) -> list[str]:
         try:
             found: list[str] = self._ask("list", path, lambda url: self._driver.ls(url, detail=False, refresh=True))
@@ -100,17 +119,35 @@ class Bucket:
     def sweep(self, series: str) -> None:
         """Nothing to do: an object is there whole or not at all, and parts of one are the store's to forget."""
 
-    def publish(self, night: str, files: Files, guard: Guard) -> None:
+    def publish(self, night: str, files: Sequence[File], guard: Guard) -> None:
+        home = f".nights/{night}"
         scratch = fresh(self._scratch) if self._scratch else None
         with tempfile.TemporaryDirectory(dir=scratch) as folder:
-            made = []
-            for path, write in files:
-                file = Path(folder) / Path(path).name
+            made: dict[str, Path] = {}
+            for file in files:
+                made[file.name] = Path(folder) / file.name
                 with story("write"):
-                    write(file)
-                made.append((path, file))
-            for path, file in made:
-                self._put(path, file, guard)
+                    file.write(made[file.name])
+            names = {name: f"{name}.{_digest(path)}.data" for name, path in made.items()}
+            for name, path in made.items():
+                self._put(f"{home}/{names[name]}", path, guard)
+            pointer = Path(folder) / _CURRENT
+            told = {Path(name).stem: names[name] for name in made}
+            pointer.write_text(json.dumps(told, indent=2) + "\n")
+            before = self._current(home)
+            self._put(f"{home}/{_CURRENT}", pointer, guard)
+            for file in files:
+                self._put(file.path, made[file.name], guard)
+        with suppress(StoreError, TryAgain):  # the night is published; what cannot be removed goes another time
+            for name in set(self.below(home)) - {_CURRENT, *before, *told.values()}:
+                with guard():
+                    self._ask("remove", f"{home}/{name}", lambda url: self._driver.rm_file(url))
+
+    def _current(self, home: str) -> set[str]:
+        """The objects that make up the night as readers see it."""
+        with suppress(ValueError, AttributeError):
+            return {str(name) for name in json.loads(self.fetch(f"{home}/{_CURRENT}") or b"{}").values()}
+        return set()
 
     def _put(self, path: str, file: Path, guard: Guard) -> None:
         for _ in range(_TRIES):

@@ -79,8 +79,8 @@ def put(path: Path, write: Callable[[Path], object]) -> None:
 
 
 def beside(path: Path) -> Path:
-    """A hidden name in the same folder, which `sweep` removes."""
-    return path.with_name(f"{_MARK}{uuid.uuid4().hex[:12]}-{path.name}")
+    """A hidden name in the same folder, which `sweep` removes; not of the kind that readers search for, hidden or not."""
+    return path.with_name(f"{_MARK}{uuid.uuid4().hex[:12]}-{path.name}.part")
 
 
 def flush(path: Path) -> None:
@@ -135,7 +135,7 @@ def layout_in(text: str, folder: str, layout: int, key: str) -> int:
 def claim(folder: Path, layout: int, key: str) -> None:
     """Make the folder ours to write, or raise what `examine` raises."""
     if examine(folder, layout, key) == layout:
-        for leftover in folder.glob(f"{_MARK}*-{LAYOUT_FILE}"):
+        for leftover in folder.glob(f"{_MARK}*-{LAYOUT_FILE}*"):
             forget(leftover)
         return
     put(folder / LAYOUT_FILE, lambda path: path.write_text(json.dumps({"layout": layout}) + "\n"))

@@ -4,7 +4,10 @@
     WAREHOUSE/.nights/series=s/as_of=D/current -> 000007-5f0c2a9b1e34            what readers see
     WAREHOUSE/scores/series=s/as_of=D/scores.parquet -> ../../../.nights/series=s/as_of=D/current/scores.parquet.data
 
-Replacing a night is one rename of the link `current`. Public files are links, not folders, because readers that search
+Replacing a night is one rename of the link `current`. A night that is published for the first time is a replacement
+too: of a generation of blank files, tables without rows, to which the public links lead before the switch. So it
+appears in all tables at one instant, and a run killed before it leaves tables without rows, which the next run removes.
+Public files are links, not folders, because readers that search
 folders do not all follow linked ones; files of a generation have names of their own, because readers that search for
 `**/scores.parquet` from the top look into hidden folders too. The generation before the current one stays until the
 next publication, for readers that have resolved its path. At every instant the public paths name one whole night; a
@@ -22,7 +25,7 @@ import os
 import shutil
 import time
 import uuid
-from collections.abc import Iterator
+from collections.abc import Iterable, Iterator, Sequence
 from contextlib import contextmanager, suppress
 from errno import EACCES, EAGAIN, ENOSYS, EOPNOTSUPP, EPERM
 from pathlib import Path
@@ -30,12 +33,12 @@ from pathlib import Path
 from isthmus.errors import StoreError, TryAgain
 from isthmus.store import files as _files
 from isthmus.store.files import beside, flush, forget, story
-from isthmus.store.places import Files
+from isthmus.store.places import File
 from isthmus.store.register import Guard, Moved, Seen
 
 __all__ = ["Folder"]
 
-_NIGHTS, _LEASES, _CURRENT = ".nights", ".leases", "current"
+_NIGHTS, _LEASES, _CURRENT, _BLANK = ".nights", ".leases", "current", "000000-blank"
 _PATIENCE = 10.0  # seconds to wait for a lock that is normally held for milliseconds
 
 
@@ -72,6 +75,13 @@ class Folder:
             except (FileNotFoundError, NotADirectoryError):
                 return None
 
+    def size(self, path: str) -> int | None:
+        with story("look at"):
+            try:
+                return (self.path / path).stat().st_size
+            except (FileNotFoundError, NotADirectoryError):
+                return None
+
     def below(self, path: str) -> list[str]:
         with story("list"):
             try:
@@ -87,30 +97,35 @@ class Folder:
         _files.sweep(self.path, f"{_NIGHTS}/series={series}/*")
         with story("sweep"):
             for home in (self.path / _NIGHTS / f"series={series}").glob("*"):
+                _take_blanks_away(home, self.path.glob(f"[!.]*/{home.relative_to(self.path / _NIGHTS)}/*"))
                 _sweep_generations(home)
 
-    def publish(self, night: str, files: Files, guard: Guard) -> None:
+    def publish(self, night: str, files: Sequence[File], guard: Guard) -> None:
         home = self.path / _NIGHTS / night
-        public = [self.path / path for path, _ in files]
         mine = _new_generation(home)
         links: dict[Path, Path] = {}
+        laid: list[Path] = []
         try:
             with story("write", self.path):
-                for path, write in files:
-                    target = _kept(mine, Path(path))
-                    write(target)
+                for file in files:
+                    target = _kept(mine, file.name)
+                    file.write(target)
                     flush(target)
                 for folder in (mine, home):
                     flush(folder)
-                _make_links(home, public, links)
+                _make_links(home, [self.path / file.path for file in files], links)
             with story("publish", self.path), guard():
                 _put_current_back(home)
-                _adopt(home, public, links)
-                _switch(home, mine, public, links)
+                _adopt(home, [self.path / file.path for file in files], links)
+                _lay_blanks(home, {self.path / file.path: file for file in files}, links, laid)
+                _switch(home, mine)
                 with suppress(OSError):  # the night is published; what cannot be removed goes with the next sweep
                     _sweep_generations(home)
         except BaseException:
             if _current(home) != mine.name:
+                for path in laid:
+                    forget(path)
+                _take_blanks_away(home, [])
                 shutil.rmtree(mine, ignore_errors=True)
             raise
         finally:
@@ -126,8 +141,8 @@ def _current(home: Path) -> str:
         return ""
 
 
-def _kept(generation: Path, public: Path) -> Path:
-    return generation / f"{public.name}.data"
+def _kept(generation: Path, name: str) -> Path:
+    return generation / f"{name}.data"
 
 
 def _number(generation: str) -> int:
@@ -158,7 +173,7 @@ def _make_links(home: Path, public: list[Path], links: dict[Path, Path]) -> None
     for path in public:
         path.parent.mkdir(parents=True, exist_ok=True)
         # '..' follows the folder as it really lies, which may be a link to elsewhere
-        target = os.path.relpath(_kept(home.resolve() / _CURRENT, path), path.parent.resolve())
+        target = os.path.relpath(_kept(home.resolve() / _CURRENT, path.name), path.parent.resolve())
         if not path.is_symlink() or os.readlink(path) != target:
             links[path] = beside(path)
             os.symlink(target, links[path])
@@ -179,10 +194,10 @@ def _adopt(home: Path, public: list[Path], links: dict[Path, Path]) -> None:
     there = [path for path in public if path.exists()]
     for path in there:
         try:
-            os.link(path.resolve(), _kept(kept, path))
+            os.link(path.resolve(), _kept(kept, path.name))
         except OSError:  # not every file system has hard links
-            shutil.copy2(path, _kept(kept, path))
-            flush(_kept(kept, path))
+            shutil.copy2(path, _kept(kept, path.name))
+            flush(_kept(kept, path.name))
     flush(kept)
     _point(home, kept.name)
     for path in there:
@@ -191,24 +206,47 @@ def _adopt(home: Path, public: list[Path], links: dict[Path, Path]) -> None:
             del links[path]
 
 
-def _switch(home: Path, mine: Path, public: list[Path], links: dict[Path, Path]) -> None:
-    """The switch, then the links of a first publication; undone when one of them fails."""
-    before, made = _current(home), []
+def _lay_blanks(home: Path, files: dict[Path, File], links: dict[Path, Path], laid: list[Path]) -> None:
+    """Have every public path lead somewhere, to a blank file where the night has none yet; fill `laid` with those."""
+    if not links:
+        return
+    there = home / (_current(home) or _BLANK)
+    there.mkdir(exist_ok=True)
+    for path in links:
+        if not (blank := _kept(there, path.name)).exists():
+            files[path].blank(blank)
+            flush(blank)
+    flush(there)
+    if not _current(home):
+        _point(home, there.name)
+    for path, hidden in list(links.items()):
+        laid.append(path)
+        os.replace(hidden, path)
+        del links[path]
+    for folder in {path.parent for path in files}:
+        flush(folder)
+
+
+def _take_blanks_away(home: Path, public: Iterable[Path]) -> None:
+    """If the night is still blank: remove it, and the public links that lead to it."""
+    if _current(home) == _BLANK:
+        for path in public:
+            if path.is_symlink():
+                forget(path)
+        forget(home / _CURRENT)
+    if _current(home) != _BLANK:
+        shutil.rmtree(home / _BLANK, ignore_errors=True)
+
+
+def _switch(home: Path, mine: Path) -> None:
+    """The instant at which the night is another; undone when the disk cannot hold it."""
+    before = _current(home)
     try:
         _point(home, mine.name)
-        for path, hidden in links.items():
-            made.append(path)
-            os.replace(hidden, path)
-        for folder in {home, *(path.parent for path in public)}:
-            flush(folder)
+        flush(home)
     except BaseException:
-        for path in made:
-            forget(path)
         with suppress(OSError):
-            if before:
-                _point(home, before)
-            else:
-                (home / _CURRENT).unlink()
+            _point(home, before)
         raise
 
 

@@ -69,7 +69,7 @@ class Holder:
         try:
             return cls(**json.loads(text))
         except (ValueError, TypeError):
-            return cls(token="?", host="?")
+            return cls(token="?")
 
     def text(self) -> bytes:
         return (json.dumps(asdict(self)) + "\n").encode()
@@ -81,6 +81,8 @@ class Holder:
     def __str__(self) -> str:
         if not self.token:
             return "another run, which has just ended"
+        if not self.pid:
+            return "somebody whose record cannot be read; it is taken over once it has not moved for a while"
         return f"process {self.pid} on {self.host} since {self.started} (last heartbeat {self.beat_at})"
 
 

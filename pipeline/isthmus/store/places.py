@@ -3,15 +3,30 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
+from dataclasses import dataclass
 from pathlib import Path
 from typing import Protocol
 
 from isthmus.store.register import Guard, Register
 
-__all__ = ["Files", "Guard", "Place", "place"]
+__all__ = ["File", "Guard", "Place", "place"]
 
-# Path below the place -> the function that writes it, in the order in which they are to appear.
-Files = Sequence[tuple[str, Callable[[Path], object]]]
+
+@dataclass(frozen=True)
+class File:
+    """A file of a night: its path below the place, and what writes it. Written in the order in which they are given.
+
+    `blank` writes one of the same kind that tells nothing: what readers of a folder find while a night is being
+    published for the first time.
+    """
+
+    path: str
+    write: Callable[[Path], object]
+    blank: Callable[[Path], object]
+
+    @property
+    def name(self) -> str:
+        return self.path.rpartition("/")[2]
 
 
 class Place(Protocol):
@@ -29,6 +44,9 @@ class Place(Protocol):
     def fetch(self, path: str) -> bytes | None:
         """The bytes of a file below the place, None where there is none. Raises StoreError."""
 
+    def size(self, path: str) -> int | None:
+        """Bytes of a file below the place, None where there is none. Raises StoreError."""
+
     def below(self, path: str) -> list[str]:
         """The names directly below a path, sorted; none where there is no such path. Raises StoreError."""
 
@@ -38,8 +56,8 @@ class Place(Protocol):
     def sweep(self, series: str) -> None:
         """Remove what killed runs of this series left. To be called under the lease's guard. Raises StoreError."""
 
-    def publish(self, night: str, files: Files, guard: Guard) -> None:
-        """Replace the files of a night, such as `series=s/as_of=2026-11-30`.
+    def publish(self, night: str, files: Sequence[File], guard: Guard) -> None:
+        """Replace the files of a night, such as `series=s/as_of=2026-11-30`; their names differ.
 
         Raises StoreError with what was there before still in place, and what `guard` raises.
         """
