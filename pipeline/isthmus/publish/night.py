@@ -64,7 +64,8 @@ def publish(
 ) -> pl.DataFrame:
     """Publish a night and return its scores.
 
-    `run` holds the columns of the table `runs`; `more` is what run.json tells beyond them; `guard` is the lease's.
+    `run` holds the columns of the table `runs`; `more` is what run.json tells beyond them, to which the
+    sizes of the tables are added; `guard` is the lease's.
     Raises StoreError, and TryAgain when the lease was lost. How a night switches is told in store/folder.py and
     store/bucket.py.
     """
@@ -79,9 +80,10 @@ def publish(
         (REFUSED, conform(refused.with_columns(marked), REFUSED)),
         (RUNS, conform(pl.DataFrame([run], schema=RUNS.schema), RUNS)),
     ]
+    sizes = more.setdefault("tables", {})
     told = run | more
     files = [
-        *(_table_file(night, table, frame, told.setdefault("tables", {})) for table, frame in frames),
+        *(_table_file(night, table, frame, sizes) for table, frame in frames),
         File(
             night.path("runs", "run.json"),
             lambda path: path.write_text(
