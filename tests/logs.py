@@ -11,7 +11,7 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 
 from isthmus.cluster import open_door
-from isthmus.ingest import Reading, Survey, read_window, survey
+from isthmus.ingest import Survey, Window, read_window, survey
 from isthmus.settings import PlainColumns, PlainLog
 from isthmus.watch import Watch
 
@@ -67,7 +67,7 @@ def read(
     first: date = FIRST,
     last: date = LAST,
     threads: int = 1,
-) -> Reading:
+) -> Window:
     """Survey and read the window."""
     log = log_of(path, amount=amount, id=id)
     with open_door(threads=threads) as door:
@@ -78,14 +78,14 @@ def read(
     return reading
 
 
-def ties_of(reading: Reading) -> dict[tuple[str, str], tuple[Any, ...]]:
+def ties_of(reading: Window) -> dict[tuple[str, str], tuple[Any, ...]]:
     """(sender, receiver) -> (contacts, amount, days, first_seen, last_seen)."""
     return {(row[0], row[1]): row[2:] for row in reading.ties.iter_rows()}
 
 
-def pairs_of(reading: Reading) -> dict[tuple[str, str], int]:
+def pairs_of(reading: Window) -> dict[tuple[str, str], int]:
     return {pair: more[0] for pair, more in ties_of(reading).items()}
 
 
-def refused_of(reading: Reading) -> list[tuple[str, int, str]]:
+def refused_of(reading: Window) -> list[tuple[str, int, str]]:
     return list(reading.refused.iter_rows())

@@ -692,4 +692,4 @@ def test_another_night_stands_beside(site: Site) -> None:
     assert isthmus("score", site.config, "--as-of", AS_OF + timedelta(days=1)).code == 0
     now = site.published()
     assert {name: now[name] for name in before} == before
-    assert len(now) == len(before) + 5
+    assert len(now) == len(before) + 6

@@ -11,6 +11,8 @@ from pathlib import Path
 
 import pytest
 
+from isthmus import nightly
+from isthmus.errors import AskedToStop
 from nights import AS_OF, DAYS, PAIRS, PARTIES, Said, Site, isthmus, rows
 
 ENGINE = '[score]\nengine = "networkit"\n'
@@ -158,3 +160,21 @@ def test_help_teaches() -> None:
     words = " ".join(said.out.split())
     for text in ("newest last", "incomplete", "missing", "--nights", "--all", "--json", "isthmus history configs/"):
         assert text in words
+
+
+@pytest.mark.parametrize(
+    ("fault", "code", "told"), [(ZeroDivisionError("ada@k1"), 70, "failed"), (AskedToStop(), 75, "interrupted")]
+)
+def test_every_ending_is_told_without_a_librarys_words(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, fault: BaseException, code: int, told: str
+) -> None:
+    site = Site(tmp_path, ENGINE)
+
+    def describe(*_: object) -> None:
+        raise fault
+
+    monkeypatch.setattr(nightly, "describe", describe)
+    assert site.score().code == code
+    said = history(site)
+    assert night_lines(said)[-1].split() == ["2026-03-04", told, "exit", str(code)]
+    assert "ada@k1" not in said.err

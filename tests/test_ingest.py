@@ -15,7 +15,7 @@ import pytest
 from isthmus.cluster import open_door
 from isthmus.errors import DataRefused, SettingsError, StoreError, TryAgain
 from isthmus.ingest import files, read_window, survey
-from isthmus.settings import Log
+from isthmus.settings import PlainLog
 from isthmus.watch import Watch
 from logs import (
     EPOCH,
@@ -653,7 +653,7 @@ def test_a_file_replaced_after_its_footer_was_read_is_not_mixed_in(tmp_path: Pat
     )
     log.mkdir()
     rows.write_parquet(log / "one.parquet")
-    asked, day = Log(path=str(log)), date(2026, 11, 30)
+    asked, day = PlainLog(path=str(log)), date(2026, 11, 30)
     with open_door() as door:
         found = survey(asked, day, day, door)
         rows.head(1).write_parquet(log / "one.parquet")
@@ -669,10 +669,10 @@ def test_links_are_followed_and_dead_ones_told(tmp_path: Path) -> None:
     rows.write_parquet(elsewhere / "one.parquet")
     (log / "dt=2026-11-30").symlink_to(elsewhere)
     with open_door() as door:
-        assert survey(Log(path=str(log)), day, day, door).rows == 1
+        assert survey(PlainLog(path=str(log)), day, day, door).rows == 1
         (log / "two.parquet").symlink_to(tmp_path / "nothing")
         with pytest.raises(StoreError, match=r"two\.parquet is a link to nothing"):
-            survey(Log(path=str(log)), day, day, door)
+            survey(PlainLog(path=str(log)), day, day, door)
 
 
 def test_two_columns_of_one_name_are_refused(tmp_path: Path) -> None:
@@ -680,4 +680,4 @@ def test_two_columns_of_one_name_are_refused(tmp_path: Path) -> None:
     pq.write_table(table, tmp_path / "one.parquet")
     day = date(2026, 11, 30)
     with open_door() as door, pytest.raises(DataRefused, match="2 columns named 'sender'"):
-        survey(Log(path=str(tmp_path)), day, day, door)
+        survey(PlainLog(path=str(tmp_path)), day, day, door)

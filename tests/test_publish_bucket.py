@@ -14,6 +14,7 @@ from collections import Counter
 from collections.abc import Iterator
 from contextlib import nullcontext, suppress
 from pathlib import Path
+from typing import Any
 
 import polars as pl
 import pytest
@@ -84,7 +85,7 @@ def test_the_same_bytes_are_left_alone(place: Place, s3: S3) -> None:
         publish(place, "one", held.guard)
         s3.asked.clear()
         publish(place, "one", held.guard)
-        assert not [path for path in s3.puts() if not path.endswith("series=s.json")]
+        assert not [path for path in s3.puts() if not path.endswith(("series=s.json", "under-way.json"))]
         publish(place, "two", held.guard)
     assert published(place) == dict.fromkeys(NAMES, "two")
 
@@ -266,6 +267,45 @@ def test_killed_at_any_instant_the_pointer_names_one_whole_run(tmp_path: Path, p
     assert told["wrong"] == 0
     assert told["whole"] > 2 * KILLS
     assert told["copies"] > KILLS
+    if not names_a_whole_copy(place, reader):
+        told["left undone"] += 1
+    with store.lease(place, "series=s"):
+        place.sweep("s")
+    assert names_a_whole_copy(place, reader)
+    left = {path.rpartition("/")[2] for path in reader.find(home)}
+    assert left > set(json.loads(reader.cat_file(f"{home}/current.json")).values())
+    assert len(left) <= 5  # and what the pointer before named
+
+
+def names_a_whole_copy(place: Place, reader: Any) -> bool:
+    """Whether the copies are what the pointer names."""
+    home = f"{place}/.nights/series=s/as_of=2026-03-04"
+    return all(
+        reader.exists(f"{place}/{stem}/series=s/as_of=2026-03-04/{stem}.parquet")
+        and reader.cat_file(f"{place}/{stem}/series=s/as_of=2026-03-04/{stem}.parquet")
+        == reader.cat_file(f"{home}/{name}")
+        for stem, name in json.loads(reader.cat_file(f"{home}/current.json")).items()
+    )
+
+
+@pytest.mark.parametrize("after", range(1, 12))
+def test_another_nights_run_finishes_what_a_killed_one_left(place: Place, s3: S3, after: int) -> None:
+    """Killed after so many writes. Must survive: the night, whole or not at all, once any run has begun."""
+    with store.lease(place, "series=s", beat=60) as held:
+        publish(place, "old", held.guard)
+        s3.asked.clear()
+        s3.fault = lambda *_: 503 * (len([path for path in s3.puts() if ".leases" not in path]) > after)
+        with pytest.raises(StoreError):
+            publish(place, "new", held.guard)
+        s3.fault = lambda *_: 0
+        place.sweep("s")
+    found = set(published(place).values())
+    assert found in ({"old"}, {"new"})
+    reader = driver("s3")
+    home = f"{place}/.nights/{NIGHT}"
+    named = json.loads(reader.cat_file(f"{home}/current.json"))
+    assert {path.rpartition("/")[2] for path in reader.find(home)} == {"current.json", *named.values()}
+    assert reader.cat_file(f"{home}/{named['scores']}").decode().split()[0] in found
 
 
 def whole(scores: pl.DataFrame, run: pl.DataFrame) -> bool:
@@ -303,7 +343,7 @@ def test_a_night_on_s3(tmp_path: Path, place: Place, s3: S3) -> None:
     assert site.score().code == 0
     put = {path.rpartition("/")[2] for path in s3.puts()}
     told = {name for name in put if not name.endswith(".data")}
-    assert told == {"series=s.json", "current.json", "runs.parquet", "run.json"}
+    assert told == {"series=s.json", "under-way.json", "current.json", "runs.parquet", "run.json"}
     assert {name.split(".")[0] for name in put - told} == {"runs", "run"}  # the tables are the same bytes
     assert not (tmp_path / "warehouse").exists()
     with store.lease(place, "series=s"):

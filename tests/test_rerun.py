@@ -47,6 +47,8 @@ def test_the_same_night_twice_leaves_the_same_files(site: Site) -> None:
     assert site.table("runs").select(told).equals(runs.select(told))
     assert site.table("runs")["started_at"].item() > runs["started_at"].item()
     again = run_json(site)
+    for told in (again, manifest):
+        told["tables"].pop("runs")  # how many bytes its times take
     assert {k: v for k, v in again.items() if k not in OF_THE_RUN} == {
         k: v for k, v in manifest.items() if k not in OF_THE_RUN
     }
@@ -85,12 +87,12 @@ def test_other_nights_and_series_are_left_alone(site: Site) -> None:
     assert site.score("--as-of", "2026-03-05").code == 0
     night = site.published()
     assert {name: night[name] for name in first} == first
-    assert sum("as_of=2026-03-05" in name for name in night) == 5
+    assert sum("as_of=2026-03-05" in name for name in night) == 6
     site.config.write_text(site.config.read_text().replace('series = "s"', 'series = "other"'))
     assert site.score().code == 0
     series = site.published()
     assert {name: series[name] for name in night} == night
-    assert sum("series=other" in name for name in series) == 5
+    assert sum("series=other" in name for name in series) == 6
 
 
 PROGRAM = """

@@ -5,6 +5,7 @@ from __future__ import annotations
 import itertools
 import json
 import tomllib
+from collections.abc import Iterator
 from pathlib import Path
 from typing import Any
 
@@ -13,9 +14,12 @@ from pydantic import BaseModel
 
 from isthmus.errors import SettingsError, StoreError
 from isthmus.settings import Run, Score, Settings, load, to_toml
+from isthmus.settings.kinds import KINDS
+from isthmus.settings.section import Section, files_of
 from nights import isthmus
 
-EXAMPLE = Path(__file__).parent.parent / "configs" / "example.toml"
+CONFIGS = Path(__file__).parent.parent / "configs"
+EXAMPLE = CONFIGS / "example.toml"
 LEAST = 'series = "s"\n[log]\npath = "log"\n'
 
 
@@ -56,7 +60,7 @@ WRONG = {
     "no such engine": (LEAST + '[score]\nengine = "x"', ['score.engine = "x"', "networkit"]),
     "no such distance": (LEAST + '[graph]\ndistance = "km"', ['graph.distance = "km"', "'contacts'"]),
     "no such gate": (LEAST + '[gates]\nrefused = "no"', ['gates.refused = "no"', "'stop'", "'warn'", "'off'"]),
-    "no such kind": (LEAST + 'kind = "fax"', ['log.kind = "fax"', "'plain'"]),
+    "no such kind": (LEAST + 'kind = "fax"', ['log.kind = "fax"', "one of plain, email, calls, payments"]),
     "memory": (LEAST + '[run]\nmemory = "lots"', ['run.memory = "lots"', "a number and KiB, MiB, GiB or TiB"]),
     "series": ('series = "Año 1"\n[log]\npath = "x"', ['series = "Año 1"', "small letters, digits, - and _"]),
     "series that climbs": ('series = "../up"\n[log]\npath = "x"', ['series = "../up"', "small letters"]),
@@ -308,10 +312,10 @@ def with_change(change: dict[str, Any]) -> Settings:
     return Settings.model_validate(told)
 
 
-def keys_of(model: type[BaseModel], above: str = "") -> set[str]:
+def keys_of(model: type[BaseModel], above: str = "", log: str = "plain") -> set[str]:
     keys: set[str] = set()
     for name, field in model.model_fields.items():
-        kind = field.annotation
+        kind = KINDS[log] if above + name == "log" else field.annotation
         inner = isinstance(kind, type) and issubclass(kind, BaseModel)
         keys |= keys_of(kind, f"{above}{name}.") if inner else {above + name}  # type: ignore[arg-type]
     return keys
@@ -331,6 +335,28 @@ def test_definition_stays_with_where_and_how_it_runs(key: str) -> None:
     assert with_change(NO_CHANGES[key]).definition == with_change({}).definition
 
 
+def changed_by_one_key(section: Section) -> Iterator[tuple[str, bool, Section]]:
+    """Each key, whether it names a file, and the section with another value there; nothing is validated."""
+    for name, value in section:
+        if isinstance(value, Section):
+            for key, file, inner in changed_by_one_key(value):
+                yield f"{name}.{key}", file, section.model_copy(update={name: inner})
+        else:
+            other = [*value, "x"] if isinstance(value, list) else value + "x" if isinstance(value, str) else 1 - value
+            yield name, name in files_of(section), section.model_copy(update={name: other})
+
+
+@pytest.mark.filterwarnings("ignore:Pydantic serializer")
+@pytest.mark.parametrize("kind", KINDS)
+def test_definition_of_every_kind_changes_with_its_rules_and_not_with_files(kind: str) -> None:
+    settings = load(CONFIGS / f"{'example' if kind == 'plain' else kind}.toml")
+    changed = list(changed_by_one_key(settings.log))
+    assert {file for _, file, _ in changed} == {True, False}
+    for key, file, other in changed:
+        same = settings.model_copy(update={"log": other}).definition == settings.definition
+        assert same == file, key
+
+
 def test_definition_is_16_hex_digits_and_stable() -> None:
     """Written down, because tables of many nights are compared by it: change it knowingly."""
     assert with_change({}).definition == "5f93736df0d19a8b"
@@ -339,9 +365,10 @@ def test_definition_is_16_hex_digits_and_stable() -> None:
 # --- the example ---------------------------------------------------------------------------------------------------
 
 
-def test_example_equals_the_models() -> None:
+@pytest.mark.parametrize("name", ["example", "email", "calls", "payments"])
+def test_examples_equal_the_models(name: str) -> None:
     """Each key with its comment, unit and default. After a change of the models, write the file again with to_toml."""
-    text = EXAMPLE.read_text(encoding="utf-8")
+    text = (CONFIGS / f"{name}.toml").read_text(encoding="utf-8")
     assert to_toml(Settings.model_validate(tomllib.loads(text))) == text
 
 

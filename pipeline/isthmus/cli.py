@@ -229,8 +229,8 @@ def history(
     """The recent nights, newest last: what each published, from what, and how sure.
 
     Reads no log. A night is `published`, `damaged` (a table is no longer what was published; run it again),
-    `incomplete` (a run was killed while publishing; run it again), `stopped` (by a gate) or `failed`, as the work
-    folder tells, or `missing` (no run came to an end).
+    `incomplete` (a run was killed while publishing; run it again), `stopped` (by a gate), `failed` or
+    `interrupted`, as the work folder tells, or `missing` (no run came to an end).
 
     \b
     Examples

@@ -10,7 +10,7 @@ from pathlib import Path
 from typing import Any
 
 from isthmus import store
-from isthmus.errors import GateStopped, IsthmusError, StoreError
+from isthmus.errors import AskedToStop, GateStopped, IsthmusError, StoreError, exit_code_of
 from isthmus.watch import Watch
 
 __all__ = ["endings", "told"]
@@ -25,11 +25,13 @@ def told(work: Path, as_of: date, watch: Watch) -> Iterator[None]:
     path = work / "endings" / f"{as_of}.json"
     try:
         yield
-    except IsthmusError as error:
+    except BaseException as error:
+        known = isinstance(error, IsthmusError | AskedToStop)  # a library's message may quote what it worked on
+        stopped = "interrupted" if isinstance(error, AskedToStop | KeyboardInterrupt) else "failed"
         ending = {
-            "state": "stopped" if isinstance(error, GateStopped) else "failed",
-            "exit_code": error.exit_code,
-            "error": str(error),
+            "state": "stopped" if isinstance(error, GateStopped) else stopped,
+            "exit_code": exit_code_of(error),
+            "error": str(error) if known else type(error).__name__,
             "gates": watch.gates,
             "at": datetime.now(UTC).isoformat(timespec="seconds"),
         }

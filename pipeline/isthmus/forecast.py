@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
-from datetime import date, timedelta
+from datetime import date
 from math import log
 
 from isthmus import store
@@ -12,9 +12,9 @@ from isthmus.cluster import open_door
 from isthmus.errors import DataRefused, GateStopped
 from isthmus.gates import Gatekeeper
 from isthmus.graph import Graph
-from isthmus.ingest import Sample, Survey, drift, in_window, sample_ties, survey
+from isthmus.ingest import Sample, Survey, Window, drift, in_window, sample_window, survey
 from isthmus.publish import Night, counted_before, reference, volume_of
-from isthmus.settings import Settings
+from isthmus.settings import Settings, mapped
 from isthmus.tables import LAYOUT
 
 __all__ = ["Forecast", "foresee"]
@@ -34,8 +34,7 @@ class Forecast:
     last_day: date
     found: Survey
     sampled_rows: int
-    outcomes: dict[str, dict[str, int]]
-    days: tuple[date, ...]
+    window: Window
     parties: int
     ties: int
     plan: Plan
@@ -53,14 +52,15 @@ def foresee(settings: Settings, first_day: date, last_day: date) -> Forecast:
     store.examine(settings.work, LAYOUT, "run.work")
     with open_door(threads=settings.run.threads) as door:
         found = survey(settings.log, first_day, last_day, door)
-    sample = sample_ties(found, settings.log, first_day, last_day, SAMPLE_ROWS)
-    if sample.ties.is_empty():
-        told = [f"{rows} {reason}" for kind in sample.outcomes.values() for reason, rows in kind.items()]
+    sample = sample_window(found, settings.log, first_day, last_day, SAMPLE_ROWS)
+    window = sample.window
+    if window.ties.is_empty():
+        told = [f"{rows} {reason}" for kind in window.outcomes.values() for reason, rows in kind.items()]
         raise DataRefused(
             f"no usable row of {first_day}..{last_day} among {sample.rows} looked at: {', '.join(told) or 'no row'}; "
             "check --as-of, window.days and log.columns"
         )
-    graph = Graph.from_ties(sample.ties, directed=settings.graph.directed, distance=settings.graph.distance)
+    graph = Graph.from_ties(window.ties, directed=settings.graph.directed, distance=settings.graph.distance)
     plan = make_plan(graph, settings.score, settings.run.threads, settings.run.memory_bytes)
     parties, ties = graph.n, graph.ties
     if sample.rows < found.rows:
@@ -69,9 +69,7 @@ def foresee(settings: Settings, first_day: date, last_day: date) -> Forecast:
         parties, ties = _grown(half.n, graph.n, growth), _grown(half.ties, graph.ties, growth)
         plan = _scaled(plan, (parties * ties) / (graph.n * graph.ties), ties / graph.ties)
     warnings, stopped = _gates(settings, first_day, last_day, found, sample)
-    return Forecast(
-        first_day, last_day, found, sample.rows, sample.outcomes, sample.days, parties, ties, plan, warnings, stopped
-    )
+    return Forecast(first_day, last_day, found, sample.rows, window, parties, ties, plan, warnings, stopped)
 
 
 def _gates(
@@ -81,15 +79,14 @@ def _gates(
     whole = sample.rows >= found.rows
     night = Night.of(settings.run.warehouse, settings.series, last_day)
     before = reference(night)
-    used = [theirs for theirs in settings.log.columns.model_dump().values() if theirs]
-    days = [first_day + timedelta(days=at) for at in range((last_day - first_day).days + 1)]
+    used = list(mapped(settings.log.columns).values())
     warnings: list[str] = []
     try:
         Gatekeeper(settings.gates, warnings.append).after_reading(
-            rows=in_window(sample.outcomes),
-            refused=sample.outcomes["refused"],
-            missing_days=tuple(day for day in days if day not in sample.days) if whole else (),
-            volume=volume_of(night) | sample.volume if whole else {},
+            rows=in_window(sample.window.outcomes),
+            refused=sample.window.outcomes["refused"],
+            missing_days=sample.window.missing_days if whole else (),
+            volume=volume_of(night) | sample.window.volume if whole else {},
             volume_before=(before.volume if before else {}) | counted_before(night) if whole else {},
             last_day=last_day,
             drift=drift(before.columns, found.schema, used) if before and before.columns else {},

@@ -34,7 +34,7 @@ from isthmus.publish import (
     run_row,
     volume_of,
 )
-from isthmus.settings import Settings
+from isthmus.settings import Settings, mapped
 from isthmus.signals import follow
 from isthmus.tables import LAYOUT
 from isthmus.watch import Watch
@@ -130,7 +130,6 @@ def _measured_and_published(
             found = survey(settings.log, first_day, last_day, door)
         reading = read_window(found, settings.log, first_day, last_day, work, door, watch, deadline.reading)
         watch.know(rows_read=reading.rows_read, **{f"rows_{name}": reading.rows(name) for name in reading.outcomes})
-        used = [theirs for theirs in settings.log.columns.model_dump().values() if theirs]
         gatekeeper.after_reading(
             rows=reading.rows_in_window,
             refused=reading.outcomes["refused"],
@@ -138,7 +137,9 @@ def _measured_and_published(
             volume=volume_of(night) | reading.volume,
             volume_before=(before.volume if before else {}) | counted_before(night),
             last_day=last_day,
-            drift=drift(before.columns, found.schema, used) if before and before.columns else {},
+            drift=drift(before.columns, found.schema, mapped(settings.log.columns).values())
+            if before and before.columns
+            else {},
             before=before,
         )
         with watch.stage("graph"):
@@ -178,6 +179,7 @@ def _measured_and_published(
             estimate=estimate,
             parties=parties,
             ties=reading.ties,
+            known=reading.parties,
             refused=reading.refused,
             top=settings.score.top,
             more=more,

@@ -88,9 +88,10 @@ def _sentence(text: str) -> str:
 
 
 def _reasons(console: Console, outcomes: dict[str, dict[str, int]]) -> None:
-    for outcome in ("refused", "filtered"):
+    """Every row that is not used, by name; a duplicate whose reason is that it is one says it once."""
+    for outcome in ("refused", "filtered", "duplicate"):
         for reason, rows in outcomes.get(outcome, {}).items():
-            console.say(f"  {outcome} {number(rows):>9}  {reason}")
+            console.say(f"  {outcome:<9} {number(rows):>11}  {reason if reason != outcome else ''}".rstrip())
 
 
 def how_to_go_on(console: Console, outcome: Outcome, config: Path) -> None:
@@ -116,10 +117,12 @@ def forecast(console: Console, settings: Settings, seen: Forecast) -> None:
         f"in {len(found.parts)} parts; {found.skipped_files} files cannot hold the window"
     )
     if seen.whole:
-        console.say(f"  all rows were looked at; {len(seen.days)} of {days} days have usable rows")
+        console.say(
+            f"  all rows were looked at; {days - len(seen.window.missing_days)} of {days} days have usable rows"
+        )
     else:
         console.say(f"  {number(seen.sampled_rows)} rows were looked at; the rest is extrapolated")
-    _reasons(console, seen.outcomes)
+    _reasons(console, seen.window.outcomes)
     console.say(f"Graph: {about}{number(seen.parties)} parties, {about}{number(seen.ties)} ties")
     console.say(f"Method: {plan.method} (engine {plan.engine}). {_sentence(plan.reason)}")
     console.say(
@@ -139,8 +142,8 @@ def forecast(console: Console, settings: Settings, seen: Forecast) -> None:
             "bytes": found.bytes,
             "rows": found.rows,
             "rows_looked_at": seen.sampled_rows,
-            "days_with_rows": len(seen.days) if seen.whole else None,
-            "outcomes": seen.outcomes,
+            "days_with_rows": days - len(seen.window.missing_days) if seen.whole else None,
+            "outcomes": seen.window.outcomes,
             "parties": seen.parties,
             "ties": seen.ties,
             "method": plan.method,

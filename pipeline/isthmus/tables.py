@@ -114,6 +114,26 @@ TIES = Table(
     ),
 )
 
+PARTIES = Table(
+    "parties",
+    "one row per party of the window: what kind of party it is, as the log and the user's tables tell",
+    ("party",),
+    (
+        _text("party", "the key after normalising"),
+        _text("kind", "party (nothing is known), person, account, role, short code, machine, bulk sender or hub"),
+        _text("side", "internal or external to the organisation; unknown where nothing tells"),
+        _text("label", "what a table of the user's calls it, such as payroll; null: nothing", nullable=True),
+        Column(
+            "fully_observed",
+            pl.Boolean(),
+            "whether the log can hold all its contacts; false of external parties, whose betweenness reads low; null "
+            "where nothing tells",
+            nullable=True,
+        ),
+        RUN_ID,
+    ),
+)
+
 REFUSED = Table(
     "refused",
     "one row per log row that could not be used, with the place to look; it never repeats the row's content",
@@ -147,11 +167,21 @@ RUNS = Table(
         _text("stopped_because", "what ended the sampling"),
         _count("parties", "in the graph", "parties"),
         _count("ties", "in the graph: ordered pairs when directed, unordered when not", "ties"),
-        _count("rows_read", "= rows_used + rows_refused + rows_filtered + rows_duplicate", "log rows"),
+        _count(
+            "rows_read",
+            "= rows_used + rows_refused + rows_filtered + rows_duplicate; a row that names n receivers counts n times",
+            "log rows",
+        ),
         _count("rows_used", "counted in the ties", "log rows"),
         _count("rows_refused", "could not be understood; see the table refused", "log rows"),
-        _count("rows_filtered", "left out on purpose: self-contacts, and rows of days outside the window", "log rows"),
+        _count("rows_filtered", "left out on purpose, see outcomes; rows of days outside the window too", "log rows"),
         _count("rows_duplicate", "a row with the same id was counted already", "log rows"),
+        Column(
+            "outcomes",
+            pl.List(pl.Struct({"outcome": pl.String, "reason": pl.String, "rows": pl.Int64})),
+            "every filter, refusal and duplicate by name; the rows add up to rows_read",
+            "log rows",
+        ),
         _text("warnings", "what a person should know of this night; empty when nothing"),
         Column(
             "gates",
@@ -171,7 +201,7 @@ RUNS = Table(
         _moment("finished_at", "when the tables were ready to publish"),
     ),
 )
-TABLES = {table.name: table for table in (SCORES, TIES, REFUSED, RUNS)}
+TABLES = {table.name: table for table in (SCORES, TIES, PARTIES, REFUSED, RUNS)}
 
 
 def conform(frame: pl.DataFrame, table: Table) -> pl.DataFrame:

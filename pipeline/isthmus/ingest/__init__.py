@@ -2,17 +2,17 @@
 
 from isthmus.ingest.columns import drift
 from isthmus.ingest.files import Survey, holds, states_of, survey
-from isthmus.ingest.window import Reading, Sample, in_window, read_window, sample_ties
+from isthmus.ingest.window import Sample, Window, in_window, read_window, sample_window
 
 __all__ = [
-    "Reading",
     "Sample",
     "Survey",
+    "Window",
     "drift",
     "holds",
     "in_window",
     "read_window",
-    "sample_ties",
+    "sample_window",
     "states_of",
     "survey",
 ]

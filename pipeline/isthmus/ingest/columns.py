@@ -30,13 +30,7 @@ class Kind:
         return self.family == other.family and self.zoned == other.zoned
 
 
-_WANTED = {
-    "sender": ("string", "integer"),
-    "receiver": ("string", "integer"),
-    "time": ("timestamp", "date"),
-    "amount": ("number", "integer"),
-    "id": ("string", "integer"),
-}
+_WORDS = {"strings": "list of strings"}
 _HINTS = {
     "number": "keys are never floats, because 7 and 7.0 must be one party: cast it to an integer or a string",
     "integer": "a count has no unit or zone: write it as a timestamp",
@@ -44,16 +38,16 @@ _HINTS = {
 }
 
 
-def kind_of(found: pa.DataType, ours: str, theirs: str, file: str) -> Kind:
-    """Classify a column, or raise DataRefused when it cannot serve as `ours`."""
+def kind_of(found: pa.DataType, ours: str, theirs: str, file: str, wanted: tuple[str, ...]) -> Kind:
+    """Classify a column, or raise DataRefused when it is of no `wanted` type and so cannot serve as `ours`."""
     kind = _classify(found)
-    if kind.family not in (*_WANTED[ours], "empty"):
+    if kind.family not in (*wanted, "empty"):
         hint = _HINTS.get(kind.family, "write it with one of these types")
         raise DataRefused(
             f"log file {file}: column {theirs!r} (log.columns.{ours}) holds {found}, but "
-            f"{' or '.join(_WANTED[ours])} is needed; {hint}"
+            f"{' or '.join(_WORDS.get(family, family) for family in wanted)} is needed; {hint}"
         )
-    if ours == "amount" and kind.family == "integer":
+    if "number" in wanted and kind.family == "integer":
         return Kind("number", kind.text)
     return kind
 
@@ -73,6 +67,11 @@ def _classify(found: pa.DataType) -> Kind:
         return Kind("integer", text)
     if pa.types.is_floating(values) or pa.types.is_decimal(values):
         return Kind("number", text)
+    if pa.types.is_boolean(values):
+        return Kind("boolean", text)
+    if pa.types.is_list(values) or pa.types.is_large_list(values):
+        inner = _classify(values.value_type).family
+        return Kind("strings" if inner in ("string", "empty") else "other", text)
     if pa.types.is_null(values):
         return Kind("empty", text)
     return Kind("other", text)

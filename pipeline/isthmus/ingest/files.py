@@ -21,7 +21,7 @@ import pyarrow.parquet as pq
 from isthmus.cluster import Door
 from isthmus.errors import DataRefused, SettingsError, StoreError
 from isthmus.ingest.columns import DAY, Kind, kind_of
-from isthmus.settings import Log
+from isthmus.settings import Log, mapped, types_of
 
 __all__ = ["LogFile", "Part", "Survey", "holds", "open_parquet", "states_of", "survey"]
 
@@ -110,6 +110,7 @@ class _Look:
     root: str
     paths: tuple[str, ...]
     columns: dict[str, str]
+    types: dict[str, tuple[str, ...]]
 
 
 def survey(log: Log, first_day: date, last_day: date, door: Door) -> Survey:
@@ -125,8 +126,10 @@ def survey(log: Log, first_day: date, last_day: date, door: Door) -> Survey:
             f"{log.path} has {len(paths)} Parquet files, but no partition for {first_day}..{last_day}; "
             "check --as-of, window.days, and that the log has arrived"
         )
-    mapped = {ours: theirs for ours, theirs in log.columns.model_dump().items() if theirs}
-    looks = [_Look(root, tuple(near[at : at + FILES_PER_TASK]), mapped) for at in range(0, len(near), FILES_PER_TASK)]
+    columns, types = mapped(log.columns), types_of(log.columns)
+    looks = [
+        _Look(root, tuple(near[at : at + FILES_PER_TASK]), columns, types) for at in range(0, len(near), FILES_PER_TASK)
+    ]
     files = [file for found in door.run(_look, looks) for file in found]
     _agree(files)
     lowest, highest = _microseconds(first_day), _microseconds(last_day + timedelta(days=1))
@@ -242,15 +245,15 @@ def state_of(path: str, name: str) -> tuple[int, int]:
 
 
 def _look(look: _Look) -> list[LogFile]:
-    return [_footer(path, os.path.relpath(path, look.root), look.columns) for path in look.paths]
+    return [_footer(path, os.path.relpath(path, look.root), look) for path in look.paths]
 
 
-def _footer(path: str, name: str, columns: dict[str, str]) -> LogFile:
+def _footer(path: str, name: str, look: _Look) -> LogFile:
     state = state_of(path, name)
     with open_parquet(path, name) as parquet:
         schema = parquet.schema_arrow
         kinds: dict[str, Kind] = {}
-        for ours, theirs in columns.items():
+        for ours, theirs in look.columns.items():
             if schema.names.count(theirs) > 1:
                 raise DataRefused(
                     f"log file {name} has {schema.names.count(theirs)} columns named {theirs!r} (log.columns.{ours}); "
@@ -263,8 +266,8 @@ def _footer(path: str, name: str, columns: dict[str, str]) -> LogFile:
                     f"log file {name} has no column {theirs!r} (log.columns.{ours}); {hint}. If the log has changed, "
                     "correct log.columns"
                 )
-            kinds[ours] = kind_of(schema.field(theirs).type, ours, theirs, name)
-        times = _time_bounds(parquet.metadata, columns["time"])
+            kinds[ours] = kind_of(schema.field(theirs).type, ours, theirs, name, look.types[ours])
+        times = _time_bounds(parquet.metadata, look.columns["time"])
         return LogFile(path, name, state, kinds, tuple(times), {field.name: str(field.type) for field in schema})
 
 

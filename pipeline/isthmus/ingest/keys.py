@@ -1,4 +1,4 @@
-"""Party keys as whole numbers: each distinct key is normalised once, not once a row."""
+"""Party keys as whole numbers: each distinct key goes through the log's reading once a part, not once a row."""
 
 from __future__ import annotations
 
@@ -8,51 +8,68 @@ import numpy as np
 import polars as pl
 import pyarrow as pa
 
-__all__ = ["code_columns", "shared_book"]
+from isthmus.readings import Reading
+
+__all__ = ["ABOUT", "code_sides", "shared_book"]
+
+# What is known of a party besides its key.
+ABOUT = ("kind", "side", "label")
+SIDES = ("sender", "receiver")
 
 
-def code_columns(columns: dict[str, pa.ChunkedArray]) -> tuple[pl.Series, pl.DataFrame]:
-    """The book of usable keys, and for each column its codes in that book and whether the row had none.
+def code_sides(contacts: pl.DataFrame, reading: Reading) -> tuple[pl.DataFrame, pl.DataFrame, list[str]]:
+    """The book of the parties, the contacts with positions in it for their sides, and what can be wrong with a side.
 
-    Returns (book, frame). The frame has, per column name, `<name>` (position in the book, null when unusable) and
-    `<name>_null` (the log has no value there).
+    The book has `party` (distinct) and ABOUT. For each side the contacts get `<side>` (UInt32; null when unusable),
+    `_<side>_null` (the log has no value there) and `_<side>_fault` (which of the returned texts; null: none).
     """
-    arrays = [_decoded(column) for column in columns.values()]
-    if len({array.type for array in arrays}) > 1:
-        arrays = [array.cast(pa.large_string()) for array in arrays]
-    chunks = [chunk for array in arrays for chunk in array.chunks]
-    raw, codes = _encoded(pa.chunked_array(chunks, arrays[0].type))
-    missing = codes.is_null()
-    book = raw.cast(pl.String)
-    clean = normalise(book)
-    usable = clean.str.len_bytes() > 0
-    if (clean == book).filter(usable).all():
-        book, places = book.filter(usable), (usable.cum_sum() - 1).cast(pl.UInt32).set(~usable, None)
+    both = pl.concat([contacts[side].rename("raw") for side in SIDES]).cast(pl.Categorical(pl.Categories.random()))
+    places, distinct = both.to_physical(), both.drop_nulls().unique()
+    raw = pl.DataFrame({"raw": distinct.cast(pl.String), "at": distinct.to_physical()}).sort("at")["raw"]
+    told = reading.keys(raw)
+    key, usable = told["key"], told["key"].is_not_null()
+    why = told["fault"].fill_null("is empty").set(usable, None)
+    faults = why.drop_nulls().unique().sort().to_list()
+    fault = why.cast(pl.Enum(faults)).to_physical().cast(pl.UInt8)
+    if key.drop_nulls().is_unique().all():
+        book = told.filter(usable).select(pl.col("key").alias("party"), *ABOUT)
+        codes = (usable.cum_sum() - 1).cast(pl.UInt32).set(~usable, None)
     else:  # some keys are equal only once normalised
-        book, places = _encoded(clean.set(~usable, None).to_arrow())
-    codes = places.gather(codes)
-    coded, start = {}, 0
-    for name, array in zip(columns, arrays, strict=True):
-        coded[name] = codes.slice(start, len(array)).alias(name)
-        coded[f"{name}_null"] = missing.slice(start, len(array))
-        start += len(array)
-    return book.alias("party"), pl.DataFrame(coded)
+        party, codes = _encoded(key.to_arrow())
+        book = _about(party, [codes], [told])
+    sides: dict[str, pl.Series] = {}
+    start = 0
+    for side in SIDES:
+        own = places.slice(start, contacts.height)
+        sides |= {side: codes.gather(own), f"_{side}_null": own.is_null(), f"_{side}_fault": fault.gather(own)}
+        start += contacts.height
+    return book, contacts.with_columns(**sides), faults
 
 
-def normalise(values: pl.Series) -> pl.Series:
-    """A key as it counts: without the blanks around it that fixed-width exports leave."""
-    return values.str.strip_chars()
-
-
-def shared_book(books: Sequence[pl.Series]) -> tuple[pl.Series, list[pl.Series]]:
-    """All keys of some books, sorted by their bytes, each once; and for each book where its keys are (UInt32)."""
-    keys, codes = _encoded(pl.concat([book.alias("party") for book in books], rechunk=False).to_arrow())
+def shared_book(books: Sequence[pl.DataFrame]) -> tuple[pl.DataFrame, list[pl.Series]]:
+    """One book of all parties, sorted by their keys' bytes, each once; and for each book where its are (UInt32)."""
+    keys, codes = _encoded(pl.concat([book["party"] for book in books], rechunk=False).to_arrow())
     order = keys.arg_sort()
     rank = pl.Series(np.empty(len(keys), np.uint32)).scatter(order, np.arange(len(keys), dtype=np.uint32))
     places = rank.gather(codes)
     ends = np.cumsum([len(book) for book in books])
     parts = [places.slice(end - len(book), len(book)) for end, book in zip(ends, books, strict=True)]
-    return keys.gather(order).alias("party"), parts
+    return _about(keys.gather(order), parts, books), parts
+
+
+def _about(parties: pl.Series, places: Sequence[pl.Series], books: Sequence[pl.DataFrame]) -> pl.DataFrame:
+    """The book of `parties`, with what the books say of them; where they differ the later kind and side win."""
+    told = pl.concat(
+        [book.select(ABOUT).with_columns(place=place) for book, place in zip(books, places, strict=True)]
+    ).filter(pl.col("place").is_not_null())
+    about = (
+        told.lazy()
+        .group_by("place")
+        .agg(pl.col("kind", "side").max(), pl.col("label").drop_nulls().min())
+        .sort("place")
+        .collect(engine="streaming")
+    )
+    return pl.DataFrame({"party": parties}).hstack(about.select(ABOUT))
 
 
 def _encoded(column: pa.ChunkedArray | pa.Array) -> tuple[pl.Series, pl.Series]:
@@ -62,8 +79,4 @@ def _encoded(column: pa.ChunkedArray | pa.Array) -> tuple[pl.Series, pl.Series]:
     coded = column.dictionary_encode().unify_dictionaries()
     indices = pa.chunked_array([chunk.indices for chunk in coded.chunks], pa.int32())
     values = coded.chunk(0).dictionary if coded.num_chunks else pa.array([], column.type)
-    return pl.Series("key", pl.from_arrow(values)), pl.Series("code", pl.from_arrow(indices)).cast(pl.UInt32)
-
-
-def _decoded(column: pa.ChunkedArray) -> pa.ChunkedArray:
-    return column.cast(column.type.value_type) if pa.types.is_dictionary(column.type) else column
+    return pl.Series("party", pl.from_arrow(values)), pl.Series("code", pl.from_arrow(indices)).cast(pl.UInt32)

@@ -15,11 +15,17 @@ from isthmus.errors import TryAgain
 from isthmus.ingest.columns import DAY, PER_SECOND
 from isthmus.ingest.files import Part, damaged, open_parquet, state_of
 from isthmus.ingest.kept import Facts, keep
-from isthmus.ingest.keys import code_columns
-from isthmus.ingest.ties import AMOUNT, ties_of_rows
+from isthmus.ingest.keys import SIDES, code_sides
+from isthmus.ingest.ties import ties_of_rows
+from isthmus.readings import FILTERED, REFUSED, Reading, Verdict, open_reading
+from isthmus.settings import Log, mapped, types_of
 
 __all__ = [
+    "NOTHING",
+    "USED",
     "AddTask",
+    "Counts",
+    "Judgement",
     "PartResult",
     "PartTask",
     "add_up_rows",
@@ -28,27 +34,27 @@ __all__ = [
     "day_of",
     "judge_part",
     "read_part",
-    "used_rows",
+    "settled",
 ]
 
-USED, REFUSED, FILTERED, DUPLICATE = "used", "refused", "filtered", "duplicate"
+USED = "used"
 NOTHING, SELF = "", "self-contact"
-SIDES = ("sender", "receiver")
 
 EPOCH = date(1970, 1, 1)
 # Outside these days a time is a typing error or a placeholder, not a moment in anyone's log.
 PLAUSIBLE = (date(1970, 1, 1), date(2200, 1, 1))
-LARGEST_AMOUNT = 1e18
+
+Counts = dict[tuple[int | None, str, str], int]
 
 
 @dataclass(frozen=True)
 class PartTask:
-    """Read one part into the kept folder `folder`, made below `scratch`. `columns`: our name -> theirs."""
+    """Read one part into the kept folder `folder`, made below `scratch`."""
 
     part: Part
     folder: str
     scratch: str
-    columns: Mapping[str, str]
+    log: Log
 
     def recalled(self, facts: Facts) -> PartResult:
         """The result, from what was kept of it."""
@@ -57,10 +63,10 @@ class PartTask:
 
 @dataclass(frozen=True)
 class AddTask:
-    """Add up what `read_part` left for `result`, into `folder`. `marks`: file with the places of duplicates, or ""."""
+    """Add up what `read_part` left for `result`, into `folder`. `changes`: file with what `settle` changed, or ""."""
 
     result: PartResult
-    marks: str
+    changes: str
     folder: str
     scratch: str
 
@@ -73,11 +79,11 @@ class AddTask:
 class PartResult:
     """What is known of a part. `counts`: (day since 1970 or None, outcome, reason) -> rows.
 
-    `folder` holds its book of keys and its refused rows, `ties` a file of ties for each of `days` (see ties.py).
+    `folder` holds its book of parties and its refused rows, `ties` a file of ties for each of `days` (see ties.py).
     """
 
     folder: str
-    counts: dict[tuple[int | None, str, str], int]
+    counts: Counts
     days: tuple[int, ...] = ()
     ties: str = ""
 
@@ -85,6 +91,20 @@ class PartResult:
     def recalled(cls, folder: str, ties: str, facts: Facts) -> PartResult:
         counts = {(day, outcome, reason): rows for day, outcome, reason, rows in facts["counts"]}
         return cls(folder, counts, tuple(facts["days"]), ties)
+
+
+@dataclass(frozen=True)
+class Judgement:
+    """A part's book of parties (see keys.py), and its contacts with `day`, `time` (UTC) and `reason` (an Enum; empty:
+    used). `outcomes`: reason -> outcome."""
+
+    book: pl.DataFrame
+    contacts: pl.DataFrame
+    outcomes: Mapping[str, str]
+
+    @property
+    def used(self) -> pl.DataFrame:
+        return self.contacts.filter(pl.col("reason") == NOTHING)
 
 
 def day_number(day: date) -> int:
@@ -99,45 +119,56 @@ def read_part(task: PartTask) -> PartResult:
     """Read, judge and add up one part.
 
     Keeps `refused.arrow` (row, day, reason), `parties.arrow`, and per day `ties-<day>.arrow` with codes into it (see
-    ties.py). Where the log has ids, the rows are not added up yet, because other parts may hold the same ones: they lie
-    in `rows.arrow` until `add_up_rows`.
+    ties.py). Where the log's reading settles contacts over several parts they are not added up yet: they lie in
+    `rows.arrow` until `add_up_rows`.
     """
-    book, rows = judge_part(task)
+    reading = open_reading(task.log)
+    judged = judge_part(task.part, task.log, reading)
 
     def fill(folder: Path) -> Facts:
-        refused = ~pl.col("reason").is_in([NOTHING, SELF])
-        rows.filter(refused).select("row", "day", pl.col("reason").cast(pl.String)).write_ipc(folder / "refused.arrow")
-        book.to_frame().write_ipc(folder / "parties.arrow")
-        counts, used, days = count_rows(rows), used_rows(rows), list[int]()
-        if "id" in task.columns:
-            kept = used.select("day", "sender", "receiver", "amount", "time", *_hashes())
-            kept.write_ipc(folder / "rows.arrow")
+        refused = [reason for reason, outcome in judged.outcomes.items() if outcome == REFUSED]
+        told = judged.contacts.filter(pl.col("reason").is_in(refused))
+        told.select("row", "day", pl.col("reason").cast(pl.String)).write_ipc(folder / "refused.arrow")
+        judged.book.write_ipc(folder / "parties.arrow")
+        days = list[int]()
+        if reading.settles:
+            judged.used.drop("row", "reason").write_ipc(folder / "rows.arrow")
         else:
-            days = _write_ties(used, folder)
-        return _facts(counts, days)
+            days = _write_ties(judged.used, folder)
+        return _facts(count_rows(judged), days)
 
     return task.recalled(keep(Path(task.folder), Path(task.scratch), fill))
 
 
 def add_up_rows(task: AddTask) -> PartResult:
-    """Add up the rows that `read_part` left, without the duplicates."""
+    """Add up the rows that `read_part` left, as they are once settled."""
 
     def fill(folder: Path) -> Facts:
         rows = pl.read_ipc(Path(task.result.folder) / "rows.arrow")
         counts = Counter(task.result.counts)
-        if task.marks:
-            duplicate = pl.int_range(len(rows), eager=True).is_in(pl.read_ipc(task.marks)["at"].implode())
-            for day, number in rows.filter(duplicate)["day"].value_counts().iter_rows():
-                counts[day, USED, NOTHING] -= number
-                counts[day, DUPLICATE, NOTHING] += number
-            rows = rows.filter(~duplicate)
+        if task.changes:
+            rows = settled(rows, pl.read_ipc(task.changes), counts)
         return _facts(counts, _write_ties(rows, folder))
 
     return task.recalled(keep(Path(task.folder), Path(task.scratch), fill))
 
 
+def settled(rows: pl.DataFrame, changes: pl.DataFrame, counts: Counter[tuple[int | None, str, str]]) -> pl.DataFrame:
+    """The rows that are still used after `changes` (at, outcome, reason, amount; see Reading.settle), with the amounts
+    that they now have. What became of the others is told in `counts`."""
+    told = rows.with_row_index("at").join(
+        changes.rename({"amount": "settled"}), on="at", how="left", maintain_order="left"
+    )
+    gone = pl.col("outcome") != NOTHING
+    for day, outcome, reason, number in told.filter(gone).group_by("day", "outcome", "reason").len().iter_rows():
+        counts[day, USED, NOTHING] -= number
+        counts[day, outcome, reason] += number
+    amount = pl.when(pl.col("outcome").is_null()).then("amount").otherwise("settled")
+    return told.filter(gone.fill_null(False).not_()).with_columns(amount=amount).select(rows.columns)
+
+
 def _facts(counts: Mapping[tuple[int | None, str, str], int], days: list[int]) -> Facts:
-    return {"counts": [[*key, rows] for key, rows in counts.items()], "days": days}
+    return {"counts": [[*key, rows] for key, rows in counts.items() if rows], "days": days}
 
 
 def _write_ties(rows: pl.DataFrame, folder: Path) -> list[int]:
@@ -147,51 +178,75 @@ def _write_ties(rows: pl.DataFrame, folder: Path) -> list[int]:
     return sorted(day for (day,) in days)
 
 
-def _hashes() -> list[pl.Expr]:
-    """128 bits for each id, so that the whole window's ids fit in memory; both null where a row has no id."""
-    ids = pl.col("id").cast(pl.String)
-    return [pl.when(ids.is_not_null()).then(ids.hash(seed=seed)).alias(name) for name, seed in (("a", 1), ("b", 2))]
+def judge_part(part: Part, log: Log, reading: Reading) -> Judgement:
+    """Read a part and tell what becomes of each contact. Raises DataRefused for a damaged file."""
+    contacts = reading.contacts(_load(part, log))
+    book, contacts, faults = code_sides(contacts, reading)
+    judged = reading.judge(contacts, book)
+    verdicts = [
+        *(Verdict(pl.col(f"_{side}_null"), f"{side} is null", REFUSED) for side in SIDES),
+        *(
+            Verdict(
+                pl.col(f"_{side}_fault") == at, f"{side} {fault}", FILTERED if fault in reading.left_out else REFUSED
+            )
+            for at, fault in enumerate(faults)
+            for side in SIDES
+        ),
+        Verdict(pl.col("_time_null"), "time is null", REFUSED),
+        Verdict(pl.col("time").is_null(), f"time is outside {PLAUSIBLE[0].year}..{PLAUSIBLE[1].year - 1}", REFUSED),
+        *judged.verdicts,
+        Verdict(pl.col("sender") == pl.col("receiver"), SELF, FILTERED),
+    ]
+    outcomes = {NOTHING: USED} | {verdict.reason: verdict.outcome for verdict in verdicts}
+    told = pl.Enum(list(outcomes))
+    reason = pl.coalesce(
+        *(pl.when(each.when).then(pl.lit(each.reason, told)) for each in verdicts), pl.lit(NOTHING, told)
+    )
+    marks = ("a", "b", *reading.extras) if reading.settles else ()
+    frame = (
+        judged.contacts.lazy()
+        .with_columns(
+            reason=reason,
+            day=pl.col("time").dt.epoch("d").cast(pl.Int32),
+            time=pl.col("time").dt.replace_time_zone("UTC"),
+        )
+        .select("row", "day", "reason", *SIDES, "amount", "time", *marks)
+        .collect(engine="streaming")
+    )
+    return Judgement(judged.book, frame, outcomes)
 
 
-def judge_part(task: PartTask) -> tuple[pl.Series, pl.DataFrame]:
-    """The part's book of keys and its rows with day and reason. Raises DataRefused for a damaged file."""
-    book, frame, per_day = _load(task)
-    return book, _judge(frame, per_day, "amount" in task.columns)
-
-
-def used_rows(rows: pl.DataFrame) -> pl.DataFrame:
-    """The rows to count, their amounts as decimals."""
-    amount = pl.col("amount") if "amount" in rows.columns else pl.lit(None)
-    return rows.filter(pl.col("reason") == NOTHING).with_columns(amount.cast(AMOUNT).alias("amount"))
-
-
-def count_rows(rows: pl.DataFrame) -> dict[tuple[int | None, str, str], int]:
+def count_rows(judged: Judgement) -> Counts:
     """(day, outcome, reason) -> rows."""
-    counted = rows.group_by("day", "reason").len()
-    return {(day, _outcome(reason), reason): number for day, reason, number in counted.iter_rows()}
+    counted = judged.contacts.group_by("day", "reason").len()
+    return {(day, judged.outcomes[reason], reason): number for day, reason, number in counted.iter_rows()}
 
 
-def _outcome(reason: str) -> str:
-    return {NOTHING: USED, SELF: FILTERED}.get(reason, REFUSED)
-
-
-def _load(task: PartTask) -> tuple[pl.Series, pl.DataFrame, int]:
-    """The book of keys, the part's rows under our names, and the ticks per day of `time`; row = place in the file."""
-    part = task.part
-    wanted = list(dict.fromkeys(task.columns.values()))
+def _load(part: Part, log: Log) -> pl.DataFrame:
+    """The part's rows under our names, as `Reading.contacts` wants them, and `_time_null`: whether the log has none."""
+    columns, types = mapped(log.columns), types_of(log.columns)
     with open_parquet(part.path, part.name) as parquet:
         try:
-            table = parquet.read_row_groups(part.groups, columns=wanted)
+            table = parquet.read_row_groups(part.groups, columns=list(dict.fromkeys(columns.values())))
         except (OSError, pa.ArrowException) as error:
             _unchanged(part)
             raise damaged(part.name, error) from None
     _unchanged(part)
-    arrays = {ours: table.column(theirs) for ours, theirs in task.columns.items()}
-    book, frame = code_columns({side: arrays[side] for side in SIDES})
-    rest = [pl.Series(ours, _plain(array)) for ours, array in arrays.items() if ours not in SIDES]
+    arrays = {ours: table.column(theirs) for ours, theirs in columns.items()}
+    rows = pl.DataFrame([pl.Series(ours, _plain(array)) for ours, array in arrays.items()])
+    texts = [
+        ours
+        for ours in columns
+        if "string" in types[ours] and (rows.schema[ours].is_integer() or rows.schema[ours] == pl.Null)
+    ]
+    times = [ours for ours in columns if "timestamp" in types[ours]]
     number = pl.int_range(part.first_row, part.first_row + pl.len())
-    frame = frame.with_columns(*rest).with_columns(number.alias("row"), pl.col("time").cast(pl.Int64))
-    return book, frame, _per_day(arrays["time"].type)
+    return rows.with_columns(
+        pl.col(texts).cast(pl.String),
+        *(_moment(ours, _per_day(arrays[ours].type)) for ours in times),
+        number.alias("row"),
+        pl.col("time").is_null().alias("_time_null"),
+    )
 
 
 def _unchanged(part: Part) -> None:
@@ -221,38 +276,9 @@ def _per_day(found: pa.DataType) -> int:
     return 86_400_000 if pa.types.is_date64(values) else 1
 
 
-def _judge(frame: pl.DataFrame, per_day: int, has_amount: bool) -> pl.DataFrame:
-    """Turn `time` from ticks into UTC microseconds, null where not plausible, and add day and reason.
-
-    A row gets the first reason that applies. Reasons are an Enum: a byte a row.
-    """
-    ticks, sender, receiver = pl.col("time"), pl.col("sender"), pl.col("receiver")
+def _moment(name: str, per_day: int) -> pl.Expr:
+    """Ticks as a moment, null where that is not plausible."""
+    ticks = pl.col(name).cast(pl.Int64)
     lowest, highest = (day_number(day) * per_day for day in PLAUSIBLE)
-    plausible = ticks.is_between(lowest, highest, closed="left")
     micro = ticks * (DAY // per_day) if per_day <= DAY else ticks // (per_day // DAY)
-    faults = [
-        *((pl.col(f"{side}_null"), f"{side} is null") for side in SIDES),
-        *((pl.col(side).is_null(), f"{side} is empty") for side in SIDES),
-        (ticks.is_null(), "time is null"),
-        (~plausible, f"time is outside {PLAUSIBLE[0].year}..{PLAUSIBLE[1].year - 1}"),
-    ]
-    if has_amount:
-        value = pl.col("amount").cast(pl.Float64)
-        faults += [
-            (value.is_null(), "amount is null"),
-            (~value.is_finite(), "amount is not finite"),
-            (value < 0, "amount is negative"),
-            (value > LARGEST_AMOUNT, f"amount is above {LARGEST_AMOUNT:.0e}"),
-        ]
-    faults += [(sender == receiver, SELF)]
-    told = pl.Enum([NOTHING, *(text for _, text in faults)])
-    reason = pl.coalesce(*(pl.when(fault).then(pl.lit(text, told)) for fault, text in faults), pl.lit(NOTHING, told))
-    return (
-        frame.lazy()
-        .with_columns(
-            reason=reason,
-            day=pl.when(plausible).then(ticks // per_day).cast(pl.Int32),
-            time=pl.when(plausible).then(micro).cast(pl.Datetime("us", "UTC")),
-        )
-        .collect(engine="streaming")
-    )
+    return pl.when(ticks.is_between(lowest, highest, closed="left")).then(micro).cast(pl.Datetime("us")).alias(name)

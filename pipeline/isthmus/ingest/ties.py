@@ -17,7 +17,6 @@ from isthmus.ingest.kept import Facts, keep
 from isthmus.ingest.keys import shared_book
 
 __all__ = [
-    "AMOUNT",
     "DayTask",
     "Recode",
     "Source",
@@ -27,8 +26,6 @@ __all__ = [
     "ties_of_rows",
     "window_book",
 ]
-
-AMOUNT = pl.Decimal(38, 9)
 
 _SUMS = (pl.col("contacts", "amount").sum(), pl.col("first_seen").min(), pl.col("last_seen").max())
 
@@ -82,10 +79,10 @@ def add_up_day(task: DayTask) -> None:
     def fill(folder: Path) -> Facts:
         books, tables, used = [], [], []
         for source in task.sources:
-            book = pl.read_ipc(f"{source.book}/parties.arrow")["party"]
+            book = pl.read_ipc(f"{source.book}/parties.arrow")
             ties = pl.read_ipc(f"{source.ties}/ties-{source.day}.arrow")
             codes = pl.concat([ties["sender"], ties["receiver"]]).unique().sort()
-            books.append(book.gather(codes))
+            books.append(book[codes])
             tables.append(ties)
             used.append((codes, len(book)))
         day_book, places = shared_book(books)
@@ -97,15 +94,15 @@ def add_up_day(task: DayTask) -> None:
         if len(frames) > 1:
             ties = pl.concat(frames).lazy().group_by("sender", "receiver").agg(*_SUMS).collect(engine="streaming")
         ties.write_ipc(folder / "ties.arrow")
-        day_book.to_frame().write_ipc(folder / "parties.arrow")
+        day_book.write_ipc(folder / "parties.arrow")
         return {}
 
     keep(Path(task.folder), Path(task.scratch), fill)
 
 
-def window_book(folders: Sequence[str], scratch: Path) -> tuple[pl.Series, list[Recode]]:
-    """The sorted book of some days' keys, and the tasks that bring their ties there."""
-    book, places = shared_book([pl.read_ipc(f"{folder}/parties.arrow")["party"] for folder in folders])
+def window_book(folders: Sequence[str], scratch: Path) -> tuple[pl.DataFrame, list[Recode]]:
+    """The sorted book of some days' parties, and the tasks that bring their ties there."""
+    book, places = shared_book([pl.read_ipc(f"{folder}/parties.arrow") for folder in folders])
     tasks = []
     for at, (folder, places_of_day) in enumerate(zip(folders, places, strict=True)):
         target = str(scratch / f"places-{at}.arrow")
@@ -122,7 +119,7 @@ def recode(task: Recode) -> str:
     return task.target
 
 
-def add_up(book: pl.Series, days: list[str], *, with_amounts: bool) -> pl.DataFrame:
+def add_up(book: pl.Series, days: pl.LazyFrame, *, with_amounts: bool) -> pl.DataFrame:
     """Ties over several days' tables, sorted by sender and receiver, the keys as an Enum of the book.
 
     Columns: sender, receiver, contacts, amount (float, null without amounts), days, first_seen, last_seen.
@@ -133,8 +130,7 @@ def add_up(book: pl.Series, days: list[str], *, with_amounts: bool) -> pl.DataFr
     pair = pl.col("sender").cast(pl.UInt64) * len(book) + pl.col("receiver")
     sender, receiver = pl.col("pair") // len(book), pl.col("pair") % len(book)
     return (
-        pl.scan_ipc(days)
-        .group_by(pair.alias("pair"))
+        days.group_by(pair.alias("pair"))
         .agg(*_SUMS, days=pl.len().cast(pl.Int64))
         .collect(engine="streaming")
         .sort("pair")

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import hashlib
 from collections import Counter
 from collections.abc import Callable, Sequence
 from dataclasses import asdict, dataclass
@@ -15,10 +16,8 @@ from isthmus.cluster import Door, Tick
 from isthmus.errors import DataRefused
 from isthmus.ingest.files import Survey
 from isthmus.ingest.kept import is_sound, name_for, prune, recall
+from isthmus.ingest.keys import SIDES, shared_book
 from isthmus.ingest.rows import (
-    DUPLICATE,
-    FILTERED,
-    REFUSED,
     USED,
     AddTask,
     PartResult,
@@ -29,41 +28,40 @@ from isthmus.ingest.rows import (
     day_of,
     judge_part,
     read_part,
-    used_rows,
+    settled,
 )
-from isthmus.ingest.ties import DayTask, Source, add_up, add_up_day, recode, window_book
+from isthmus.ingest.ties import DayTask, Source, add_up, add_up_day, recode, ties_of_rows, window_book
+from isthmus.readings import DUPLICATE, FILTERED, REFUSED, Reading, open_reading
 from isthmus.settings import Log
 from isthmus.store import fresh
 from isthmus.watch import Watch
 
-__all__ = ["Reading", "Sample", "read_window", "sample_ties"]
+__all__ = ["Sample", "Window", "in_window", "read_window", "sample_window"]
 
 OUTSIDE = "outside the window"
-_READING = 1  # to be raised whenever rows are read or judged otherwise, so that nothing kept before is used
+_READING = 2  # to be raised whenever rows are read or judged otherwise, so that nothing kept before is used
+# Columns that every reading settles by, beside its extras.
+_SETTLED = ("part", "at", "day", "time", "amount", "a", "b")
 AnyTask = TypeVar("AnyTask", PartTask, AddTask)
 
 
 @dataclass(frozen=True)
-class Reading:
+class Window:
     """The window as read.
 
     `ties`: one row per ordered pair (sender, receiver, contacts, amount, days, first_seen, last_seen), sorted by
-    both keys, which are of the type Enum over the sorted keys. `refused`: file, row, reason. `outcomes`: outcome ->
-    reason -> rows; the rows add up to `rows_read`. `volume`: day of the window -> its rows, whatever became of them.
+    both keys, which are of the type Enum over the sorted keys. `parties`: party, kind, side, label, in the order of the
+    keys; some may have no tie. `refused`: file, row, reason. `outcomes`: outcome -> reason -> rows; the rows add up to
+    `rows_read`. A row that names several receivers counts as so many. `volume`: day of the window -> its rows, whatever
+    became of them.
     """
 
     ties: pl.DataFrame
+    parties: pl.DataFrame
     refused: pl.DataFrame
     outcomes: dict[str, dict[str, int]]
     missing_days: tuple[date, ...]
     volume: dict[date, int]
-
-    @property
-    def parties(self) -> pl.Series:
-        """The sorted keys; some may have no tie in the window."""
-        kind = self.ties.schema["sender"]
-        assert isinstance(kind, pl.Enum)
-        return kind.categories
 
     def rows(self, outcome: str) -> int:
         return sum(self.outcomes.get(outcome, {}).values())
@@ -91,7 +89,7 @@ def read_window(
     door: Door,
     watch: Watch,
     pacing: Callable[[Tick], Tick] = lambda tick: tick,
-) -> Reading:
+) -> Window:
     """Read the surveyed parts, keep one table of ties per day below `work`, and add the window up.
 
     What a former run kept, and nothing has changed since, is used again: parts and days alike. `pacing` may watch the
@@ -106,42 +104,47 @@ def read_window(
         )
     window = range(day_number(first_day), day_number(last_day) + 1)
     scratch = fresh(work / "scratch")
+    reading = open_reading(log)
     with watch.stage("read") as plain_tick:
         tick = pacing(plain_tick)
-        results = _read_parts(found, _mapped(log), window, work, scratch, door, tick)
+        results = _read_parts(found, log, reading, window, work, scratch, door, tick)
         days = _day_tasks(results, window, work / "days", scratch)
         missing = _not_kept(list(days.values()), door)
         if not all(door.run(is_sound, _feeding(missing))):  # damaged since: what went is made anew
-            results = _read_parts(found, _mapped(log), window, work, scratch, door, tick)
+            results = _read_parts(found, log, reading, window, work, scratch, door, tick)
     outcomes = _count(results, window)
     if not outcomes.get(USED):
         raise DataRefused(_nothing_used(outcomes, first_day, last_day))
     with watch.stage("combine") as tick:
         door.run(add_up_day, missing, tick)
         book, recodes = window_book([task.folder for task in days.values()], scratch)
-        ties = add_up(book, door.run(recode, recodes), with_amounts=bool(log.columns.amount))
+        days_ties = pl.scan_ipc(door.run(recode, recodes))
+        ties = add_up(book["party"], days_ties, with_amounts=log.has_amounts)
+        ties, parties, left_out = reading.weigh(ties, _as_keyed(book, ties))
+    _leave_out(outcomes, left_out)
     refused = _refused(found, results, window)
     fresh(scratch)
     prune(work / "parts", work / "added", work / "days")
     missing_days = tuple(day_of(day) for day in window if day not in days)
-    return Reading(ties, refused, outcomes, missing_days, _volume(results, window))
+    return Window(ties, parties, refused, outcomes, missing_days, _volume(results, window))
 
 
 def _read_parts(
-    found: Survey, columns: dict[str, str], window: range, work: Path, scratch: Path, door: Door, tick: Tick
+    found: Survey, log: Log, reading: Reading, window: range, work: Path, scratch: Path, door: Door, tick: Tick
 ) -> list[PartResult]:
     """What is known of each part: kept from a former run when neither its file nor its reading has changed."""
+    told = log.columns.model_dump(), reading.fingerprint
     tasks = [
-        PartTask(part, str(work / "parts" / name_for(_READING, asdict(part), columns)), str(scratch), columns)
+        PartTask(part, str(work / "parts" / name_for(_READING, asdict(part), told)), str(scratch), log)
         for part in found.parts
     ]
-    if "id" not in columns:
+    if not reading.settles:
         return _kept_or_made(tasks, read_part, door, tick, ("refused.arrow",))
     results = _kept_or_made(tasks, read_part, door, tick, ("refused.arrow", "rows.arrow"))
-    marks = _mark_duplicates(results, window, scratch)
+    changes = _settle(reading, results, window, scratch)
     adds = [
-        AddTask(result, marked, str(work / "added" / name_for(Path(result.folder).name, digest)), str(scratch))
-        for result, (marked, digest) in zip(results, marks, strict=True)
+        AddTask(result, changed, str(work / "added" / name_for(Path(result.folder).name, digest)), str(scratch))
+        for result, (changed, digest) in zip(results, changes, strict=True)
     ]
     return _kept_or_made(adds, add_up_rows, door)
 
@@ -188,33 +191,38 @@ def _feeding(tasks: Sequence[DayTask]) -> list[tuple[str, tuple[str, ...]]]:
     return [(folder, ()) for folder in sorted({folder for task in tasks for folder in task.reads})]
 
 
-def _mapped(log: Log) -> dict[str, str]:
-    return {ours: theirs for ours, theirs in log.columns.model_dump().items() if theirs}
-
-
-def _mark_duplicates(results: Sequence[PartResult], window: range, scratch: Path) -> list[tuple[str, str]]:
-    """Of the window's rows with one id the first counts (by file name, then row).
-
-    For each part a file with the positions of the others in its rows.arrow, and a digest of them; "" where there are
-    none.
-    """
+def _settle(reading: Reading, results: Sequence[PartResult], window: range, scratch: Path) -> list[tuple[str, str]]:
+    """What the window's contacts tell only together: for each part a file with those of its rows.arrow that change, and
+    a digest of it; "" where there are none."""
+    rows = _numbered([pl.scan_ipc(f"{result.folder}/rows.arrow") for result in results])
     in_window = pl.col("day").is_between(window.start, window.stop - 1)
-    rows = [pl.scan_ipc(f"{result.folder}/rows.arrow").with_row_index("at") for result in results]
-    # first by one half of the hash: sorting plain numbers is the cheapest way to find the few that repeat
-    half = pl.concat([part.filter(in_window).select("a") for part in rows]).collect()["a"].drop_nulls().sort()
-    repeated = half.filter(half == half.shift(1)).unique()
-    if repeated.is_empty():
-        return [("", "")] * len(results)
-    suspects = [part.filter(in_window, pl.col("a").is_in(repeated.implode())).select("at", "a", "b") for part in rows]
-    found = pl.concat([part.with_columns(part=pl.lit(at)) for at, part in enumerate(suspects)]).collect()
-    later = found.filter(~pl.struct("a", "b").is_first_distinct())
-    marks = [("", "")] * len(results)
-    for (part,), positions in later.partition_by("part", as_dict=True).items():
-        target = str(scratch / f"duplicates-{part}.arrow")
-        places = positions.select("at")
-        places.write_ipc(target)
-        marks[part] = target, name_for(places["at"].to_list())
-    return marks
+    changed = reading.settle(rows.filter(in_window).select(*_SETTLED, *reading.extras))
+    changes = [("", "")] * len(results)
+    for (part,), frame in changed.sort("part", "at").partition_by("part", as_dict=True, include_key=False).items():
+        target = scratch / f"changes-{part}.arrow"
+        frame.write_ipc(target)
+        changes[part] = str(target), hashlib.blake2b(target.read_bytes(), digest_size=12).hexdigest()
+    return changes
+
+
+def _numbered(parts: Sequence[pl.LazyFrame]) -> pl.LazyFrame:
+    """All parts' rows, with `part` and `at`: which part, which place in it."""
+    return pl.concat(
+        [rows.with_row_index("at").with_columns(part=pl.lit(at, pl.UInt32)) for at, rows in enumerate(parts)]
+    )
+
+
+def _as_keyed(book: pl.DataFrame, ties: pl.DataFrame) -> pl.DataFrame:
+    """The book with its keys of the type that the ties' have."""
+    return book.with_columns(pl.col("party").cast(ties.schema["sender"]))
+
+
+def _leave_out(outcomes: dict[str, dict[str, int]], left_out: dict[str, int]) -> None:
+    """Count contacts that were used in ties as filtered after all, because a party or a tie was left out."""
+    for reason, rows in left_out.items():
+        if rows:
+            outcomes[USED][USED] -= rows
+            outcomes[FILTERED][reason] = outcomes[FILTERED].get(reason, 0) + rows
 
 
 def _count(results: Sequence[PartResult], window: range) -> dict[str, dict[str, int]]:
@@ -259,36 +267,46 @@ def _refused(found: Survey, results: Sequence[PartResult], window: range) -> pl.
 
 @dataclass(frozen=True)
 class Sample:
-    """Ties of some of the window's rows, and of the first half of those."""
+    """Some of the window's rows, and the ties of the first half of those. `window.refused` is empty."""
 
     rows: int
-    ties: pl.DataFrame
+    window: Window
     half: pl.DataFrame
-    outcomes: dict[str, dict[str, int]]
-    days: tuple[date, ...]
-    volume: dict[date, int]
 
 
-def sample_ties(found: Survey, log: Log, first_day: date, last_day: date, most_rows: int) -> Sample:
-    """Read parts spread over the window, about `most_rows` rows, into memory. Duplicates are not looked for."""
-    columns = _mapped(log)
+def sample_window(found: Survey, log: Log, first_day: date, last_day: date, most_rows: int) -> Sample:
+    """Read parts spread over the window, about `most_rows` rows, into memory, and judge them as a night would.
+
+    What several parts tell only together, such as duplicates, is found among the parts that are read.
+    """
+    reading = open_reading(log)
     window = range(day_number(first_day), day_number(last_day) + 1)
-    step = max(1, round(found.rows / most_rows))
-    frames, counts, rows = [], [], 0
-    for part in found.parts[::step]:
-        book, judged = judge_part(PartTask(part, "", "", columns))
-        counts.append(PartResult("", count_rows(judged)))
-        rows += part.rows
-        used = used_rows(judged).filter(pl.col("day").is_between(window.start, window.stop - 1))
-        keys = pl.Enum(book)
-        frames.append(
-            used.select(
-                pl.col("sender", "receiver").cat.to(keys).cast(pl.String),
-                "day",
-                contacts=pl.lit(1, pl.Int64),
-                amount=pl.col("amount").cast(pl.Float64).fill_null(0.0),
-            )
-        )
-    used = pl.concat(frames) if frames else pl.DataFrame(schema=["sender", "receiver", "day"])
-    days = tuple(day_of(day) for day in used["day"].unique().sort())
-    return Sample(rows, used, used.head(used.height // 2), _count(counts, window), days, _volume(counts, window))
+    read = found.parts[:: max(1, round(found.rows / most_rows))]
+    judged = [judge_part(part, log, reading) for part in read]
+    counts = [Counter(count_rows(each)) for each in judged]
+    book, places = shared_book([each.book for each in judged])
+    rows = []
+    for each, to in zip(judged, places, strict=True):
+        used = each.used.drop("row", "reason").filter(pl.col("day").is_between(window.start, window.stop - 1))
+        rows.append(used.with_columns(to.gather(used[side]).alias(side) for side in SIDES))
+    if reading.settles:
+        changes = reading.settle(_numbered([each.lazy() for each in rows]).select(*_SETTLED, *reading.extras))
+        rows = [
+            settled(part, changes.filter(pl.col("part") == at).drop("part"), counted)
+            for at, (part, counted) in enumerate(zip(rows, counts, strict=True))
+        ]
+    results = [PartResult("", counted) for counted in counts]
+    outcomes, used = _count(results, window), pl.concat(rows)
+    ties = _add_up(book, used, log)
+    ties, parties, left_out = reading.weigh(ties, _as_keyed(book, ties))
+    half = _add_up(book, used.head(used.height // 2), log)
+    _leave_out(outcomes, left_out)
+    days = set(used["day"])
+    missing_days = tuple(day_of(day) for day in window if day not in days)
+    volume = _volume(results, window)
+    whole = Window(ties, parties, pl.DataFrame(), outcomes, missing_days, volume)
+    return Sample(sum(part.rows for part in read), whole, half)
+
+
+def _add_up(book: pl.DataFrame, rows: pl.DataFrame, log: Log) -> pl.DataFrame:
+    return add_up(book["party"], ties_of_rows(rows).lazy(), with_amounts=log.has_amounts)

@@ -126,11 +126,16 @@ def nights_of(warehouse: Place, series: str, last: int, endings: Mapping[date, d
         return []
     newest = max(known)
     days = [newest - timedelta(days=back) for back in range(min(last, (newest - min(known)).days + 1))]
-    return [_state_of(Night(warehouse, series, day), day in found, endings.get(day, {})) for day in reversed(days)]
+    return [
+        _state_of(Night(warehouse, series, day), tables if day in found else [], endings.get(day, {}))
+        for day in reversed(days)
+    ]
 
 
-def _state_of(night: Night, there: bool, ending: dict[str, Any]) -> dict[str, Any]:
-    run = record_of(night) if there else {}
+def _state_of(night: Night, tables: list[str], ending: dict[str, Any]) -> dict[str, Any]:
+    """`tables`: those that may have a folder of the night; an empty one is what a killed run left."""
+    run = record_of(night) if tables else {}
+    there = not run and any(night.warehouse.below(f"{table}/{night.name}") for table in tables)
     told: dict[str, Any] = {"as_of": night.as_of, "state": "incomplete" if there else ending.get("state", "missing")}
     if run:
         lost = damaged(night, run)

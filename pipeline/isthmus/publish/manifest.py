@@ -12,10 +12,11 @@ from datetime import UTC, date, datetime
 from typing import Any
 
 import numpy as np
+import polars as pl
 
 from isthmus.betweenness import Estimate, Plan
 from isthmus.graph import Graph
-from isthmus.ingest import Reading, Survey
+from isthmus.ingest import Survey, Window
 from isthmus.publish.earlier import replaced
 from isthmus.publish.night import Night
 from isthmus.settings import Settings
@@ -40,12 +41,13 @@ def revision_of(before: dict[str, Any], run_id: str) -> int:
     return max(known, 1) if before.get("run_id") == run_id else known + 1
 
 
-def input_id_of(settings: Settings, as_of: date, reading: Reading) -> str:
+def input_id_of(settings: Settings, as_of: date, reading: Window) -> str:
     """A hash of all that goes into a night's measurement."""
     digest = hashlib.blake2b(digest_size=8)
     told = [settings.series, str(as_of), settings.definition, _version(), reading.outcomes, settings.score.top]
     digest.update(json.dumps(told, sort_keys=True).encode())
-    digest.update("\0".join(reading.parties).encode())
+    for column in reading.parties.iter_columns():
+        digest.update("\0".join(column.cast(pl.String).fill_null("")).encode())
     for column in reading.ties.iter_columns():
         if column.null_count() < len(column):
             digest.update(np.ascontiguousarray(column.to_physical().to_numpy()).data)
@@ -59,7 +61,7 @@ def run_row(
     plan: Plan,
     estimate: Estimate,
     graph: Graph,
-    reading: Reading,
+    reading: Window,
     watch: Watch,
     started_at: datetime,
     revision: int,
@@ -86,6 +88,11 @@ def run_row(
         "ties": graph.ties,
         "rows_read": reading.rows_read,
         **{f"rows_{outcome}": reading.rows(outcome) for outcome in ("used", "refused", "filtered", "duplicate")},
+        "outcomes": [
+            {"outcome": outcome, "reason": reason, "rows": rows}
+            for outcome, reasons in reading.outcomes.items()
+            for reason, rows in reasons.items()
+        ],
         "warnings": "; ".join(watch.warnings),
         "gates": [{key: gate[key] for key in ("gate", "state", "figure", "limit")} for gate in gates],
         "predicted_seconds": plan.predicted_seconds,
@@ -101,7 +108,7 @@ def manifest(
     settings: Settings,
     night: Night,
     found: Survey,
-    reading: Reading,
+    reading: Window,
     plan: Plan,
     watch: Watch,
     component_share: float,

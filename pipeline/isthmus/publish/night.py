@@ -13,7 +13,7 @@ import polars as pl
 
 from isthmus.betweenness import Estimate
 from isthmus.store import File, Guard, Place, place
-from isthmus.tables import REFUSED, RUNS, SCORES, TIES, Table, conform
+from isthmus.tables import PARTIES, REFUSED, RUNS, SCORES, TIES, Table, conform
 
 __all__ = ["Night", "publish"]
 
@@ -57,6 +57,7 @@ def publish(
     estimate: Estimate,
     parties: pl.DataFrame,
     ties: pl.DataFrame,
+    known: pl.DataFrame,
     refused: pl.DataFrame,
     top: int,
     more: dict[str, Any],
@@ -64,6 +65,7 @@ def publish(
 ) -> pl.DataFrame:
     """Publish a night and return its scores.
 
+    `parties` is what the graph tells of each party, `known` what the log does (party, kind, side, label).
     `run` holds the columns of the table `runs`; `more` is what run.json tells beyond them, to which the
     sizes of the tables are added; `guard` is the lease's.
     Raises StoreError, and TryAgain when the lease was lost. How a night switches is told in store/folder.py and
@@ -77,6 +79,7 @@ def publish(
     frames: list[tuple[Table, pl.DataFrame]] = [
         (SCORES, scores),
         (TIES, conform(plain_ties, TIES)),
+        (PARTIES, conform(_known(known, scores["party"]).with_columns(marked), PARTIES)),
         (REFUSED, conform(refused.with_columns(marked), REFUSED)),
         (RUNS, conform(pl.DataFrame([run], schema=RUNS.schema), RUNS)),
     ]
@@ -89,11 +92,21 @@ def publish(
             lambda path: path.write_text(
                 json.dumps(told, indent=2, default=str, ensure_ascii=False) + "\n", encoding="utf-8"
             ),
-            lambda path: path.write_text("{}\n"),
         ),
     ]
     night.warehouse.publish(night.name, files, guard)
     return scores
+
+
+def _known(parties: pl.DataFrame, keys: pl.Series) -> pl.DataFrame:
+    """Those of `keys`, as the table says it."""
+    side = pl.col("side").cast(pl.String)
+    return parties.select(
+        pl.col("party", "kind").cast(pl.String),
+        side,
+        "label",
+        fully_observed=pl.when(side != "unknown").then(side == "internal"),
+    ).filter(pl.col("party").is_in(keys.implode()))
 
 
 def _table_file(night: Night, table: Table, frame: pl.DataFrame, sizes: dict[str, Any]) -> File:

@@ -76,6 +76,14 @@ class Reading(Protocol):
         """Columns, beside a, b and amount, that `judge` adds and `settle` needs. Numbers only: they lie in files."""
 
     @property
+    def left_out(self) -> frozenset[str]:
+        """Faults of `keys` that are no mistakes of the log: their contacts are filtered, not refused."""
+
+    @property
+    def settles(self) -> bool:
+        """Whether `settle` is to be asked; else each part of the log can be added up by itself, which is quicker."""
+
+    @property
     def fingerprint(self) -> str:
         """Changes whenever the same rows may be read otherwise: with the code, the rules, or a table of the user's."""
 

@@ -4,21 +4,32 @@ Every key is declared once, in this room, with its default, unit and meaning. `c
 --settings` and the error messages are all made from these models.
 """
 
+from isthmus.settings.calls import CallsColumns, CallsLog, CallsRules
+from isthmus.settings.email import EmailColumns, EmailLog, EmailRules
 from isthmus.settings.file import load, to_toml
-from isthmus.settings.log import PlainColumns, PlainLog
+from isthmus.settings.kinds import Log
+from isthmus.settings.log import PlainColumns, PlainLog, mapped
 from isthmus.settings.models import Distance, Engine, Gate, Gates, Graph, Method, Run, Score, Settings, Signals, Window
+from isthmus.settings.payments import PaymentsColumns, PaymentsLog, PaymentsRules
 from isthmus.settings.section import types_of
 
-Log = PlainLog
-
 __all__ = [
+    "CallsColumns",
+    "CallsLog",
+    "CallsRules",
     "Distance",
+    "EmailColumns",
+    "EmailLog",
+    "EmailRules",
     "Engine",
     "Gate",
     "Gates",
     "Graph",
     "Log",
     "Method",
+    "PaymentsColumns",
+    "PaymentsLog",
+    "PaymentsRules",
     "PlainColumns",
     "PlainLog",
     "Run",
@@ -27,6 +38,7 @@ __all__ = [
     "Signals",
     "Window",
     "load",
+    "mapped",
     "to_toml",
     "types_of",
 ]

@@ -11,15 +11,19 @@ import json
 import os
 import tomllib
 from pathlib import Path
+from typing import TypeVar
 
 from pydantic import ValidationError
 from pydantic.fields import FieldInfo
 
 from isthmus.errors import SettingsError, StoreError
+from isthmus.settings.kinds import KINDS, kind_of
 from isthmus.settings.models import Run, Settings, masked
-from isthmus.settings.section import Section
+from isthmus.settings.section import Section, files_of
 
 __all__ = ["load", "to_toml"]
+
+AnySection = TypeVar("AnySection", bound=Section)
 
 
 def load(path: str | Path) -> Settings:
@@ -39,12 +43,12 @@ def load(path: str | Path) -> Settings:
     try:
         settings = Settings.model_validate(raw)
     except ValidationError as error:
-        raise SettingsError(_explain(path, error)) from None
+        raise SettingsError(_explain(path, error, kind_of(raw.get("log", {})))) from None
     home = path.resolve().parent
     run = settings.run.model_copy(
         update={key: _resolve(home, getattr(settings.run, key)) for key in ("warehouse", "work")}
     )
-    log = settings.log.model_copy(update={"path": _resolve(home, settings.log.path)})
+    log = _with_files(settings.log, home)
     files = {key: value for key, value in settings.signals if value and (key, value) != ("log", "-")}
     signals = settings.signals.model_copy(update={key: _resolve(home, value) for key, value in files.items()})
     _apart(path, log.path, run)
@@ -66,44 +70,61 @@ def _apart(path: Path, log: str, run: Run) -> None:
             )
 
 
+def _with_files(section: AnySection, home: Path) -> AnySection:
+    """The section with the files that its keys name resolved, in its inner sections too."""
+    update: dict[str, object] = {}
+    for name, value in section:
+        if isinstance(value, Section):
+            update[name] = _with_files(value, home)
+        elif value and name in files_of(section):
+            update[name] = _resolve(home, value)
+    return section.model_copy(update=update)
+
+
 def _resolve(home: Path, text: str) -> str:
     return text if "://" in text else str(home / os.path.expanduser(text))
 
 
-def _explain(path: Path, error: ValidationError) -> str:
+def _explain(path: Path, error: ValidationError, kind: str) -> str:
     """One line per fault: the key's path, the value, and what would be right."""
     lines = []
     for fault in error.errors():
         where = [str(step) for step in fault["loc"]]
+        if where[:1] == ["log"]:
+            del where[1:2]  # the kind
         key = ".".join(where) or "settings"
         if fault["type"] == "extra_forbidden":
-            known = list(_section(where[:-1]).model_fields)
+            known = list(_section(where[:-1], kind).model_fields)
             near = difflib.get_close_matches(where[-1], known, n=1, cutoff=0.5)
             hint = f"did you mean {near[0]}?" if near else f"known here: {', '.join(known)}"
             lines.append(f"{key} = {_show(fault['input'])}: unknown key; {hint}")
         elif fault["type"] == "missing":
-            lines.append(f"{key}: missing; {_meaning(where)}")
+            lines.append(f"{key}: missing; {_meaning(where, kind)}")
         elif fault["type"] == "model_type":
             lines.append(f"{key} = {_show(fault['input'])}: a section, not a value; write it as [{key}]")
+        elif fault["type"] == "union_tag_invalid":
+            lines.append(f'log.kind = "{kind}": not known; one of {", ".join(KINDS)}')
         elif fault["type"] == "value_error":
             lines.append(str(fault["ctx"]["error"]))
         else:
-            hint = _meaning(where)
+            hint = _meaning(where, kind)
             lines.append(f"{key} = {_show(fault['input'])}: {_lower(fault['msg'])}" + (f" ({hint})" if hint else ""))
     return f"settings {path}:\n" + "\n".join(f"  {line}" for line in lines)
 
 
-def _section(steps: list[str]) -> type[Section]:
+def _section(steps: list[str], kind: str) -> type[Section]:
     section: type[Section] = Settings
     for step in steps:
-        section = section.model_fields[step].annotation  # type: ignore[assignment]
+        told = section.model_fields[step].annotation
+        section = KINDS[kind] if step == "log" else told  # type: ignore[assignment]
     return section
 
 
-def _meaning(steps: list[str]) -> str:
+def _meaning(steps: list[str], kind: str) -> str:
     try:
-        field = _section(steps[:-1]).model_fields[steps[-1]]
-        return field.description or (field.annotation.__doc__ or "").strip()
+        field = _section(steps[:-1], kind).model_fields[steps[-1]]
+        section = KINDS[kind] if steps == ["log"] else field.annotation
+        return field.description or (section.__doc__ or "").strip()
     except (KeyError, AttributeError, IndexError):
         return ""
 

@@ -4,11 +4,11 @@ from __future__ import annotations
 
 from typing import Literal
 
-from pydantic import Field
+from pydantic import Field, model_validator
 
-from isthmus.settings.section import Section, column, key
+from isthmus.settings.section import Section, column, file_key, key
 
-__all__ = ["PATH", "PlainColumns", "PlainLog"]
+__all__ = ["PATH", "PlainColumns", "PlainLog", "mapped"]
 
 PATH = "folder or glob of Parquet files; a folder may hold date partitions such as dt=2026-11-30"
 
@@ -30,6 +30,25 @@ class PlainColumns(Section):
 class PlainLog(Section):
     """Where the rows come from."""
 
-    path: str = key(..., PATH, min_length=1)
+    path: str = file_key(..., PATH, min_length=1)
     kind: Literal["plain"] = key("plain", "how the rows are to be understood")
     columns: PlainColumns = Field(default_factory=PlainColumns)
+
+    @property
+    def has_amounts(self) -> bool:
+        """Whether a contact has a worth that adds up along a tie."""
+        return bool(self.columns.amount)
+
+    @model_validator(mode="after")
+    def _two_sides(self) -> PlainLog:
+        if self.columns.sender == self.columns.receiver:
+            raise ValueError(
+                f'log.columns.sender and log.columns.receiver are both "{self.columns.sender}"; '
+                "name the column of each side"
+            )
+        return self
+
+
+def mapped(columns: Section) -> dict[str, str]:
+    """Our name -> the log's, of the columns that the log has."""
+    return {ours: theirs for ours, theirs in columns.model_dump().items() if theirs}

@@ -6,13 +6,13 @@ import hashlib
 import json
 import re
 from pathlib import Path
-from typing import Literal
+from typing import Any, Literal
 from urllib.parse import urlsplit
 
 from pydantic import Field, model_validator
 
-from isthmus.settings.log import PlainLog
-from isthmus.settings.section import Section, key
+from isthmus.settings.kinds import Log
+from isthmus.settings.section import Section, files_of, key
 
 __all__ = [
     "Distance",
@@ -174,7 +174,7 @@ class Settings(Section):
         "names this run of nights, in small letters, digits, - and _; several series share one warehouse",
         pattern=r"^[a-z0-9][a-z0-9_-]{0,63}$",
     )
-    log: PlainLog
+    log: Log
     window: Window = Field(default_factory=Window)
     graph: Graph = Field(default_factory=Graph)
     score: Score = Field(default_factory=Score)
@@ -184,16 +184,11 @@ class Settings(Section):
 
     @model_validator(mode="after")
     def _possible_together(self) -> Settings:
-        columns = self.log.columns
-        if columns.sender == columns.receiver:
-            raise ValueError(
-                f'log.columns.sender and log.columns.receiver are both "{columns.sender}"; name the column of each side'
-            )
         if "://" in self.run.work:
             raise ValueError(f'run.work = "{masked(self.run.work)}": only folders are mapped into memory; name one')
         if fault := _fault_of(self.run.warehouse):
             raise ValueError(f"run.warehouse: {fault}")
-        if self.graph.distance == "amount" and not self.log.columns.amount:
+        if self.graph.distance == "amount" and not self.log.has_amounts:
             raise ValueError('graph.distance = "amount" needs log.columns.amount; name the column')
         if self.score.max_hops and self.score.engine == "networkit":
             raise ValueError(
@@ -223,8 +218,10 @@ class Settings(Section):
 
     @property
     def definition(self) -> str:
-        """16 hex digits that name everything that changes results: not where it runs, not where files lie."""
-        told = self.model_dump(mode="json", exclude={"run": True, "gates": True, "signals": True, "log": {"path"}})
+        """16 hex digits that name all settings that change results: not where it runs, not where files lie."""
+        told = self.model_dump(mode="json", exclude={"run", "gates", "signals", "log"}) | {
+            "log": _without_files(self.log)
+        }
         return hashlib.sha256(json.dumps(told, sort_keys=True).encode()).hexdigest()[:16]
 
 
@@ -245,3 +242,9 @@ def _fault_of(warehouse: str) -> str:
     if not rest.strip("/"):
         return f"{scheme}:// names no bucket; write {scheme}://BUCKET/PREFIX"
     return ""
+
+
+def _without_files(section: Section) -> dict[str, Any]:
+    """The section, and those in it, without the keys that name files."""
+    told = section.model_dump(mode="json", exclude=files_of(section))
+    return told | {name: _without_files(value) for name, value in section if isinstance(value, Section)}

@@ -6,7 +6,7 @@ from typing import Any
 
 from pydantic import BaseModel, ConfigDict, Field
 
-__all__ = ["Section", "column", "file_key", "key", "types_of"]
+__all__ = ["Section", "column", "file_key", "files_of", "key", "types_of"]
 
 
 class Section(BaseModel):
@@ -23,17 +23,28 @@ def file_key(default: Any, meaning: str, **limits: Any) -> Any:
     return Field(default=default, description=meaning, json_schema_extra={"unit": "", "file": True}, **limits)
 
 
-def column(default: str, types: str, meaning: str) -> Any:
-    """A key that names a column of the log; an empty default: the log may lack it.
+def column(default: str, types: str, meaning: str, *, optional: bool = False) -> Any:
+    """A key that names a column of the log. Where it is optional or the default is empty, "": the log lacks it.
 
     types: what it may hold, separated by blanks, of string, integer, number, boolean, timestamp, date, strings
     (a list of them).
     """
-    required = {"min_length": 1} if default else {}
-    return Field(default=default, description=meaning, json_schema_extra={"unit": "", "types": types}, **required)  # type: ignore[call-overload]
+    extra: dict[str, Any] = {"unit": "", "types": types}
+    return Field(
+        default=default,
+        description=meaning,
+        json_schema_extra=extra,
+        min_length=1 if default and not optional else None,
+    )
 
 
 def types_of(columns: Section) -> dict[str, tuple[str, ...]]:
     """Key of a section of columns -> the types that the column may have."""
     told = {name: field.json_schema_extra for name, field in type(columns).model_fields.items()}
     return {name: tuple(str(extra["types"]).split()) for name, extra in told.items() if isinstance(extra, dict)}
+
+
+def files_of(section: Section) -> set[str]:
+    """The keys of a section that name files."""
+    told = {name: field.json_schema_extra for name, field in type(section).model_fields.items()}
+    return {name for name, extra in told.items() if isinstance(extra, dict) and extra.get("file")}

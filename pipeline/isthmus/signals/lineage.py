@@ -35,7 +35,7 @@ with warnings.catch_warnings():
     from openlineage.client.uuid import generate_new_uuid
 
 from isthmus.errors import SettingsError
-from isthmus.settings import Log, Settings
+from isthmus.settings import Log, Settings, mapped
 from isthmus.signals.run import Run
 from isthmus.tables import PARTITION, TABLES, Table
 
@@ -143,8 +143,10 @@ def _place(path: str) -> tuple[str, str]:
 
 def _input(log: Log) -> InputDataset:
     namespace, name = _place(log.path)
-    columns = [(theirs, ours) for ours, theirs in log.columns.model_dump().items() if theirs]
-    fields = [schema_dataset.SchemaDatasetFacetFields(theirs, description=ours) for theirs, ours in columns]
+    fields = [
+        schema_dataset.SchemaDatasetFacetFields(theirs, description=ours)
+        for ours, theirs in mapped(log.columns).items()
+    ]
     return InputDataset(
         namespace,
         name,

@@ -9,8 +9,9 @@ their content, then the one request that replaces `current.json`, which is the i
 who reads `current.json` and then the objects beside it that it names has one whole night, old or new, wherever a run
 was killed. What the pointer before named stays for readers that still hold it. Last come the copies under the names
 that any engine finds, in the order given, run.json at the end: each is the old table or the new one, but there is no
-common instant among them; `run_id` tells rows of two runs apart. A run that is killed in between is finished or
-replaced by the next one. An object that holds the same bytes already is left alone.
+common instant among them; `run_id` tells rows of two runs apart. What a killed run left undone
+the next run of the series does: `under-way.json` tells it the night. An object that holds the same bytes already is
+left alone.
 
 Two runs: before each request the object's version is read, then the lease, and the request carries the condition that
 the version is still that one. So a run that lost its lease, however late it wakes up, cannot replace what its
@@ -30,7 +31,7 @@ import json
 import tempfile
 import time
 from collections.abc import Callable, Iterator, Sequence
-from contextlib import contextmanager, suppress
+from contextlib import contextmanager, nullcontext, suppress
 from datetime import datetime
 from functools import cached_property
 from pathlib import Path
@@ -48,7 +49,7 @@ __all__ = ["Bucket"]
 PAUSES = (0.25, 1.0, 4.0, 8.0)  # seconds before the second, third, .. attempt
 _DRIVERS = {"s3": ("s3fs", "s3"), "abfs": ("adlfs", "azure"), "az": ("adlfs", "azure")}
 _ONE_REQUEST = 2**30  # bytes
-_CURRENT = "current.json"
+_CURRENT, _UNDER_WAY = "current.json", "under-way.json"
 _TRIES = 4  # to write an object that changes meanwhile
 _PASSING = (408, 429)  # timeout, too many requests; other statuses from 400 to 499 will not change
 T = TypeVar("T")
@@ -117,7 +118,24 @@ class Bucket:
         return ConditionalObject(self, f".leases/{name}.json")
 
     def sweep(self, series: str) -> None:
-        """Nothing to do: an object is there whole or not at all, and parts of one are the store's to forget."""
+        """Finish the copies of a night that a killed run left, as its pointer names them, and forget its other objects.
+
+        An object itself is there whole or not at all, and parts of one are the store's to forget.
+        """
+        marker = f".nights/series={series}/{_UNDER_WAY}"
+        told = json.loads(self.fetch(marker) or b"{}")
+        if not told:
+            return
+        home = f".nights/{told['night']}"
+        named = self._named(home)
+        with tempfile.TemporaryDirectory() as folder:
+            for stem, path in told["copies"].items():
+                if stem in named:
+                    copy = Path(folder) / stem
+                    copy.write_bytes(self.read(f"{home}/{named[stem]}"))
+                    self._put(path, copy, nullcontext)
+        self._forget_all_but(home, set(named.values()), nullcontext)
+        self._ask("remove", marker, lambda url: self._driver.rm_file(url))
 
     def publish(self, night: str, files: Sequence[File], guard: Guard) -> None:
         home = f".nights/{night}"
@@ -128,26 +146,35 @@ class Bucket:
                 made[file.name] = Path(folder) / file.name
                 with story("write"):
                     file.write(made[file.name])
+            marker, under_way = f"{Path(home).parent}/{_UNDER_WAY}", Path(folder) / _UNDER_WAY
+            copies = {Path(file.name).stem: file.path for file in files}
+            under_way.write_text(json.dumps({"night": night, "copies": copies}) + "\n")
+            self._put(marker, under_way, guard)
             names = {name: f"{name}.{_digest(path)}.data" for name, path in made.items()}
             for name, path in made.items():
                 self._put(f"{home}/{names[name]}", path, guard)
             pointer = Path(folder) / _CURRENT
             told = {Path(name).stem: names[name] for name in made}
             pointer.write_text(json.dumps(told, indent=2) + "\n")
-            before = self._current(home)
+            before = set(self._named(home).values())
             self._put(f"{home}/{_CURRENT}", pointer, guard)
             for file in files:
                 self._put(file.path, made[file.name], guard)
-        with suppress(StoreError, TryAgain):  # the night is published; what cannot be removed goes another time
-            for name in set(self.below(home)) - {_CURRENT, *before, *told.values()}:
-                with guard():
-                    self._ask("remove", f"{home}/{name}", lambda url: self._driver.rm_file(url))
+        with suppress(StoreError, TryAgain):  # the night is published; what cannot be removed goes with the next sweep
+            self._forget_all_but(home, before | set(told.values()), guard)
+            with guard():
+                self._ask("remove", marker, lambda url: self._driver.rm_file(url))
 
-    def _current(self, home: str) -> set[str]:
+    def _named(self, home: str) -> dict[str, str]:
         """The objects that make up the night as readers see it."""
         with suppress(ValueError, AttributeError):
-            return {str(name) for name in json.loads(self.fetch(f"{home}/{_CURRENT}") or b"{}").values()}
-        return set()
+            return {stem: str(name) for stem, name in json.loads(self.fetch(f"{home}/{_CURRENT}") or b"{}").items()}
+        return {}
+
+    def _forget_all_but(self, home: str, names: set[str], guard: Guard) -> None:
+        for name in set(self.below(home)) - {_CURRENT, *names}:
+            with guard():
+                self._ask("remove", f"{home}/{name}", lambda url: self._driver.rm_file(url))
 
     def _put(self, path: str, file: Path, guard: Guard) -> None:
         for _ in range(_TRIES):

@@ -79,7 +79,7 @@ def put(path: Path, write: Callable[[Path], object]) -> None:
 
 
 def beside(path: Path) -> Path:
-    """A hidden name in the same folder, which `sweep` removes; not of the kind that readers search for, hidden or not."""
+    """A hidden name in the same folder, which `sweep` removes; not of a kind that readers search for."""
     return path.with_name(f"{_MARK}{uuid.uuid4().hex[:12]}-{path.name}.part")
 
 

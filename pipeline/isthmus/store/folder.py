@@ -5,7 +5,8 @@
     WAREHOUSE/scores/series=s/as_of=D/scores.parquet -> ../../../.nights/series=s/as_of=D/current/scores.parquet.data
 
 Replacing a night is one rename of the link `current`. A night that is published for the first time is a replacement
-too: of a generation of blank files, tables without rows, to which the public links lead before the switch. So it
+too: of a generation of blank files, tables without rows, to which the public links lead before the switch; that of
+run.json leads nowhere until then. So it
 appears in all tables at one instant, and a run killed before it leaves tables without rows, which the next run removes.
 Public files are links, not folders, because readers that search
 folders do not all follow linked ones; files of a generation have names of their own, because readers that search for
@@ -213,8 +214,9 @@ def _lay_blanks(home: Path, files: dict[Path, File], links: dict[Path, Path], la
     there = home / (_current(home) or _BLANK)
     there.mkdir(exist_ok=True)
     for path in links:
-        if not (blank := _kept(there, path.name)).exists():
-            files[path].blank(blank)
+        blank, write = _kept(there, path.name), files[path].blank
+        if write and not blank.exists():
+            write(blank)
             flush(blank)
     flush(there)
     if not _current(home):

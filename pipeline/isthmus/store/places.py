@@ -17,12 +17,12 @@ class File:
     """A file of a night: its path below the place, and what writes it. Written in the order in which they are given.
 
     `blank` writes one of the same kind that tells nothing: what readers of a folder find while a night is being
-    published for the first time.
+    published for the first time. Without one they find no such file until the night is there.
     """
 
     path: str
     write: Callable[[Path], object]
-    blank: Callable[[Path], object]
+    blank: Callable[[Path], object] | None = None
 
     @property
     def name(self) -> str:
