@@ -12,7 +12,7 @@ import pyarrow.parquet as pq
 
 from isthmus.cluster import open_door
 from isthmus.ingest import Survey, Window, read_window, survey
-from isthmus.settings import PlainColumns, PlainLog
+from isthmus.settings import PlainColumns, PlainLog, Ties
 from isthmus.watch import Watch
 
 FIRST, LAST = date(2026, 3, 1), date(2026, 3, 3)
@@ -72,7 +72,7 @@ def read(
     log = log_of(path, amount=amount, id=id)
     with open_door(threads=threads) as door:
         found = survey(log, first, last, door)
-        reading = read_window(found, log, first, last, work, door, Watch())
+        reading = read_window(found, Ties(), work, work, door, Watch())
     assert reading.rows_read == found.rows  # the counts reconcile, whatever the log
     assert reading.rows("used") == reading.ties["contacts"].sum()
     return reading

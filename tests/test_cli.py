@@ -87,7 +87,7 @@ def test_each_help_teaches(command: str, texts: list[str]) -> None:
         (["score", "a.toml", "--as-off", "x"], ["--as-off"]),
         (["score", "a.toml", "--as-of"], ["--as-of"]),
         (["check", "a.toml", "--json=yes"], ["--json"]),
-        (["columns", "score"], ["no table 'score'", "scores, ties, refused, runs"]),
+        (["columns", "score"], ["no table 'score'", "scores, ties, parties, refused, runs"]),
         (["demo", "a", "b"], ["unexpected extra argument"]),
     ],
 )
@@ -133,8 +133,8 @@ def test_score_tells_people_on_stderr_only(site: Site) -> None:
         "Series s, 2026-03-01 .. 2026-03-04: the first 7 of 7 parties by betweenness",
         "Method: exact, so each interval is the score itself.",
         "Rows: 34 read = 32 used + 1 refused + 1 filtered + 0 duplicate",
-        "refused         1  sender is empty",
-        "filtered         1  self-contact",
+        "refused             1  sender is empty",
+        "filtered            1  self-contact",
         f"Tables: {site.warehouse}",
         "not a verdict on anyone",
     ):

@@ -14,7 +14,7 @@ from isthmus.cluster import open_door
 from isthmus.errors import GateStopped
 from isthmus.gates import GATES, Gatekeeper, Reference
 from isthmus.ingest import drift, read_window, survey
-from isthmus.settings import Gates, PlainLog
+from isthmus.settings import Gates, PlainLog, Ties
 from isthmus.watch import Watch
 from nights import AS_OF, DAYS, PAIRS, Site, isthmus, rows
 
@@ -62,7 +62,7 @@ def test_rows_outside_the_window_do_not_dilute_the_refused(tmp_path: Path) -> No
     log = PlainLog(path=str(tmp_path))
     with open_door() as door:
         found = survey(log, day.date(), day.date(), door)
-        reading = read_window(found, log, day.date(), day.date(), tmp_path / "work", door, Watch())
+        reading = read_window(found, Ties(), tmp_path / "work", tmp_path / "work", door, Watch())
     assert (reading.rows_read, reading.rows_in_window) == (400, 4)
     assert reading.volume == {day.date(): 4}
     _, _, stopped = judged(rows=reading.rows_in_window, refused=reading.outcomes["refused"])

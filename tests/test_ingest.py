@@ -15,7 +15,7 @@ import pytest
 from isthmus.cluster import open_door
 from isthmus.errors import DataRefused, SettingsError, StoreError, TryAgain
 from isthmus.ingest import files, read_window, survey
-from isthmus.settings import PlainLog
+from isthmus.settings import PlainLog, Ties
 from isthmus.watch import Watch
 from logs import (
     EPOCH,
@@ -658,7 +658,7 @@ def test_a_file_replaced_after_its_footer_was_read_is_not_mixed_in(tmp_path: Pat
         found = survey(asked, day, day, door)
         rows.head(1).write_parquet(log / "one.parquet")
         with pytest.raises(TryAgain, match=r"one\.parquet was changed while it was being read"):
-            read_window(found, asked, day, day, tmp_path / "work", door, Watch())
+            read_window(found, Ties(), tmp_path / "work", tmp_path / "work", door, Watch())
 
 
 def test_links_are_followed_and_dead_ones_told(tmp_path: Path) -> None:

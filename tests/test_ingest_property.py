@@ -19,7 +19,7 @@ from isthmus.cluster import open_door
 from isthmus.errors import DataRefused
 from isthmus.ingest import files, read_window, survey
 from isthmus.nightly import run_night
-from isthmus.settings import Graph, PlainColumns, PlainLog, Run, Score, Settings, Window
+from isthmus.settings import Graph, PlainColumns, PlainLog, Run, Score, Settings, Ties, Window
 from isthmus.watch import Watch
 from logs import column
 from oracle_ingest import File, Row, micro
@@ -125,9 +125,9 @@ def test_reading_agrees_with_the_oracle(log: tuple[list[File], dict]) -> None:
         asked = write(root, found, how)
         if not expected.ties:
             with pytest.raises(DataRefused):
-                read_window(survey(asked, FIRST, LAST, door), asked, FIRST, LAST, root / "work", door, Watch())
+                read_window(survey(asked, FIRST, LAST, door), Ties(), root / "work", root / "work", door, Watch())
             return
-        reading = read_window(survey(asked, FIRST, LAST, door), asked, FIRST, LAST, root / "work", door, Watch())
+        reading = read_window(survey(asked, FIRST, LAST, door), Ties(), root / "work", root / "work", door, Watch())
         refused = list(reading.refused.iter_rows())
         ties = list(reading.ties.iter_rows())
     assert {outcome: reading.rows(outcome) for outcome in reading.outcomes if reading.rows(outcome)} == dict(

@@ -176,6 +176,8 @@ def test_defaults_are_the_contract(tmp_path: Path) -> None:
             "columns": {"sender": "sender", "receiver": "receiver", "time": "time", "amount": "", "id": ""},
         },
         "window": {"days": 28},
+        "ties": {"least_contacts": 1, "least_days": 1, "mutual": False},
+        "definitions": {},
         "graph": {"directed": True, "distance": "hops"},
         "score": {
             "method": "auto",
@@ -261,6 +263,9 @@ CHANGES: dict[str, dict[str, Any]] = {
     "log.columns.amount": {"log": {"columns": {"amount": "x"}}},
     "log.columns.id": {"log": {"columns": {"id": "x"}}},
     "window.days": {"window": {"days": 7}},
+    "ties.least_contacts": {"ties": {"least_contacts": 3}},
+    "ties.least_days": {"ties": {"least_days": 3}},
+    "ties.mutual": {"ties": {"mutual": True}},
     "graph.directed": {"graph": {"directed": False}},
     "graph.distance": {"graph": {"distance": "contacts"}},
     "score.method": {"score": {"method": "paths"}},
@@ -290,6 +295,7 @@ NO_CHANGES: dict[str, dict[str, Any]] = {
     "gates.component_change": {"gates": {"component_change": 0.5}},
     "gates.overlap": {"gates": {"overlap": "stop"}},
     "gates.overlap_limit": {"gates": {"overlap_limit": 0.9}},
+    "definitions": {"definitions": {"x": {"window": {"days": 7}}}},
     "run.warehouse": {"run": {"warehouse": "/w"}},
     "run.work": {"run": {"work": "/k"}},
     "run.workers": {"run": {"workers": 2}},
@@ -359,7 +365,7 @@ def test_definition_of_every_kind_changes_with_its_rules_and_not_with_files(kind
 
 def test_definition_is_16_hex_digits_and_stable() -> None:
     """Written down, because tables of many nights are compared by it: change it knowingly."""
-    assert with_change({}).definition == "5f93736df0d19a8b"
+    assert with_change({}).definition == "fae464e311fd1ab1"
 
 
 # --- the example ---------------------------------------------------------------------------------------------------

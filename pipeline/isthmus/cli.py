@@ -27,7 +27,6 @@ from isthmus.errors import (
 )
 
 if TYPE_CHECKING:
-    from isthmus.nights import Result
     from isthmus.settings import Settings
 
 __all__ = ["app", "main"]
@@ -125,21 +124,32 @@ def score(config: Config, as_of: AsOf = None, accept: Accept = None, as_json: Js
     from isthmus import nights
     from isthmus.deadline import Deadline
     from isthmus.nightly import yesterday
-    from isthmus.settings import load
-    from isthmus.signals import examine
 
-    settings = load(config)
-    examine(settings)
-    deadline = Deadline.of(settings, datetime.now())
-    console = _console(settings, as_json=as_json)
-    with _machines_only(settings), console.watch() as watch:
-        first, *others = nights.score(settings, as_of or yesterday(), watch, deadline, frozenset(accept or ()))
-    assert first.outcome is not None
-    reports.night(console, first.outcome)
-    for result in others:
-        reports.one_line(console, result, "restated")
-    console.answer(first.outcome.manifest)
-    _raise_first(others)
+    every = _all_series(config)
+    console = _console(every[0], as_json=as_json)
+    manifests, failed = [], list[IsthmusError]()
+    with _machines_only(every[0]):
+        for settings in every:
+            deadline, day = Deadline.of(settings, datetime.now()), as_of or yesterday()
+            try:
+                with console.watch() as watch:
+                    first, *others = nights.score(settings, day, watch, deadline, frozenset(accept or ()))
+            except IsthmusError as error:
+                failed.append(_named(error, f"series {settings.series}") if every[1:] else error)
+                continue
+            assert first.outcome is not None
+            reports.night(console, first.outcome)
+            manifests.append(first.outcome.manifest)
+            for result in others:
+                reports.one_line(console, result, "restated")
+                if result.error:
+                    failed.append(_named(result.error, f"night of {result.as_of}"))
+        if manifests:
+            console.answer(manifests if every[1:] else manifests[0])
+        for other in failed[1:]:
+            console.say(f"isthmus: {other}")
+        if failed:
+            raise failed[0]
 
 
 @app.command()
@@ -161,27 +171,36 @@ def backfill(
       isthmus backfill configs/payments.toml --from 2026-11-01 --to 2026-11-30
     """
     from isthmus import nights
-    from isthmus.settings import load
-    from isthmus.signals import examine
 
     if last < first:
         raise typer.BadParameter(f"--to {last} is before --from {first}")
-    settings = load(config)
-    examine(settings)
-    console = _console(settings)
-    results = []
-    with _machines_only(settings), console.watch() as watch:
-        for result in nights.backfill(settings, first, last, watch, again=again, accept=frozenset(accept or ())):
-            results.append(result)
-            reports.one_line(console, result, "published")
-        _raise_first(results)
+    every = _all_series(config)
+    console = _console(every[0])
+    with _machines_only(every[0]), console.watch() as watch:
+        for settings in every:
+            if every[1:]:
+                console.say(f"Series {settings.series}")
+            for result in nights.backfill(settings, first, last, watch, again=again, accept=frozenset(accept or ())):
+                reports.one_line(console, result, "published")
+                if result.error:
+                    raise _named(result.error, f"night of {result.as_of}")
 
 
-def _raise_first(results: list[Result]) -> None:
-    for result in results:
-        if result.error:
-            result.error.args = (f"night of {result.as_of}: {result.error}",)
-            raise result.error
+def _named(error: IsthmusError, what: str) -> IsthmusError:
+    """The error, saying what it is about."""
+    error.args = (f"{what}: {error}",)
+    return error
+
+
+def _all_series(config: Path) -> list[Settings]:
+    """The settings of every series that the file defines, found to be possible."""
+    from isthmus.settings import load_all
+    from isthmus.signals import examine
+
+    every = load_all(config)
+    for settings in every:
+        examine(settings)
+    return every
 
 
 @app.command()
@@ -201,8 +220,8 @@ def check(
     from isthmus.settings import load, to_toml
 
     console = Console(as_json=as_json)
-    settings = load(config)
     if show_settings:
+        settings = load(config)
         if as_json:
             console.answer(settings.model_dump(mode="json"))
         else:
@@ -210,13 +229,15 @@ def check(
         return
     from isthmus.forecast import foresee
     from isthmus.nightly import window_of, yesterday
-    from isthmus.signals import examine
 
-    examine(settings)
-    forecast = foresee(settings, *window_of(settings, as_of or yesterday()))
-    reports.forecast(console, settings, forecast)
-    if forecast.stopped:
-        raise GateStopped(forecast.stopped)
+    told, stops = [], []
+    for settings in _all_series(config):
+        forecast = foresee(settings, *window_of(settings, as_of or yesterday()))
+        told.append(reports.forecast(console, settings, forecast))
+        stops += [forecast.stopped] if forecast.stopped else []
+    console.answer(told if told[1:] else told[0])
+    if stops:
+        raise GateStopped("\n".join(stops))
 
 
 @app.command()
@@ -239,12 +260,15 @@ def history(
     """
     from isthmus.endings import endings
     from isthmus.publish import nights_of
-    from isthmus.settings import load
+    from isthmus.settings import load_all
     from isthmus.store import place
 
-    settings = load(config)
-    found = nights_of(place(settings.run.warehouse), settings.series, nights, endings(settings.work))
-    reports.history(Console(as_json=as_json), settings, found, show_all=show_all)
+    console = Console(as_json=as_json)
+    told = []
+    for settings in load_all(config):
+        found = nights_of(place(settings.run.warehouse), settings.series, nights, endings(settings.work))
+        told.append(reports.history(console, settings, found, show_all=show_all))
+    console.answer(told if told[1:] else told[0])
 
 
 @app.command()

@@ -44,7 +44,7 @@ class Console:
             ]
             self.say("  ".join(cells).rstrip())
 
-    def answer(self, value: dict[str, Any]) -> None:
+    def answer(self, value: dict[str, Any] | list[dict[str, Any]]) -> None:
         """The one JSON object of `--json`."""
         if self._json:
             json.dump(value, sys.stdout, indent=2, default=str)

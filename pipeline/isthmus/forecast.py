@@ -52,7 +52,7 @@ def foresee(settings: Settings, first_day: date, last_day: date) -> Forecast:
     store.examine(settings.work, LAYOUT, "run.work")
     with open_door(threads=settings.run.threads) as door:
         found = survey(settings.log, first_day, last_day, door)
-    sample = sample_window(found, settings.log, first_day, last_day, SAMPLE_ROWS)
+    sample = sample_window(found, settings.ties, SAMPLE_ROWS)
     window = sample.window
     if window.ties.is_empty():
         told = [f"{rows} {reason}" for kind in window.outcomes.values() for reason, rows in kind.items()]

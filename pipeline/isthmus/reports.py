@@ -105,8 +105,8 @@ def how_to_go_on(console: Console, outcome: Outcome, config: Path) -> None:
     console.say(f"Run the night again: {command} score {shlex.quote(str(config))} --as-of {outcome.night.as_of}")
 
 
-def forecast(console: Console, settings: Settings, seen: Forecast) -> None:
-    """What a night would do, in one screen."""
+def forecast(console: Console, settings: Settings, seen: Forecast) -> dict[str, Any]:
+    """What a night would do, in one screen; returned: the same for machines."""
     found, plan = seen.found, seen.plan
     days = (seen.last_day - seen.first_day).days + 1
     about = "" if seen.whole else "about "
@@ -132,33 +132,34 @@ def forecast(console: Console, settings: Settings, seen: Forecast) -> None:
     for text in seen.warnings:
         console.say(f"Warning: {text}")
     console.say("Nothing was written.")
-    console.answer(
-        {
-            "series": settings.series,
-            "definition": settings.definition,
-            "window_start": seen.first_day,
-            "as_of": seen.last_day,
-            "files": len(found.files),
-            "bytes": found.bytes,
-            "rows": found.rows,
-            "rows_looked_at": seen.sampled_rows,
-            "days_with_rows": days - len(seen.window.missing_days) if seen.whole else None,
-            "outcomes": seen.window.outcomes,
-            "parties": seen.parties,
-            "ties": seen.ties,
-            "method": plan.method,
-            "engine": plan.engine,
-            "reason": plan.reason,
-            "predicted_seconds": plan.predicted_seconds,
-            "predicted_bytes": plan.predicted_bytes,
-            "warnings": seen.warnings,
-            "stopped": seen.stopped,
-        }
-    )
+    return {
+        "series": settings.series,
+        "definition": settings.definition,
+        "window_start": seen.first_day,
+        "as_of": seen.last_day,
+        "files": len(found.files),
+        "bytes": found.bytes,
+        "rows": found.rows,
+        "rows_looked_at": seen.sampled_rows,
+        "days_with_rows": days - len(seen.window.missing_days) if seen.whole else None,
+        "outcomes": seen.window.outcomes,
+        "parties": seen.parties,
+        "ties": seen.ties,
+        "method": plan.method,
+        "engine": plan.engine,
+        "reason": plan.reason,
+        "predicted_seconds": plan.predicted_seconds,
+        "predicted_bytes": plan.predicted_bytes,
+        "warnings": seen.warnings,
+        "stopped": seen.stopped,
+    }
 
 
-def history(console: Console, settings: Settings, nights: list[dict[str, Any]], *, show_all: bool) -> None:
-    """One line per night, newest last; with `show_all` also one per run that was replaced, before the one that did."""
+def history(console: Console, settings: Settings, nights: list[dict[str, Any]], *, show_all: bool) -> dict[str, Any]:
+    """One line per night, newest last; with `show_all` also one per run that was replaced, before the one that did.
+
+    Returned: the same for machines.
+    """
     warehouse = settings.run.warehouse
     if not nights:
         console.say(f"Series {settings.series}: no night yet in {warehouse}; `isthmus score` publishes the first.")
@@ -185,7 +186,7 @@ def history(console: Console, settings: Settings, nights: list[dict[str, Any]], 
                 console.say(f"Night of {each['as_of']}, run that ended {ending['at']}{again}:\n  {ending['error']}")
         if (last := yesterday()) > nights[-1]["as_of"]:
             console.say(f"No night after {nights[-1]['as_of']}; the last whole day (UTC) is {last}.")
-    console.answer({"series": settings.series, "warehouse": warehouse, "nights": nights})
+    return {"series": settings.series, "warehouse": warehouse, "nights": nights}
 
 
 def _figures(run: dict[str, Any], before: dict[str, Any]) -> list[str]:

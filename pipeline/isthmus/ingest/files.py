@@ -83,8 +83,11 @@ class Part:
 
 @dataclass(frozen=True)
 class Survey:
-    """What would be read for a window, known from names and footers alone."""
+    """What would be read for a window of a log, known from names and footers alone."""
 
+    log: Log
+    first_day: date
+    last_day: date
     files: tuple[LogFile, ...]
     parts: tuple[Part, ...]
     skipped_files: int
@@ -136,7 +139,7 @@ def survey(log: Log, first_day: date, last_day: date, door: Door) -> Survey:
     parts = tuple(part for file in files for part in _cut(file, lowest, highest))
     used = {part.path for part in parts}
     read = tuple(file for file in files if file.path in used)
-    return Survey(read, parts, len(paths) - len(read))
+    return Survey(log, first_day, last_day, read, parts, len(paths) - len(read))
 
 
 def states_of(log: Log) -> dict[str, tuple[int, int]]:

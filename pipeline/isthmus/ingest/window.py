@@ -14,6 +14,7 @@ import polars as pl
 
 from isthmus.cluster import Door, Tick
 from isthmus.errors import DataRefused
+from isthmus.ingest.chosen import choose
 from isthmus.ingest.files import Survey
 from isthmus.ingest.kept import is_sound, name_for, prune, recall
 from isthmus.ingest.keys import SIDES, shared_book
@@ -32,7 +33,7 @@ from isthmus.ingest.rows import (
 )
 from isthmus.ingest.ties import DayTask, Source, add_up, add_up_day, recode, ties_of_rows, window_book
 from isthmus.readings import DUPLICATE, FILTERED, REFUSED, Reading, open_reading
-from isthmus.settings import Log
+from isthmus.settings import Log, Ties
 from isthmus.store import fresh
 from isthmus.watch import Watch
 
@@ -82,15 +83,14 @@ def in_window(outcomes: dict[str, dict[str, int]]) -> int:
 
 def read_window(
     found: Survey,
-    log: Log,
-    first_day: date,
-    last_day: date,
+    ties: Ties,
+    kept: Path,
     work: Path,
     door: Door,
     watch: Watch,
     pacing: Callable[[Tick], Tick] = lambda tick: tick,
 ) -> Window:
-    """Read the surveyed parts, keep one table of ties per day below `work`, and add the window up.
+    """Read the surveyed parts, keep one table of ties per day below `kept`, and add up those that count.
 
     What a former run kept, and nothing has changed since, is used again: parts and days alike. `pacing` may watch the
     progress of the reading, and end it by raising.
@@ -99,43 +99,42 @@ def read_window(
     """
     if not found.parts:
         raise DataRefused(
-            f"no row group of the log can hold {first_day}..{last_day}, by the times in the files' footers; check "
-            "--as-of, window.days and log.columns.time"
+            f"no row group of the log can hold {found.first_day}..{found.last_day}, by the times in files' footers; "
+            "check --as-of, window.days and log.columns.time"
         )
-    window = range(day_number(first_day), day_number(last_day) + 1)
+    log, window = found.log, _window(found)
     scratch = fresh(work / "scratch")
     reading = open_reading(log)
     with watch.stage("read") as plain_tick:
         tick = pacing(plain_tick)
-        results = _read_parts(found, log, reading, window, work, scratch, door, tick)
-        days = _day_tasks(results, window, work / "days", scratch)
+        results = _read_parts(found, reading, window, kept, scratch, door, tick)
+        days = _day_tasks(results, window, kept / "days", scratch)
         missing = _not_kept(list(days.values()), door)
         if not all(door.run(is_sound, _feeding(missing))):  # damaged since: what went is made anew
-            results = _read_parts(found, log, reading, window, work, scratch, door, tick)
+            results = _read_parts(found, reading, window, kept, scratch, door, tick)
     outcomes = _count(results, window)
     if not outcomes.get(USED):
-        raise DataRefused(_nothing_used(outcomes, first_day, last_day))
+        raise DataRefused(_nothing_used(outcomes, found))
     with watch.stage("combine") as tick:
         door.run(add_up_day, missing, tick)
         book, recodes = window_book([task.folder for task in days.values()], scratch)
-        days_ties = pl.scan_ipc(door.run(recode, recodes))
-        ties = add_up(book["party"], days_ties, with_amounts=log.has_amounts)
-        ties, parties, left_out = reading.weigh(ties, _as_keyed(book, ties))
-    _leave_out(outcomes, left_out)
+        every = add_up(book["party"], pl.scan_ipc(door.run(recode, recodes)), with_amounts=log.has_amounts)
+        counted, parties = _that_count(every, book, reading, ties, outcomes)
     refused = _refused(found, results, window)
     fresh(scratch)
-    prune(work / "parts", work / "added", work / "days")
+    prune(kept / "parts", kept / "added", kept / "days")
     missing_days = tuple(day_of(day) for day in window if day not in days)
-    return Window(ties, parties, refused, outcomes, missing_days, _volume(results, window))
+    return Window(counted, parties, refused, outcomes, missing_days, _volume(results, window))
 
 
 def _read_parts(
-    found: Survey, log: Log, reading: Reading, window: range, work: Path, scratch: Path, door: Door, tick: Tick
+    found: Survey, reading: Reading, window: range, kept: Path, scratch: Path, door: Door, tick: Tick
 ) -> list[PartResult]:
     """What is known of each part: kept from a former run when neither its file nor its reading has changed."""
+    log = found.log
     told = log.columns.model_dump(), reading.fingerprint
     tasks = [
-        PartTask(part, str(work / "parts" / name_for(_READING, asdict(part), told)), str(scratch), log)
+        PartTask(part, str(kept / "parts" / name_for(_READING, asdict(part), told)), str(scratch), log)
         for part in found.parts
     ]
     if not reading.settles:
@@ -143,7 +142,7 @@ def _read_parts(
     results = _kept_or_made(tasks, read_part, door, tick, ("refused.arrow", "rows.arrow"))
     changes = _settle(reading, results, window, scratch)
     adds = [
-        AddTask(result, changed, str(work / "added" / name_for(Path(result.folder).name, digest)), str(scratch))
+        AddTask(result, changed, str(kept / "added" / name_for(Path(result.folder).name, digest)), str(scratch))
         for result, (changed, digest) in zip(results, changes, strict=True)
     ]
     return _kept_or_made(adds, add_up_rows, door)
@@ -212,9 +211,22 @@ def _numbered(parts: Sequence[pl.LazyFrame]) -> pl.LazyFrame:
     )
 
 
-def _as_keyed(book: pl.DataFrame, ties: pl.DataFrame) -> pl.DataFrame:
-    """The book with its keys of the type that the ties' have."""
-    return book.with_columns(pl.col("party").cast(ties.schema["sender"]))
+def _window(found: Survey) -> range:
+    return range(day_number(found.first_day), day_number(found.last_day) + 1)
+
+
+def _that_count(
+    every: pl.DataFrame, book: pl.DataFrame, reading: Reading, rules: Ties, outcomes: dict[str, dict[str, int]]
+) -> tuple[pl.DataFrame, pl.DataFrame]:
+    """The ties that the log's reading and `rules` leave, and the parties as they are then known."""
+    ties, parties, left_out = reading.weigh(every, book.with_columns(pl.col("party").cast(every.schema["sender"])))
+    _leave_out(outcomes, left_out)
+    ties, also_left_out = choose(ties, rules)
+    _leave_out(outcomes, also_left_out)
+    if ties.is_empty():
+        told = ", ".join(f"{rows} {reason}" for reason, rows in (left_out | also_left_out).items())
+        raise DataRefused(f"no tie of the window counts, of so many contacts: {told}; check [ties] and log.rules")
+    return ties, parties
 
 
 def _leave_out(outcomes: dict[str, dict[str, int]], left_out: dict[str, int]) -> None:
@@ -246,11 +258,11 @@ def _volume(results: Sequence[PartResult], window: range) -> dict[date, int]:
     return dict(sorted(volume.items()))
 
 
-def _nothing_used(outcomes: dict[str, dict[str, int]], first_day: date, last_day: date) -> str:
+def _nothing_used(outcomes: dict[str, dict[str, int]], found: Survey) -> str:
     told = [f"{rows} {reason}" for kind in (REFUSED, FILTERED) for reason, rows in outcomes[kind].items()]
     return (
-        f"no usable row in {first_day}..{last_day}: {', '.join(told) or 'the files are empty'}; check --as-of, "
-        "window.days and log.columns"
+        f"no usable row in {found.first_day}..{found.last_day}: {', '.join(told) or 'the files are empty'}; check "
+        "--as-of, window.days and log.columns"
     )
 
 
@@ -274,13 +286,13 @@ class Sample:
     half: pl.DataFrame
 
 
-def sample_window(found: Survey, log: Log, first_day: date, last_day: date, most_rows: int) -> Sample:
+def sample_window(found: Survey, rules: Ties, most_rows: int) -> Sample:
     """Read parts spread over the window, about `most_rows` rows, into memory, and judge them as a night would.
 
     What several parts tell only together, such as duplicates, is found among the parts that are read.
     """
+    log, window = found.log, _window(found)
     reading = open_reading(log)
-    window = range(day_number(first_day), day_number(last_day) + 1)
     read = found.parts[:: max(1, round(found.rows / most_rows))]
     judged = [judge_part(part, log, reading) for part in read]
     counts = [Counter(count_rows(each)) for each in judged]
@@ -297,10 +309,8 @@ def sample_window(found: Survey, log: Log, first_day: date, last_day: date, most
         ]
     results = [PartResult("", counted) for counted in counts]
     outcomes, used = _count(results, window), pl.concat(rows)
-    ties = _add_up(book, used, log)
-    ties, parties, left_out = reading.weigh(ties, _as_keyed(book, ties))
-    half = _add_up(book, used.head(used.height // 2), log)
-    _leave_out(outcomes, left_out)
+    ties, parties = _that_count(_add_up(book, used, log), book, reading, rules, outcomes)
+    half, _ = choose(_add_up(book, used.head(used.height // 2), log), rules)
     days = set(used["day"])
     missing_days = tuple(day_of(day) for day in window if day not in days)
     volume = _volume(results, window)

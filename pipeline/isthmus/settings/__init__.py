@@ -6,10 +6,23 @@ Every key is declared once, in this room, with its default, unit and meaning. `c
 
 from isthmus.settings.calls import CallsColumns, CallsLog, CallsRules
 from isthmus.settings.email import EmailColumns, EmailLog, EmailRules
-from isthmus.settings.file import load, to_toml
+from isthmus.settings.file import load, load_all, to_toml
 from isthmus.settings.kinds import Log
 from isthmus.settings.log import PlainColumns, PlainLog, mapped
-from isthmus.settings.models import Distance, Engine, Gate, Gates, Graph, Method, Run, Score, Settings, Signals, Window
+from isthmus.settings.models import (
+    Distance,
+    Engine,
+    Gate,
+    Gates,
+    Graph,
+    Method,
+    Run,
+    Score,
+    Settings,
+    Signals,
+    Ties,
+    Window,
+)
 from isthmus.settings.payments import PaymentsColumns, PaymentsLog, PaymentsRules
 from isthmus.settings.section import types_of
 
@@ -36,8 +49,10 @@ __all__ = [
     "Score",
     "Settings",
     "Signals",
+    "Ties",
     "Window",
     "load",
+    "load_all",
     "mapped",
     "to_toml",
     "types_of",

@@ -10,8 +10,9 @@ import difflib
 import json
 import os
 import tomllib
+from collections.abc import Iterator
 from pathlib import Path
-from typing import TypeVar
+from typing import Any, TypeVar
 
 from pydantic import ValidationError
 from pydantic.fields import FieldInfo
@@ -21,29 +22,63 @@ from isthmus.settings.kinds import KINDS, kind_of
 from isthmus.settings.models import Run, Settings, masked
 from isthmus.settings.section import Section, files_of
 
-__all__ = ["load", "to_toml"]
+__all__ = ["load", "load_all", "to_toml"]
 
 AnySection = TypeVar("AnySection", bound=Section)
 
 
+# What a definition may hold otherwise: nothing that makes the log read otherwise, or elsewhere.
+DEFINABLE = ("window", "ties", "graph", "score", "gates")
+
+
+def load_all(path: str | Path) -> list[Settings]:
+    """The settings of every series that a configuration file defines: its own, then one for each of `definitions`.
+
+    Raises what `load` raises.
+    """
+    path = Path(path)
+    raw = _read(path)
+    own = _validated(path, raw)
+    others = []
+    for name, told in own.definitions.items():
+        if unknown := [section for section in told if section not in DEFINABLE]:
+            raise SettingsError(
+                f"settings {path}:\n  definitions.{name}.{unknown[0]}: a definition may differ in "
+                f"{', '.join(DEFINABLE)} only"
+            )
+        merged = raw | {"series": f"{own.series}-{name}", "definitions": {}}
+        merged |= {section: raw.get(section, {}) | keys for section, keys in told.items()}
+        if metrics := own.signals.prometheus:  # each series tells its own
+            merged["signals"] = raw["signals"] | {"prometheus": f"{metrics.removesuffix('.prom')}-{name}.prom"}
+        others.append(_validated(path, merged, f"definitions.{name}: "))
+    return [own, *others]
+
+
 def load(path: str | Path) -> Settings:
-    """Read a configuration file.
+    """Read a configuration file, without the further series that it may define.
 
     Relative paths (of log, warehouse, work folder and signals) come back resolved against the file's folder.
 
     Raises SettingsError (unknown key, wrong type, impossible value, not TOML) and StoreError (no such file).
     """
-    path = Path(path)
+    return _validated(Path(path), _read(Path(path)))
+
+
+def _read(path: Path) -> dict[str, Any]:
     try:
-        raw = tomllib.loads(path.read_text(encoding="utf-8"))
+        return tomllib.loads(path.read_text(encoding="utf-8"))
     except OSError as error:
         raise StoreError(f"cannot read settings {path}: {error.strerror}; give the path of a TOML file") from None
     except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:
         raise SettingsError(f"{path} is not TOML: {error}; mend that line") from None
+
+
+def _validated(path: Path, raw: dict[str, Any], of: str = "") -> Settings:
+    """The settings with their files resolved. `of`: said before what is wrong with them."""
     try:
         settings = Settings.model_validate(raw)
     except ValidationError as error:
-        raise SettingsError(_explain(path, error, kind_of(raw.get("log", {})))) from None
+        raise SettingsError(_explain(path, error, kind_of(raw.get("log", {})), of)) from None
     home = path.resolve().parent
     run = settings.run.model_copy(
         update={key: _resolve(home, getattr(settings.run, key)) for key in ("warehouse", "work")}
@@ -85,7 +120,7 @@ def _resolve(home: Path, text: str) -> str:
     return text if "://" in text else str(home / os.path.expanduser(text))
 
 
-def _explain(path: Path, error: ValidationError, kind: str) -> str:
+def _explain(path: Path, error: ValidationError, kind: str, of: str) -> str:
     """One line per fault: the key's path, the value, and what would be right."""
     lines = []
     for fault in error.errors():
@@ -109,7 +144,7 @@ def _explain(path: Path, error: ValidationError, kind: str) -> str:
         else:
             hint = _meaning(where, kind)
             lines.append(f"{key} = {_show(fault['input'])}: {_lower(fault['msg'])}" + (f" ({hint})" if hint else ""))
-    return f"settings {path}:\n" + "\n".join(f"  {line}" for line in lines)
+    return f"settings {path}:\n" + "\n".join(f"  {of}{line}" for line in lines)
 
 
 def _section(steps: list[str], kind: str) -> type[Section]:
@@ -149,15 +184,27 @@ def _write_section(section: Section, name: str, lines: list[str]) -> None:
     if name:
         lines += ["", f"# {(type(section).__doc__ or '').strip()}", f"[{name}]"]
     inner: list[tuple[str, Section]] = []
+    further: list[str] = []
     for key, field in type(section).model_fields.items():
         value = getattr(section, key)
         if isinstance(value, Section):
             inner.append((f"{name}.{key}" if name else key, value))
+        elif isinstance(value, dict):
+            further += ["", f"# {_comment(field)}", *_tables(key, value)]
         else:
             lines.append(f"# {_comment(field)}")
             lines.append(f"{key} = {json.dumps(value, ensure_ascii=False)}")
     for path, value in inner:
         _write_section(value, path, lines)
+    lines += further
+
+
+def _tables(name: str, told: dict[str, dict[str, Any]]) -> Iterator[str]:
+    """Raw tables two levels deep, as TOML."""
+    for one, sections in told.items():
+        for section, keys in sections.items():
+            yield f"[{name}.{one}.{section}]"
+            yield from (f"{key} = {json.dumps(value, ensure_ascii=False)}" for key, value in keys.items())
 
 
 def _comment(field: FieldInfo) -> str:

@@ -25,6 +25,7 @@ __all__ = [
     "Score",
     "Settings",
     "Signals",
+    "Ties",
     "Window",
     "masked",
 ]
@@ -39,6 +40,14 @@ class Window(Section):
     """Which days count, in UTC."""
 
     days: int = key(28, "length of the window; its last day is the night's as_of", "days", ge=1, le=3660)
+
+
+class Ties(Section):
+    """Which ties count, seen over the whole window. What is left out is counted by name."""
+
+    least_contacts: int = key(1, "from one to the other in the window, each way when `mutual`", "contacts", ge=1)
+    least_days: int = key(1, "with such a contact, each way when `mutual`", "days", ge=1)
+    mutual: bool = key(False, "both must have contacted the other")
 
 
 class Graph(Section):
@@ -176,11 +185,17 @@ class Settings(Section):
     )
     log: Log
     window: Window = Field(default_factory=Window)
+    ties: Ties = Field(default_factory=Ties)
     graph: Graph = Field(default_factory=Graph)
     score: Score = Field(default_factory=Score)
     gates: Gates = Field(default_factory=Gates)
     run: Run = Field(default_factory=Run)
     signals: Signals = Field(default_factory=Signals)
+    definitions: dict[str, dict[str, Any]] = key(
+        {},
+        "further series from the same reading: [definitions.NAME.SECTION] holds what is otherwise in the series "
+        "SERIES-NAME; of the sections window, ties, graph, score and gates",
+    )
 
     @model_validator(mode="after")
     def _possible_together(self) -> Settings:
@@ -217,9 +232,14 @@ class Settings(Section):
         return Path(self.run.work) / f"series={self.series}"
 
     @property
+    def reading(self) -> Path:
+        """The folder of rows and days as they were read, which all series of a work folder share."""
+        return Path(self.run.work) / "reading"
+
+    @property
     def definition(self) -> str:
         """16 hex digits that name all settings that change results: not where it runs, not where files lie."""
-        told = self.model_dump(mode="json", exclude={"run", "gates", "signals", "log"}) | {
+        told = self.model_dump(mode="json", exclude={"run", "gates", "signals", "log", "definitions"}) | {
             "log": _without_files(self.log)
         }
         return hashlib.sha256(json.dumps(told, sort_keys=True).encode()).hexdigest()[:16]
