@@ -229,7 +229,7 @@ def test_every_door_publishes_the_same_bytes(tmp_path: Path, door: str) -> None:
         assert said.code == 0, said.err
         files = site.published()
         found.append({file: data for file, data in files.items() if file.endswith(".parquet") and "runs" not in file})
-    assert len(found[0]) == 3
+    assert len(found[0]) == 4
     assert found[0] == found[1]
 
 

@@ -224,7 +224,7 @@ def test_a_published_night_in_events(site: Site) -> None:
         fields = {each["name"]: each["description"] for each in event["inputs"][0]["facets"]["schema"]["fields"]}
         assert fields == {"from": "sender", "to": "receiver", "sent_at": "time", "value": "amount"}
         tables = {Path(each["name"]).name: each for each in event["outputs"]}
-        assert list(tables) == ["scores", "ties", "refused", "runs"]
+        assert list(tables) == ["scores", "ties", "parties", "refused", "runs"]
         for name, table in tables.items():
             assert table["facets"]["dataSource"]["uri"] == (site.warehouse / name).as_uri()
             fields = {each["name"] for each in table["facets"]["schema"]["fields"]}

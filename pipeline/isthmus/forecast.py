@@ -9,7 +9,7 @@ from math import log
 from isthmus import store
 from isthmus.betweenness import Plan, make_plan
 from isthmus.cluster import open_door
-from isthmus.errors import DataRefused, GateStopped
+from isthmus.errors import GateStopped
 from isthmus.gates import Gatekeeper
 from isthmus.graph import Graph
 from isthmus.ingest import Sample, Survey, Window, drift, in_window, sample_window, survey
@@ -54,12 +54,6 @@ def foresee(settings: Settings, first_day: date, last_day: date) -> Forecast:
         found = survey(settings.log, first_day, last_day, door)
     sample = sample_window(found, settings.ties, SAMPLE_ROWS)
     window = sample.window
-    if window.ties.is_empty():
-        told = [f"{rows} {reason}" for kind in window.outcomes.values() for reason, rows in kind.items()]
-        raise DataRefused(
-            f"no usable row of {first_day}..{last_day} among {sample.rows} looked at: {', '.join(told) or 'no row'}; "
-            "check --as-of, window.days and log.columns"
-        )
     graph = Graph.from_ties(window.ties, directed=settings.graph.directed, distance=settings.graph.distance)
     plan = make_plan(graph, settings.score, settings.run.threads, settings.run.memory_bytes)
     parties, ties = graph.n, graph.ties

@@ -97,11 +97,6 @@ def read_window(
 
     Raises DataRefused when no row of the window can be used, or a file turns out damaged.
     """
-    if not found.parts:
-        raise DataRefused(
-            f"no row group of the log can hold {found.first_day}..{found.last_day}, by the times in files' footers; "
-            "check --as-of, window.days and log.columns.time"
-        )
     log, window = found.log, _window(found)
     scratch = fresh(work / "scratch")
     reading = open_reading(log)
@@ -212,6 +207,12 @@ def _numbered(parts: Sequence[pl.LazyFrame]) -> pl.LazyFrame:
 
 
 def _window(found: Survey) -> range:
+    """The days as numbers. Raises DataRefused when nothing that was found can hold them."""
+    if not found.parts:
+        raise DataRefused(
+            f"no row group of the log can hold {found.first_day}..{found.last_day}, by the times in files' footers; "
+            "check --as-of, window.days and log.columns.time"
+        )
     return range(day_number(found.first_day), day_number(found.last_day) + 1)
 
 
@@ -309,6 +310,8 @@ def sample_window(found: Survey, rules: Ties, most_rows: int) -> Sample:
         ]
     results = [PartResult("", counted) for counted in counts]
     outcomes, used = _count(results, window), pl.concat(rows)
+    if used.is_empty():
+        raise DataRefused(_nothing_used(outcomes, found))
     ties, parties = _that_count(_add_up(book, used, log), book, reading, rules, outcomes)
     half, _ = choose(_add_up(book, used.head(used.height // 2), log), rules)
     days = set(used["day"])
