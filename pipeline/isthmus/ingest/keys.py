@@ -15,6 +15,9 @@ __all__ = ["ABOUT", "code_sides", "shared_book"]
 # What is known of a party besides its key.
 ABOUT = ("kind", "side", "label")
 SIDES = ("sender", "receiver")
+# What readings have told in this process, by their fingerprints: parts hold mostly the same keys.
+_MOST_KNOWN = 5_000_000
+_known: dict[str, pl.DataFrame] = {}
 
 
 def code_sides(contacts: pl.DataFrame, reading: Reading) -> tuple[pl.DataFrame, pl.DataFrame, list[str]]:
@@ -26,7 +29,7 @@ def code_sides(contacts: pl.DataFrame, reading: Reading) -> tuple[pl.DataFrame, 
     both = pl.concat([contacts[side].rename("raw") for side in SIDES]).cast(pl.Categorical(pl.Categories.random()))
     places, distinct = both.to_physical(), both.drop_nulls().unique()
     raw = pl.DataFrame({"raw": distinct.cast(pl.String), "at": distinct.to_physical()}).sort("at")["raw"]
-    told = reading.keys(raw)
+    told = _told(raw, reading)
     key, usable = told["key"], told["key"].is_not_null()
     why = told["fault"].fill_null("is empty").set(usable, None)
     faults = why.drop_nulls().unique().sort().to_list()
@@ -44,6 +47,25 @@ def code_sides(contacts: pl.DataFrame, reading: Reading) -> tuple[pl.DataFrame, 
         sides |= {side: codes.gather(own), f"_{side}_null": own.is_null(), f"_{side}_fault": fault.gather(own)}
         start += contacts.height
     return book, contacts.with_columns(**sides), faults
+
+
+def _told(raw: pl.Series, reading: Reading) -> pl.DataFrame:
+    """What the reading tells of each distinct text, asked only for those that it has not been asked before."""
+    known = _known.get(reading.fingerprint)
+    if known is None:
+        told = reading.keys(raw).with_columns(raw)
+        _known.clear()  # one log at a time
+    else:
+        told = raw.to_frame().join(known.with_columns(asked=True), on="raw", how="left", maintain_order="left")
+        if (new := told["asked"].is_null()).any():
+            told = told.drop("asked").with_row_index("at")
+            texts = raw.filter(new)
+            answers = reading.keys(texts).with_columns(texts, at=told["at"].filter(new))
+            told = pl.concat([told.filter(~new), answers.select(told.columns)]).sort("at")
+            known = pl.concat([known, answers.select(known.columns)])
+    if known is None or len(known) <= _MOST_KNOWN:
+        _known[reading.fingerprint] = told.select("raw", "key", "fault", *ABOUT) if known is None else known
+    return told
 
 
 def shared_book(books: Sequence[pl.DataFrame]) -> tuple[pl.DataFrame, list[pl.Series]]:
