@@ -32,8 +32,8 @@ from typing import Any
 import polars as pl
 import psutil
 
-from isthmus.demo import AS_OF, CONFIG, make_log
-from isthmus.inventions import calls, email, payments
+from isthmus.inventions import LAST_DAY, calls, email, payments
+from isthmus.inventions.plain import CONFIG, make_log
 from isthmus.settings import Settings, load, mapped
 from open_graphs import DATA, flights
 
@@ -78,21 +78,25 @@ def week(config: str) -> str:
 
 
 SOURCES = {
-    "demo": Source(CONFIG, AS_OF, lambda folder: make_log(folder / "payments")),
+    "demo": Source(CONFIG, LAST_DAY, lambda folder: make_log(folder / "plain", LAST_DAY)),
     "flights": Source(FLIGHTS, date(2001, 6, 30), lambda folder: (folder / "log").symlink_to(flights())),
     "generated": Source(
-        CONFIG, AS_OF, lambda folder: make_log(folder / "payments", rows=20_000_000, parties=1_000_000)
+        CONFIG, LAST_DAY, lambda folder: make_log(folder / "plain", LAST_DAY, people=1_000_000, rows=20_000_000)
     ),
     "email": Source(
-        week(email.CONFIG), AS_OF, lambda folder: email.make_log(folder / "email", AS_OF, days=WEEK, people=350_000)
+        week(email.CONFIG),
+        LAST_DAY,
+        lambda folder: email.make_log(folder / "email", LAST_DAY, days=WEEK, people=350_000),
     ),
     "calls": Source(
-        week(calls.CONFIG), AS_OF, lambda folder: calls.make_log(folder / "calls", AS_OF, days=WEEK, people=1_250_000)
+        week(calls.CONFIG),
+        LAST_DAY,
+        lambda folder: calls.make_log(folder / "calls", LAST_DAY, days=WEEK, people=1_250_000),
     ),
     "payments": Source(
         week(payments.CONFIG),
-        AS_OF,
-        lambda folder: payments.make_log(folder / "payments", AS_OF, days=WEEK, people=2_850_000),
+        LAST_DAY,
+        lambda folder: payments.make_log(folder / "payments", LAST_DAY, days=WEEK, people=2_850_000),
     ),
 }
 # The columns of the two sides, by kind; a list of receivers is a row each.

@@ -65,7 +65,7 @@ def test_the_first_help_says_what_it_does_where_to_start_and_the_exit_codes() ->
         ("score", ["Safe to repeat", "Examples", "--as-of 2026-11-30", "--json", "yesterday, UTC", "a TOML file"]),
         ("check", ["write nothing", "the time and the memory", "exit code", "--settings", "--as-of", "--json"]),
         ("columns", ["data dictionary", "TABLE", "all when left out", "--json"]),
-        ("demo", ["invented month of payments", "Running it again replaces", "isthmus-demo", "--json"]),
+        ("demo", ["invented log of four weeks", "Running it again replaces", "isthmus-demo", "--kind", "--json"]),
     ],
 )
 def test_each_help_teaches(command: str, texts: list[str]) -> None:
@@ -89,6 +89,7 @@ def test_each_help_teaches(command: str, texts: list[str]) -> None:
         (["check", "a.toml", "--json=yes"], ["--json"]),
         (["columns", "score"], ["no table 'score'", "scores, ties, parties, refused, runs"]),
         (["demo", "a", "b"], ["unexpected extra argument"]),
+        (["demo", "--kind", "mail"], ["no kind of log 'mail'", "plain, email, calls, payments"]),
     ],
 )
 def test_usage_errors(arguments: list[str], texts: list[str]) -> None:
@@ -385,25 +386,6 @@ def test_demo_says_where_it_cannot_write(tmp_path: Path) -> None:
     assert said.code == 74
     assert "cannot write the demo" in said.err
     assert said.out == ""
-
-
-def test_demo_ends_in_a_query_that_works_when_pasted(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
-    from isthmus import demo
-
-    make = demo.make_log
-    monkeypatch.setattr(demo, "make_log", lambda folder, last_day: make(folder, rows=4_000, parties=600))
-    (tmp_path / "it's a demo").mkdir()
-    said = isthmus("demo", tmp_path / "it's a demo", "--json")
-    assert said.code == 0, said.err
-    run = json.loads(said.out)
-    assert run["series"] == "ombriel"
-    assert "refused" in said.err
-    pasted = said.err[said.err.index("paste this") :].split("\n\n")[1]
-    ran = subprocess.run(["bash", "-c", pasted], capture_output=True, text=True)
-    assert ran.returncode == 0, ran.stderr
-    first = re.search(r"^(.+?) +1 +0\.\d+ ", said.err, re.MULTILINE)
-    assert first is not None
-    assert first[1].strip() in ran.stdout
 
 
 def test_score_from_python(site: Site) -> None:

@@ -15,7 +15,7 @@ import pytest
 from isthmus.cluster import open_door
 from isthmus.errors import DataRefused, SettingsError, StoreError, TryAgain
 from isthmus.ingest import files, read_window, survey
-from isthmus.settings import PlainLog, Ties
+from isthmus.settings import CallsColumns, CallsLog, PaymentsLog, PaymentsRules, PlainLog, Ties
 from isthmus.watch import Watch
 from logs import (
     EPOCH,
@@ -127,6 +127,23 @@ def test_a_renamed_column_is_refused_with_the_nearest_name(tmp_path: Path) -> No
     write(tmp_path / "log" / "f.parquet", table(["a"], ["b"]).rename_columns(["sendr", "receiver", "time"]))
     with pytest.raises(DataRefused, match=r"no column 'sender' \(log\.columns\.sender\); did you mean sendr\?"):
         look(log_of(tmp_path / "log"))
+
+
+def test_who_lacks_an_optional_column_is_told_how_to_say_so(tmp_path: Path) -> None:
+    write(tmp_path / "log" / "f.parquet", table(["a"], ["b"]))
+    with pytest.raises(DataRefused, match=r"If the log has none, set log\.columns\.amount = \"\"$"):
+        look(log_of(tmp_path / "log", amount=True))
+    calls = CallsLog(
+        path=str(tmp_path / "log"), columns=CallsColumns(sender="sender", receiver="receiver", time="time")
+    )
+    with pytest.raises(DataRefused, match=r"If the log has none, set log\.columns\.duration = \"\"$"):
+        look(calls)
+    write(tmp_path / "log" / "f.parquet", table(["a"], ["b"]).rename_columns(["sendr", "receiver", "time"]))
+    paid = PaymentsLog(path=str(tmp_path / "log"), rules=PaymentsRules(reporting_currency="EUR"))
+    for log in (log_of(tmp_path / "log"), paid):  # which cannot do without
+        with pytest.raises(DataRefused) as caught:
+            look(log)
+        assert "has none" not in str(caught.value)
 
 
 # ---------------------------------------------------------------- times

@@ -280,9 +280,9 @@ def test_special_numbers_of_the_users_table(tmp_path: Path) -> None:
 @pytest.mark.parametrize(
     ("text", "message"),
     [
-        ("number,role\n121,mailbox\n", "row 1: role is none of voicemail, conference, machine"),
-        ("number,role\n121,machine\nAnn,machine\n", "row 2: number cannot be read"),
-        ("number,role\n121,machine\nGB:121,voicemail\n", "row 2: number stands there twice"),
+        ("number,role\n121,mailbox\n", "row 1 after the header: role is none of voicemail, conference, machine"),
+        ("number,role\n121,machine\nAnn,machine\n", "row 2 after the header: number cannot be read"),
+        ("number,role\n121,machine\nGB:121,voicemail\n", "row 2 after the header: number stands there twice"),
     ],
 )
 def test_a_table_with_a_fault_is_not_taken(tmp_path: Path, text: str, message: str) -> None:

@@ -35,6 +35,18 @@ WRONG = {
     "far from any": (LEAST + "[window]\nzzz = 1", ["window.zzz = 1", "known here: days"]),
     "key of another section": (LEAST + "top = 3", ["log.top = 3", "unknown key", "known here: path, kind, columns"]),
     "deep": (LEAST + '[log.columns]\nsenders = "x"', ['log.columns.senders = "x"', "did you mean sender?"]),
+    "key of another kind": (
+        LEAST + '[log.columns]\nlist_id = "List-Id"',
+        ["log.columns.list_id", 'belongs to log.kind = "email", but the kind of this log is "plain"'],
+    ),
+    "rules of another kind": (
+        LEAST + "[log.rules]\nx = 1",
+        ["log.rules = ", 'belongs to log.kind = "email" or "calls" or "payments", but the kind of this log is "plain"'],
+    ),
+    "rules that must be there": (
+        LEAST + 'kind = "payments"',
+        ["log.rules: missing; write [log.rules] with reporting_currency"],
+    ),
     # types
     "text for a number": (LEAST + '[window]\ndays = "28"', ['window.days = "28"', "integer", "length of the window"]),
     "share for a count": (LEAST + "[score]\nsamples = 1.5", ["score.samples = 1.5", "integer", "how many to draw"]),

@@ -16,11 +16,11 @@ CONTRACT = {
     "scores": """party betweenness lower upper std_error pairs rank rank_best rank_worst top degree degree_in degree_out
         contacts_in contacts_out amount_in amount_out component component_size first_seen last_seen run_id""",
     "ties": "sender receiver contacts amount days first_seen last_seen run_id",
-    "parties": "party kind run_id",
     "refused": "file row reason run_id",
+    "parties": "party kind side label fully_observed run_id",
     "runs": """run_id window_start definition version method reason samples seed confidence half_width_widest
         half_width_median stopped_because parties ties rows_read rows_used rows_refused rows_filtered rows_duplicate
-        seconds peak_memory_bytes started_at finished_at""",
+        outcomes seconds peak_memory_bytes started_at finished_at""",
 }
 DUCKDB_TYPES = {
     pl.String: "VARCHAR",
@@ -31,8 +31,8 @@ DUCKDB_TYPES = {
     pl.Datetime: "TIMESTAMP WITH TIME ZONE",
 }
 NESTED = {
-    "seconds": 'STRUCT(stage VARCHAR, "seconds" DOUBLE)[]',
     "outcomes": 'STRUCT(outcome VARCHAR, reason VARCHAR, "rows" BIGINT)[]',
+    "seconds": 'STRUCT(stage VARCHAR, "seconds" DOUBLE)[]',
     "gates": 'STRUCT(gate VARCHAR, state VARCHAR, figure DOUBLE, "limit" DOUBLE)[]',
 }
 

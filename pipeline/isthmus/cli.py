@@ -89,6 +89,14 @@ def _table(name: str) -> str:
     return name
 
 
+def _kind(name: str) -> str:
+    from isthmus.settings.kinds import KINDS
+
+    if name not in KINDS:
+        raise typer.BadParameter(f"no kind of log {name!r}; there are {', '.join(KINDS)}")
+    return name
+
+
 Config = Annotated[Path, typer.Argument(metavar="CONFIG", readable=False, help="the log's settings, a TOML file")]
 AsOf = Annotated[
     date | None,
@@ -287,27 +295,39 @@ def columns(
 @app.command()
 def demo(
     folder: Annotated[Path, typer.Argument(metavar="FOLDER", help="where to make it")] = Path("isthmus-demo"),
+    kind: Annotated[
+        str, typer.Option("--kind", metavar="KIND", parser=_kind, help="plain, email, calls or payments")
+    ] = "plain",
     as_json: Json = False,
 ) -> None:
-    """Make an invented month of payments and run the whole job on it.
+    """Make an invented log of four weeks and run the whole job on it.
 
-    Everything is written below FOLDER: the log, its settings, the warehouse. Running it again replaces them.
+    Everything is written below FOLDER: the log, its settings (KIND.toml), the warehouse. Running it again replaces
+    them. Each kind has a log, settings and a series of its own, so that several may share a folder. "plain" is a log of
+    payments that is taken at its word, "payments" one with returns, currencies, owners and hubs.
+
+    \b
+    Examples
+      isthmus demo
+      isthmus demo --kind email
     """
-    from isthmus.demo import AS_OF, CONFIG, make_log
+    from isthmus.inventions import LAST_DAY, invention
     from isthmus.nightly import run_night
     from isthmus.settings import load
     from isthmus.store import story
 
     console = Console(as_json=as_json)
+    log, config = invention(kind), folder / f"{kind}.toml"
     with story("write the demo"):
         folder.mkdir(parents=True, exist_ok=True)
-        (folder / "isthmus.toml").write_text(CONFIG, encoding="utf-8")
+        config.write_text(log.CONFIG, encoding="utf-8")
     with console.watch() as watch:
-        with watch.stage("invent"):
-            make_log(folder / "payments", last_day=AS_OF)
-        outcome = run_night(load(folder / "isthmus.toml"), AS_OF, watch)
+        with watch.stage("invent"), story("write the demo"):
+            truth = log.make_log(folder / kind, LAST_DAY)
+        outcome = run_night(load(config), LAST_DAY, watch)
     reports.night(console, outcome)
-    reports.how_to_go_on(console, outcome, folder / "isthmus.toml")
+    reports.planted(console, outcome, truth.brokers)
+    reports.how_to_go_on(console, outcome, config)
     console.answer(outcome.manifest)
 
 

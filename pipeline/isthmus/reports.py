@@ -6,8 +6,11 @@ import json
 import shlex
 import shutil
 import sys
+from collections.abc import Sequence
 from pathlib import Path
 from typing import Any
+
+import polars as pl
 
 from isthmus.console import Console, number, printable
 from isthmus.forecast import Forecast
@@ -17,7 +20,7 @@ from isthmus.publish.queries import top_brokers
 from isthmus.settings import Settings
 from isthmus.tables import PARTITION, Table
 
-__all__ = ["dictionary", "forecast", "history", "how_to_go_on", "night"]
+__all__ = ["dictionary", "forecast", "history", "how_to_go_on", "night", "planted"]
 
 CAUTION = (
     "A score says who lies between others in this log. It is not a verdict on anyone: a person decides, and local law\n"
@@ -92,6 +95,12 @@ def _reasons(console: Console, outcomes: dict[str, dict[str, int]]) -> None:
     for outcome in ("refused", "filtered", "duplicate"):
         for reason, rows in outcomes.get(outcome, {}).items():
             console.say(f"  {outcome:<9} {number(rows):>11}  {reason if reason != outcome else ''}".rstrip())
+
+
+def planted(console: Console, outcome: Outcome, brokers: Sequence[str], first: int = 10) -> None:
+    """How many of an invented log's brokers the table of the first parties shows."""
+    found = outcome.scores.head(first).filter(pl.col("party").is_in(brokers)).height
+    console.say(f"Planted: {len(brokers)} parties that join the others; {found} of them are among the first {first}.")
 
 
 def how_to_go_on(console: Console, outcome: Outcome, config: Path) -> None:

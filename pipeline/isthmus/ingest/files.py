@@ -21,7 +21,7 @@ import pyarrow.parquet as pq
 from isthmus.cluster import Door
 from isthmus.errors import DataRefused, SettingsError, StoreError
 from isthmus.ingest.columns import DAY, Kind, kind_of
-from isthmus.settings import Log, mapped, types_of
+from isthmus.settings import Log, mapped, spare, types_of
 
 __all__ = ["LogFile", "Part", "Survey", "holds", "open_parquet", "states_of", "survey"]
 
@@ -114,6 +114,7 @@ class _Look:
     paths: tuple[str, ...]
     columns: dict[str, str]
     types: dict[str, tuple[str, ...]]
+    spared: frozenset[str]
 
 
 def survey(log: Log, first_day: date, last_day: date, door: Door) -> Survey:
@@ -130,8 +131,10 @@ def survey(log: Log, first_day: date, last_day: date, door: Door) -> Survey:
             "check --as-of, window.days, and that the log has arrived"
         )
     columns, types = mapped(log.columns), types_of(log.columns)
+    spared = frozenset(name for name in columns if spare(log, name))
     looks = [
-        _Look(root, tuple(near[at : at + FILES_PER_TASK]), columns, types) for at in range(0, len(near), FILES_PER_TASK)
+        _Look(root, tuple(near[at : at + FILES_PER_TASK]), columns, types, spared)
+        for at in range(0, len(near), FILES_PER_TASK)
     ]
     files = [file for found in door.run(_look, looks) for file in found]
     _agree(files)
@@ -264,10 +267,11 @@ def _footer(path: str, name: str, look: _Look) -> LogFile:
                 )
             if theirs not in schema.names:
                 near = difflib.get_close_matches(theirs, schema.names, n=1)
-                hint = f"did you mean {near[0]}?" if near else f"it has {', '.join(schema.names)}"
+                lacking = f'. If the log has none, set log.columns.{ours} = ""'
+                hint = f"did you mean {near[0]}?" if near else f"it has {', '.join(schema.names)}."
                 raise DataRefused(
-                    f"log file {name} has no column {theirs!r} (log.columns.{ours}); {hint}. If the log has changed, "
-                    "correct log.columns"
+                    f"log file {name} has no column {theirs!r} (log.columns.{ours}); {hint} If the log has changed, "
+                    f"correct log.columns{lacking if ours in look.spared else ''}"
                 )
             kinds[ours] = kind_of(schema.field(theirs).type, ours, theirs, name, look.types[ours])
         times = _time_bounds(parquet.metadata, look.columns["time"])

@@ -290,7 +290,8 @@ class Sample:
 def sample_window(found: Survey, rules: Ties, most_rows: int) -> Sample:
     """Read parts spread over the window, about `most_rows` rows, into memory, and judge them as a night would.
 
-    What several parts tell only together, such as duplicates, is found among the parts that are read.
+    What several parts tell only together, such as duplicates, is found among the parts that are read. Raises
+    DataRefused when nothing can hold the window, or a file turns out damaged.
     """
     log, window = found.log, _window(found)
     reading = open_reading(log)

@@ -133,7 +133,7 @@ class Truth:
 
 
 def make_log(
-    folder: Path, last_day: date, days: int = 28, people: int = 600, seed: int = 1, layout: Layout = "list"
+    folder: Path, last_day: date, days: int = 28, people: int = 1_000, seed: int = 1, layout: Layout = "list"
 ) -> Truth:
     """Write `folder/dt=YYYY-MM-DD/part-0.parquet` for each day, and `aliases.csv` beside the folder.
 

@@ -48,12 +48,14 @@ work = "work"
 @dataclass(frozen=True)
 class Truth:
     """`counts`: outcome -> reason -> contacts, with default rules and the log's tables. `amount`: sum over the used
-    payments in XCD. `sides`: parties of used payments. `brokers` join the towns; `hubs`: account -> label."""
+    payments in XCD. `sides`: parties of used payments. `kinds`: account -> kind, of those that have a part to play.
+    `brokers` join the towns; `hubs`: account -> label."""
 
     rows: int
     counts: dict[str, dict[str, int]]
     amount: Decimal
     sides: dict[str, int]
+    kinds: dict[str, str]
     brokers: tuple[str, ...]
     hubs: dict[str, str]
 
@@ -80,6 +82,8 @@ def make_log(folder: Path, last_day: date, days: int = 28, people: int = 10_000,
         rows.write_parquet(home / "part-0.parquet")
     used = told.uses > 0
     own = isles.internal
+    brokers = tuple(isles.keys[isles.brokers.tolist()])
+    hubs: dict[str, str] = dict(isles.hubs.iter_rows())
     return Truth(
         rows=told.rows,
         counts={
@@ -88,8 +92,9 @@ def make_log(folder: Path, last_day: date, days: int = 28, people: int = 10_000,
         },
         amount=told.amount,
         sides={"internal": int((used & own).sum()), "external": int((used & ~own).sum())},
-        brokers=tuple(isles.keys[isles.brokers.tolist()]),
-        hubs=dict(isles.hubs.iter_rows()),
+        kinds=dict.fromkeys(hubs, "hub") | dict.fromkeys(brokers, "account"),
+        brokers=brokers,
+        hubs=hubs,
     )
 
 

@@ -46,12 +46,13 @@ class CallsReading:
                 f'log.rules.default_country = "{rules.default_country}": no country with telephone numbers; '
                 "give its two letters of ISO 3166-1, such as GB"
             )
+        special = _special(log)
         code = b"".join(Path(str(part.__file__)).read_bytes() for part in (calls_legs, calls_numbers, calls_plans))
         told = log.model_dump_json(exclude={"path": True, "rules": {"numbers"}})
         parts = [Path(__file__).read_bytes(), code, told.encode(), digest_of(rules.numbers).encode()]
         parts.append(phonenumbers.__version__.encode())
         digests = b"".join(hashlib.blake2b(part, digest_size=12).digest() for part in parts)
-        return cls(log, _special(log), hashlib.blake2b(digests, digest_size=12).hexdigest())
+        return cls(log, special, hashlib.blake2b(digests, digest_size=12).hexdigest())
 
     @property
     def settles(self) -> bool:
@@ -231,5 +232,7 @@ def _special(log: CallsLog) -> pl.DataFrame:
         (~table["key"].is_first_distinct(), "number stands there twice; leave it once"),
     ):
         if bad.any():
-            raise SettingsError(f"log.rules.numbers: {rules.numbers}, row {int(bad.arg_max() or 0) + 1}: {what}")
+            raise SettingsError(
+                f"log.rules.numbers: {rules.numbers}, row {int(bad.arg_max() or 0) + 1} after the header: {what}"
+            )
     return table.select("key", "role", "label")

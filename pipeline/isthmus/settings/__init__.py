@@ -8,7 +8,7 @@ from isthmus.settings.calls import CallsColumns, CallsLog, CallsRules
 from isthmus.settings.email import EmailColumns, EmailLog, EmailRules
 from isthmus.settings.file import load, load_all, to_toml
 from isthmus.settings.kinds import Log
-from isthmus.settings.log import PlainColumns, PlainLog, mapped
+from isthmus.settings.log import PlainColumns, PlainLog, mapped, spare
 from isthmus.settings.models import (
     Distance,
     Engine,
@@ -54,6 +54,7 @@ __all__ = [
     "load",
     "load_all",
     "mapped",
+    "spare",
     "to_toml",
     "types_of",
 ]

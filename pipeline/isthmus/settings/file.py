@@ -130,11 +130,15 @@ def _explain(path: Path, error: ValidationError, kind: str, of: str) -> str:
         key = ".".join(where) or "settings"
         if fault["type"] == "extra_forbidden":
             known = list(_section(where[:-1], kind).model_fields)
+            others = [other for other in KINDS if where[0] == "log" and _knows(where, other)]
             near = difflib.get_close_matches(where[-1], known, n=1, cutoff=0.5)
             hint = f"did you mean {near[0]}?" if near else f"known here: {', '.join(known)}"
+            if others:
+                told = " or ".join(f'"{other}"' for other in others)
+                hint = f'it belongs to log.kind = {told}, but the kind of this log is "{kind}"'
             lines.append(f"{key} = {_show(fault['input'])}: unknown key; {hint}")
         elif fault["type"] == "missing":
-            lines.append(f"{key}: missing; {_meaning(where, kind)}")
+            lines.append(f"{key}: missing; {_wanted(where, kind)}")
         elif fault["type"] == "model_type":
             lines.append(f"{key} = {_show(fault['input'])}: a section, not a value; write it as [{key}]")
         elif fault["type"] == "union_tag_invalid":
@@ -153,6 +157,22 @@ def _section(steps: list[str], kind: str) -> type[Section]:
         told = section.model_fields[step].annotation
         section = KINDS[kind] if step == "log" else told  # type: ignore[assignment]
     return section
+
+
+def _knows(steps: list[str], kind: str) -> bool:
+    try:
+        return steps[-1] in _section(steps[:-1], kind).model_fields
+    except (KeyError, AttributeError):
+        return False
+
+
+def _wanted(steps: list[str], kind: str) -> str:
+    """What a key that is missing means; of a section, which keys it must have."""
+    section = _section(steps[:-1], kind).model_fields[steps[-1]].annotation
+    if steps != ["log"] and isinstance(section, type) and issubclass(section, Section):
+        keys = [name for name, field in section.model_fields.items() if field.is_required()]
+        return f"write [{'.'.join(steps)}] with {' and '.join(keys)}"
+    return _meaning(steps, kind)
 
 
 def _meaning(steps: list[str], kind: str) -> str:

@@ -4,11 +4,11 @@ from __future__ import annotations
 
 from typing import Literal
 
-from pydantic import Field, model_validator
+from pydantic import Field, ValidationError, model_validator
 
 from isthmus.settings.section import Section, column, file_key, key
 
-__all__ = ["PATH", "PlainColumns", "PlainLog", "mapped"]
+__all__ = ["PATH", "PlainColumns", "PlainLog", "mapped", "spare"]
 
 PATH = "folder or glob of Parquet files; a folder may hold date partitions such as dt=2026-11-30"
 
@@ -52,3 +52,13 @@ class PlainLog(Section):
 def mapped(columns: Section) -> dict[str, str]:
     """Our name -> the log's, of the columns that the log has."""
     return {ours: theirs for ours, theirs in columns.model_dump().items() if theirs}
+
+
+def spare(log: Section, name: str) -> bool:
+    """Whether the settings, otherwise as they are, may say that the log has no such column."""
+    told = log.model_dump()
+    try:
+        type(log).model_validate({**told, "columns": {**told["columns"], name: ""}})
+    except ValidationError:
+        return False
+    return True

@@ -1,4 +1,4 @@
-"""An invented payments log: seeded, of any size, with the truth about itself.
+"""An invented log of kind "plain", of payments: seeded, of any size, with the truth about itself.
 
 The Ombriel Isles and their mutual bank do not exist. Twelve towns trade among themselves, and almost nothing passes
 from one town to another except through half a dozen travelling trades: parties of a dozen counterparts each, busy
@@ -23,16 +23,14 @@ from numpy.typing import NDArray
 from isthmus.errors import StoreError
 from isthmus.store import story
 
-__all__ = ["AS_OF", "CONFIG", "Truth", "make_log"]
-
-AS_OF = date(2026, 11, 30)
+__all__ = ["CONFIG", "Truth", "make_log"]
 
 CONFIG = """\
 # Settings of the invented log. Every key that is not here has its default: `isthmus check` tells them.
 series = "ombriel"
 
 [log]
-path = "payments"
+path = "plain"
 
 [log.columns]
 sender = "payer_account"
@@ -62,8 +60,10 @@ WEEKDAYS = np.array([1.05, 1.0, 1.0, 1.05, 1.3, 0.7, 0.45])  # Monday first
 
 # Shares of a day's rows; all dirt together stays below one row in a hundred.
 SPOILT = {
-    "null_key": 0.0004,
-    "empty_key": 0.0003,
+    "null_payer": 0.0002,
+    "null_payee": 0.0002,
+    "empty_payer": 0.0002,
+    "empty_payee": 0.0002,
     "null_time": 0.0004,
     "odd_time": 0.0006,
     "negative_amount": 0.0006,
@@ -90,8 +90,10 @@ class Truth:
     """
 
     rows: int
-    null_key: int
-    empty_key: int
+    null_payer: int
+    null_payee: int
+    empty_payer: int
+    empty_payee: int
     null_time: int
     odd_time: int
     negative_amount: int
@@ -106,23 +108,46 @@ class Truth:
     @property
     def refused(self) -> int:
         """Rows with a key, time or amount that cannot be."""
-        keys = self.null_key + self.empty_key
-        return keys + self.null_time + self.odd_time + self.negative_amount + self.nan_amount
+        return sum(self._refused.values())
 
     @property
     def used(self) -> int:
         """Sound rows between two parties, each counted once."""
         return self.rows - self.refused - self.self_payment - self.repeated
 
+    @property
+    def counts(self) -> dict[str, dict[str, int]]:
+        """outcome -> reason -> rows, as CONFIG reads them."""
+        found = {
+            "used": {"used": self.used},
+            "refused": self._refused,
+            "filtered": {"self-contact": self.self_payment},
+            "duplicate": {"duplicate": self.repeated},
+        }
+        return {outcome: reasons for outcome, reasons in found.items() if any(reasons.values())}
+
+    @property
+    def _refused(self) -> dict[str, int]:
+        return {
+            "amount is negative": self.negative_amount,
+            "amount is not finite": self.nan_amount,
+            "receiver is empty": self.empty_payee,
+            "receiver is null": self.null_payee,
+            "sender is empty": self.empty_payer,
+            "sender is null": self.null_payer,
+            "time is outside 1970..2199": self.odd_time,
+            "time is null": self.null_time,
+        }
+
 
 def make_log(
     folder: Path,
+    last_day: date,
+    days: int = 28,
+    people: int = 20_000,
+    seed: int = 1,
     *,
     rows: int = 300_000,
-    parties: int = 20_000,
-    days: int = 30,
-    last_day: date = AS_OF,
-    seed: int = 1,
     dirt: bool = True,
     progress: Callable[[float], None] = lambda share: None,
 ) -> Truth:
@@ -132,18 +157,18 @@ def make_log(
     (float64). Each broker is paid and pays once in seven days, so `days` >= 7 shows them whole. `progress` hears the
     share done, 0..1.
 
-    Raises ValueError (fewer than 100 rows a day, 50 parties a town or 1 day), StoreError (the folder cannot be
+    Raises ValueError (fewer than 100 rows a day, 50 people a town or 1 day), StoreError (the folder cannot be
     written, or holds days outside of these, which would be read along).
     """
-    if days < 1 or rows < 100 * days or parties < 50 * len(TOWNS):
+    if days < 1 or rows < 100 * days or people < 50 * len(TOWNS):
         raise ValueError(
-            f"rows={rows}, parties={parties}, days={days}: give at least 1 day, 100 rows a day and "
-            f"{50 * len(TOWNS)} parties"
+            f"rows={rows}, people={people}, days={days}: give at least 1 day, 100 rows a day and "
+            f"{50 * len(TOWNS)} people"
         )
     wanted = [last_day - timedelta(days=back) for back in range(days - 1, -1, -1)]
     if others := {found.name for found in folder.glob("dt=*")} - {f"dt={day}" for day in wanted}:
         raise StoreError(f"{folder} holds other days ({min(others)} .. {max(others)}); give an empty folder")
-    book = _Book.draw(parties, seed)
+    book = _Book.draw(people, seed)
     seen = np.zeros(len(book.payer), np.bool_)
     counts = dict.fromkeys((*SPOILT, "repeated", "stray"), 0)
     with story("write the log"):
@@ -304,9 +329,10 @@ def _spoil(rows: _Rows, where: dict[str, Ints], book: _Book) -> pl.DataFrame:
     amount[where["negative_amount"]] *= -1
     amount[where["nan_amount"]] = np.nan
     keys = {"payer_account": book.keys.gather(payer), "payee_account": book.keys.gather(payee)}
-    for kind, value in (("null_key", None), ("empty_key", "")):
-        for side, spots in zip(keys, (where[kind][::2], where[kind][1::2]), strict=True):
-            keys[side] = keys[side].scatter(np.sort(spots), value)
+    for word, value in (("null", None), ("empty", "")):
+        for side in ("payer", "payee"):
+            account = f"{side}_account"
+            keys[account] = keys[account].scatter(np.sort(where[f"{word}_{side}"]), value)
     booked = pl.Series(time).scatter(np.sort(where["null_time"]), None)
     return pl.DataFrame(
         {"payment_id": rows.id, **keys, "booked_at": booked.cast(pl.Datetime("us", "UTC")), "amount": amount}
