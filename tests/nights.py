@@ -11,7 +11,7 @@ from typing import Any
 
 import polars as pl
 
-from isthmus.cli import _exit_code
+from isthmus.cli import exit_code
 
 AS_OF = date(2026, 3, 4)
 FIRST = date(2026, 3, 1)
@@ -44,7 +44,7 @@ def isthmus(*arguments: object) -> Said:
     """Run the command line in this process."""
     out, err = io.StringIO(), io.StringIO()
     with contextlib.redirect_stdout(out), contextlib.redirect_stderr(err):
-        code = _exit_code([str(argument) for argument in arguments])
+        code = exit_code([str(argument) for argument in arguments])
     return Said(code, out.getvalue(), err.getvalue())
 
 

@@ -206,7 +206,7 @@ def test_json_reaches_a_stdout_that_knows_ascii_only(tmp_path: Path) -> None:
     raw = io.BytesIO()
     out = io.TextIOWrapper(raw, encoding="ascii")
     with contextlib.redirect_stdout(out), contextlib.redirect_stderr(io.StringIO()):
-        code = cli._exit_code(["check", str(site.config), "--as-of", str(AS_OF), "--settings", "--json"])
+        code = cli.exit_code(["check", str(site.config), "--as-of", str(AS_OF), "--settings", "--json"])
         out.flush()
     assert code == 0
     assert json.loads(raw.getvalue())["log"]["path"] == str(site.log)

@@ -389,7 +389,7 @@ def counting(self, state):
         os.kill(os.getpid(), signal.SIGKILL)
 
 checkpoint.Checkpoint.offer = counting
-code = cli._exit_code(arguments)
+code = cli.exit_code(arguments)
 print(kept[0])
 sys.exit(code)
 """
