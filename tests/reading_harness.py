@@ -50,7 +50,7 @@ def tell(reading: Reading, *parts: pl.DataFrame) -> Told:
     outcomes: dict[str, dict[str, int]] = {}
     for (outcome, reason), number in sorted(counts.items()):
         outcomes.setdefault(outcome, {})[reason] = number
-    return Told(outcomes, used, ties.with_columns(pl.col(PLACES).cast(pl.String)), parties)
+    return Told(outcomes, used, ties.with_columns(pl.col(PLACES).cast(pl.String)), parties.drop("named"))
 
 
 def _part(reading: Reading, rows: pl.DataFrame) -> tuple[pl.DataFrame, pl.DataFrame, Counter[tuple[str, str]]]:
@@ -66,7 +66,7 @@ def _part(reading: Reading, rows: pl.DataFrame) -> tuple[pl.DataFrame, pl.DataFr
     book = usable.group_by("key", maintain_order=True).agg(
         pl.col("kind", "side").max(), pl.col("label").drop_nulls().first()
     )
-    book = book.rename({"key": "party"})
+    book = book.rename({"key": "party"}).with_columns(named="kind")
     codes = book.select("party").with_row_index("code")
     known = known.join(codes, left_on="key", right_on="party", how="left", maintain_order="left")
     for side in PLACES:
@@ -110,10 +110,9 @@ def _part(reading: Reading, rows: pl.DataFrame) -> tuple[pl.DataFrame, pl.DataFr
 
 
 def _added_up(used: pl.DataFrame, books: Sequence[pl.DataFrame]) -> tuple[pl.DataFrame, pl.DataFrame]:
-    parties = pl.concat([book.select("party", "kind", "side", "label") for book in books])
-    parties = (
-        parties.group_by("party").agg(pl.col("kind", "side").max(), pl.col("label").drop_nulls().first()).sort("party")
-    )
+    parties = pl.concat([book.select("party", "kind", "named", "side", "label") for book in books])
+    about = pl.col("kind", "named", "side").max(), pl.col("label").drop_nulls().first()
+    parties = parties.group_by("party").agg(*about).sort("party")
     keys = pl.Enum(parties["party"])
     ties = (
         used.select(sender="sender_key", receiver="receiver_key", amount="amount", time="time", day="day")

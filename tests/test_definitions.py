@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import io
 import json
 from pathlib import Path
 
@@ -66,6 +67,16 @@ def test_all_commands_speak_of_every_series(site: Site) -> None:
     said = isthmus("history", site.config)
     for name in ("s", "s-mutual", "s-short"):
         assert f"Series {name}, " in said.err
+
+
+def test_a_party_is_forgotten_in_every_series(site: Site, monkeypatch: pytest.MonkeyPatch) -> None:
+    assert site.score().code == 0
+    monkeypatch.setattr("sys.stdin", io.StringIO("ada@k1\n"))
+    said = isthmus("forget", site.config, "--party")
+    assert said.code == 0, said.err
+    scores = pl.read_parquet(site.warehouse / "scores" / "*" / "*" / "scores.parquet", hive_partitioning=True)
+    assert "ada@k1" not in set(scores["party"])
+    assert scores["series"].n_unique() == 3
 
 
 def test_one_series_that_fails_does_not_keep_the_others(site: Site) -> None:

@@ -212,6 +212,7 @@ def test_defaults_are_the_contract(tmp_path: Path) -> None:
             "late": "restate",
             "memory": "16GiB",
         },
+        "privacy": {"pseudonyms": False, "purpose": "", "secret_env": "", "secret_file": ""},
         "signals": {"log": "", "prometheus": "", "openlineage": ""},
     }
 
@@ -267,7 +268,10 @@ def test_memory_that_is_no_size_is_refused(text: str) -> None:
         Run(memory=text)
 
 
+PRIVATE = {"pseudonyms": True, "purpose": "p", "secret_env": "A"}
 CHANGES: dict[str, dict[str, Any]] = {
+    "privacy.pseudonyms": {"privacy": PRIVATE},
+    "privacy.purpose": {"privacy": PRIVATE | {"purpose": "q"}},
     "series": {"series": "t"},
     "log.columns.sender": {"log": {"columns": {"sender": "x"}}},
     "log.columns.receiver": {"log": {"columns": {"receiver": "x"}}},
@@ -316,6 +320,8 @@ NO_CHANGES: dict[str, dict[str, Any]] = {
     "run.memory": {"run": {"memory": "1GiB"}},
     "run.finish_by": {"run": {"finish_by": "05:45"}},
     "run.late": {"run": {"late": "freeze"}},
+    "privacy.secret_env": {"privacy": {"secret_env": "A"}},
+    "privacy.secret_file": {"privacy": {"secret_file": "/p/key"}},
     "signals.log": {"signals": {"log": "-"}},
     "signals.prometheus": {"signals": {"prometheus": "/p/s.prom"}},
     "signals.openlineage": {"signals": {"openlineage": "http://h:1"}},

@@ -13,6 +13,7 @@ from isthmus.errors import GateStopped
 from isthmus.gates import Gatekeeper
 from isthmus.graph import Graph
 from isthmus.ingest import Sample, Survey, Window, drift, in_window, sample_window, survey
+from isthmus.privacy import open_pseudonyms
 from isthmus.publish import Night, counted_before, reference, volume_of
 from isthmus.settings import Settings, mapped
 from isthmus.tables import LAYOUT
@@ -50,6 +51,7 @@ def foresee(settings: Settings, first_day: date, last_day: date) -> Forecast:
     """Survey the log, read a sample of the window, and plan. Raises what a night would raise for the same faults."""
     store.place(settings.run.warehouse).examine(LAYOUT, "run.warehouse")
     store.examine(settings.work, LAYOUT, "run.work")
+    open_pseudonyms(settings.privacy, settings.log.kind)  # what is looked at stays in memory, so without any
     with open_door(threads=settings.run.threads) as door:
         found = survey(settings.log, first_day, last_day, door)
     sample = sample_window(found, settings.ties, SAMPLE_ROWS)

@@ -128,7 +128,9 @@ def _measured_and_published(
     ) as door:
         with watch.stage("survey"):
             found = survey(settings.log, first_day, last_day, door)
-        reading = read_window(found, settings.ties, settings.reading, work, door, watch, deadline.reading)
+        reading = read_window(
+            found, settings.ties, settings.reading, work, door, watch, deadline.reading, settings.privacy
+        )
         watch.know(rows_read=reading.rows_read, **{f"rows_{name}": reading.rows(name) for name in reading.outcomes})
         gatekeeper.after_reading(
             rows=reading.rows_in_window,

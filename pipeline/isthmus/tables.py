@@ -154,6 +154,7 @@ RUNS = Table(
         RUN_ID,
         Column("window_start", pl.Date(), "first day of the window"),
         _text("definition", "hash of the settings that change results"),
+        _text("key_id", "names the secret that the pseudonyms are made with; null: keys as they are", nullable=True),
         _count("revision", "1 = first published; one more each time the night was replaced by other content", ""),
         _text("version", "of isthmus"),
         _text("method", "exact, pivots or paths"),

@@ -2,7 +2,7 @@
 
 from isthmus.ingest.columns import drift
 from isthmus.ingest.files import Survey, holds, states_of, survey
-from isthmus.ingest.window import Sample, Window, in_window, read_window, sample_window
+from isthmus.ingest.window import Sample, Window, in_window, parties_of, read_window, sample_window
 
 __all__ = [
     "Sample",
@@ -11,6 +11,7 @@ __all__ = [
     "drift",
     "holds",
     "in_window",
+    "parties_of",
     "read_window",
     "sample_window",
     "states_of",

@@ -12,8 +12,8 @@ from isthmus.readings import Reading
 
 __all__ = ["ABOUT", "code_sides", "shared_book"]
 
-# What is known of a party besides its key.
-ABOUT = ("kind", "side", "label")
+# What is known of a party besides its key. `named`: the kind that the key itself tells, which a pseudonym cannot.
+ABOUT = ("kind", "named", "side", "label")
 SIDES = ("sender", "receiver")
 # What readings have told in this process, by their fingerprints: parts hold mostly the same keys.
 _MOST_KNOWN = 5_000_000
@@ -53,19 +53,23 @@ def _told(raw: pl.Series, reading: Reading) -> pl.DataFrame:
     """What the reading tells of each distinct text, asked only for those that it has not been asked before."""
     known = _known.get(reading.fingerprint)
     if known is None:
-        told = reading.keys(raw).with_columns(raw)
+        told = _asked(raw, reading)
         _known.clear()  # one log at a time
     else:
         told = raw.to_frame().join(known.with_columns(asked=True), on="raw", how="left", maintain_order="left")
         if (new := told["asked"].is_null()).any():
             told = told.drop("asked").with_row_index("at")
             texts = raw.filter(new)
-            answers = reading.keys(texts).with_columns(texts, at=told["at"].filter(new))
+            answers = _asked(texts, reading).with_columns(at=told["at"].filter(new))
             told = pl.concat([told.filter(~new), answers.select(told.columns)]).sort("at")
             known = pl.concat([known, answers.select(known.columns)])
     if known is None or len(known) <= _MOST_KNOWN:
         _known[reading.fingerprint] = told.select("raw", "key", "fault", *ABOUT) if known is None else known
     return told
+
+
+def _asked(raw: pl.Series, reading: Reading) -> pl.DataFrame:
+    return reading.keys(raw).with_columns(raw, named="kind")
 
 
 def shared_book(books: Sequence[pl.DataFrame]) -> tuple[pl.DataFrame, list[pl.Series]]:
@@ -87,7 +91,7 @@ def _about(parties: pl.Series, places: Sequence[pl.Series], books: Sequence[pl.D
     about = (
         told.lazy()
         .group_by("place")
-        .agg(pl.col("kind", "side").max(), pl.col("label").drop_nulls().min())
+        .agg(pl.col("kind", "named", "side").max(), pl.col("label").drop_nulls().min())
         .sort("place")
         .collect(engine="streaming")
     )

@@ -11,14 +11,15 @@ from pathlib import Path
 import polars as pl
 import pyarrow as pa
 
-from isthmus.errors import TryAgain
+from isthmus.errors import SettingsError, TryAgain
 from isthmus.ingest.columns import DAY, PER_SECOND
 from isthmus.ingest.files import Part, damaged, open_parquet, state_of
 from isthmus.ingest.kept import Facts, keep
 from isthmus.ingest.keys import SIDES, code_sides
 from isthmus.ingest.ties import ties_of_rows
+from isthmus.privacy import Pseudonyms, open_pseudonyms
 from isthmus.readings import FILTERED, REFUSED, Reading, Verdict, open_reading
-from isthmus.settings import Log, mapped, types_of
+from isthmus.settings import Log, Privacy, mapped, types_of
 
 __all__ = [
     "NOTHING",
@@ -49,12 +50,17 @@ Counts = dict[tuple[int | None, str, str], int]
 
 @dataclass(frozen=True)
 class PartTask:
-    """Read one part into the kept folder `folder`, made below `scratch`."""
+    """Read one part into the kept folder `folder`, made below `scratch`.
+
+    `privacy` says where this process finds the secret; `check` is of the pseudonyms that must come of it.
+    """
 
     part: Part
     folder: str
     scratch: str
     log: Log
+    privacy: Privacy
+    check: str
 
     def recalled(self, facts: Facts) -> PartResult:
         """The result, from what was kept of it."""
@@ -123,7 +129,7 @@ def read_part(task: PartTask) -> PartResult:
     `rows.arrow` until `add_up_rows`.
     """
     reading = open_reading(task.log)
-    judged = judge_part(task.part, task.log, reading)
+    judged = judge_part(task.part, task.log, reading, _pseudonyms(task))
 
     def fill(folder: Path) -> Facts:
         refused = [reason for reason, outcome in judged.outcomes.items() if outcome == REFUSED]
@@ -138,6 +144,14 @@ def read_part(task: PartTask) -> PartResult:
         return _facts(count_rows(judged), days)
 
     return task.recalled(keep(Path(task.folder), Path(task.scratch), fill))
+
+
+def _pseudonyms(task: PartTask) -> Pseudonyms | None:
+    """Of this process's own secret, once it is known to be that of the run."""
+    found = open_pseudonyms(task.privacy, task.log.kind)
+    if found and found.check != task.check:
+        raise SettingsError("privacy: a worker finds another secret than the run; give all processes the same")
+    return found
 
 
 def add_up_rows(task: AddTask) -> PartResult:
@@ -178,8 +192,11 @@ def _write_ties(rows: pl.DataFrame, folder: Path) -> list[int]:
     return sorted(day for (day,) in days)
 
 
-def judge_part(part: Part, log: Log, reading: Reading) -> Judgement:
-    """Read a part and tell what becomes of each contact. Raises DataRefused for a damaged file."""
+def judge_part(part: Part, log: Log, reading: Reading, pseudonyms: Pseudonyms | None = None) -> Judgement:
+    """Read a part and tell what becomes of each contact; its parties have `pseudonyms`, where there are any.
+
+    Raises DataRefused for a damaged file.
+    """
     contacts = reading.contacts(_load(part, log))
     book, contacts, faults = code_sides(contacts, reading)
     judged = reading.judge(contacts, book)
@@ -213,7 +230,11 @@ def judge_part(part: Part, log: Log, reading: Reading) -> Judgement:
         .select("row", "day", "reason", *SIDES, "amount", "time", *marks)
         .collect(engine="streaming")
     )
-    return Judgement(judged.book, frame, outcomes)
+    book = judged.book
+    if pseudonyms:  # keys, and the hashes made of them
+        book = book.with_columns(pseudonyms.of(book["party"]))
+        frame = frame.with_columns(pseudonyms.marked(frame[name]) for name in marks if frame.schema[name] == pl.UInt64)
+    return Judgement(book, frame, outcomes)
 
 
 def count_rows(judged: Judgement) -> Counts:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import hashlib
 from collections import Counter
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import asdict, dataclass
 from datetime import date
 from pathlib import Path
@@ -32,15 +32,16 @@ from isthmus.ingest.rows import (
     settled,
 )
 from isthmus.ingest.ties import DayTask, Source, add_up, add_up_day, recode, ties_of_rows, window_book
+from isthmus.privacy import Pseudonyms, open_pseudonyms
 from isthmus.readings import DUPLICATE, FILTERED, REFUSED, Reading, open_reading
-from isthmus.settings import Log, Ties
+from isthmus.settings import Log, Privacy, Ties
 from isthmus.store import fresh
 from isthmus.watch import Watch
 
-__all__ = ["Sample", "Window", "in_window", "read_window", "sample_window"]
+__all__ = ["Sample", "Window", "in_window", "parties_of", "read_window", "sample_window"]
 
 OUTSIDE = "outside the window"
-_READING = 2  # to be raised whenever rows are read or judged otherwise, so that nothing kept before is used
+_READING = 3  # to be raised whenever rows are read or judged otherwise, so that nothing kept before is used
 # Columns that every reading settles by, beside its extras.
 _SETTLED = ("part", "at", "day", "time", "amount", "a", "b")
 AnyTask = TypeVar("AnyTask", PartTask, AddTask)
@@ -54,7 +55,7 @@ class Window:
     both keys, which are of the type Enum over the sorted keys. `parties`: party, kind, side, label, in the order of the
     keys; some may have no tie. `refused`: file, row, reason. `outcomes`: outcome -> reason -> rows; the rows add up to
     `rows_read`. A row that names several receivers counts as so many. `volume`: day of the window -> its rows, whatever
-    became of them.
+    became of them. `key_id`: of the secret that the pseudonyms are made with; None: the keys are the log's own.
     """
 
     ties: pl.DataFrame
@@ -63,6 +64,7 @@ class Window:
     outcomes: dict[str, dict[str, int]]
     missing_days: tuple[date, ...]
     volume: dict[date, int]
+    key_id: str | None = None
 
     def rows(self, outcome: str) -> int:
         return sum(self.outcomes.get(outcome, {}).values())
@@ -89,6 +91,7 @@ def read_window(
     door: Door,
     watch: Watch,
     pacing: Callable[[Tick], Tick] = lambda tick: tick,
+    privacy: Privacy = Privacy(),  # noqa: B008 (frozen)
 ) -> Window:
     """Read the surveyed parts, keep one table of ties per day below `kept`, and add up those that count.
 
@@ -99,14 +102,18 @@ def read_window(
     """
     log, window = found.log, _window(found)
     scratch = fresh(work / "scratch")
-    reading = open_reading(log)
+    reading, pseudonyms = open_reading(log), open_pseudonyms(privacy, log.kind)
+
+    def read(tick: Tick) -> list[PartResult]:
+        return _read_parts(found, reading, (privacy, pseudonyms), window, kept, scratch, door, tick)
+
     with watch.stage("read") as plain_tick:
         tick = pacing(plain_tick)
-        results = _read_parts(found, reading, window, kept, scratch, door, tick)
+        results = read(tick)
         days = _day_tasks(results, window, kept / "days", scratch)
         missing = _not_kept(list(days.values()), door)
         if not all(door.run(is_sound, _feeding(missing))):  # damaged since: what went is made anew
-            results = _read_parts(found, reading, window, kept, scratch, door, tick)
+            results = read(tick)
     outcomes = _count(results, window)
     if not outcomes.get(USED):
         raise DataRefused(_nothing_used(outcomes, found))
@@ -119,17 +126,27 @@ def read_window(
     fresh(scratch)
     prune(kept / "parts", kept / "added", kept / "days")
     missing_days = tuple(day_of(day) for day in window if day not in days)
-    return Window(counted, parties, refused, outcomes, missing_days, _volume(results, window))
+    volume, key_id = _volume(results, window), pseudonyms.key_id if pseudonyms else None
+    return Window(counted, parties.drop("named"), refused, outcomes, missing_days, volume, key_id)
 
 
 def _read_parts(
-    found: Survey, reading: Reading, window: range, kept: Path, scratch: Path, door: Door, tick: Tick
+    found: Survey,
+    reading: Reading,
+    private: tuple[Privacy, Pseudonyms | None],
+    window: range,
+    kept: Path,
+    scratch: Path,
+    door: Door,
+    tick: Tick,
 ) -> list[PartResult]:
-    """What is known of each part: kept from a former run when neither its file nor its reading has changed."""
-    log = found.log
-    told = log.columns.model_dump(), reading.fingerprint
+    """What is known of each part: kept from a former run when neither its file nor its reading has changed, nor whose
+    pseudonyms its parties have."""
+    log, (privacy, pseudonyms) = found.log, private
+    check = pseudonyms.check if pseudonyms else ""
+    told = log.columns.model_dump(), reading.fingerprint, check
     tasks = [
-        PartTask(part, str(kept / "parts" / name_for(_READING, asdict(part), told)), str(scratch), log)
+        PartTask(part, str(kept / "parts" / name_for(_READING, asdict(part), told)), str(scratch), log, privacy, check)
         for part in found.parts
     ]
     if not reading.settles:
@@ -278,6 +295,12 @@ def _refused(found: Survey, results: Sequence[PartResult], window: range) -> pl.
     return pl.concat(parts).filter(in_window).drop("day").sort("file", "row").collect()
 
 
+def parties_of(found: Survey, log: Log, reading: Reading) -> Iterator[pl.Series]:
+    """The distinct parties (String, clear) of each surveyed part, as a night would know them; in memory only."""
+    for part in found.parts:
+        yield judge_part(part, log, reading).book["party"]
+
+
 @dataclass(frozen=True)
 class Sample:
     """Some of the window's rows, and the ties of the first half of those. `window.refused` is empty."""
@@ -318,7 +341,7 @@ def sample_window(found: Survey, rules: Ties, most_rows: int) -> Sample:
     days = set(used["day"])
     missing_days = tuple(day_of(day) for day in window if day not in days)
     volume = _volume(results, window)
-    whole = Window(ties, parties, pl.DataFrame(), outcomes, missing_days, volume)
+    whole = Window(ties, parties.drop("named"), pl.DataFrame(), outcomes, missing_days, volume)
     return Sample(sum(part.rows for part in read), whole, half)
 
 

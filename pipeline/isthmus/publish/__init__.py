@@ -3,6 +3,8 @@
 from isthmus.publish.earlier import (
     complete,
     counted_before,
+    damaged,
+    kept_nights,
     nights_of,
     published,
     record_of,
@@ -11,7 +13,7 @@ from isthmus.publish.earlier import (
     volume_of,
 )
 from isthmus.publish.manifest import input_id_of, manifest, revision_of, run_id_of, run_row
-from isthmus.publish.night import Night, publish
+from isthmus.publish.night import Night, publish, publish_without
 from isthmus.publish.plans import checkpoint_key, plan_once, remember
 
 __all__ = [
@@ -19,11 +21,14 @@ __all__ = [
     "checkpoint_key",
     "complete",
     "counted_before",
+    "damaged",
     "input_id_of",
+    "kept_nights",
     "manifest",
     "nights_of",
     "plan_once",
     "publish",
+    "publish_without",
     "published",
     "record_of",
     "reference",

@@ -19,6 +19,7 @@ __all__ = [
     "complete",
     "counted_before",
     "damaged",
+    "kept_nights",
     "nights_of",
     "published",
     "record_of",
@@ -51,6 +52,12 @@ def published(warehouse: Place, series: str) -> list[Night]:
     """All nights of a series that have a run.json, oldest first. Raises StoreError."""
     nights = (Night(warehouse, series, day) for day in _days(warehouse, series, "runs"))
     return [night for night in nights if "run.json" in warehouse.below(f"runs/{night.name}")]
+
+
+def kept_nights(warehouse: Place, series: str) -> list[Night]:
+    """All nights of a series of which anything is there, oldest first. Raises StoreError."""
+    days = {day for table in warehouse.below("") for day in _days(warehouse, series, table)}
+    return [Night(warehouse, series, day) for day in sorted(days)]
 
 
 def complete(night: Night, definition: str) -> bool:

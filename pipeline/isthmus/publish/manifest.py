@@ -45,6 +45,7 @@ def input_id_of(settings: Settings, as_of: date, reading: Window) -> str:
     """A hash of all that goes into a night's measurement."""
     digest = hashlib.blake2b(digest_size=8)
     told = [settings.series, str(as_of), settings.definition, _version(), reading.outcomes, settings.score.top]
+    told += [reading.key_id] if reading.key_id else []
     digest.update(json.dumps(told, sort_keys=True).encode())
     for column in reading.parties.iter_columns():
         digest.update("\0".join(column.cast(pl.String).fill_null("")).encode())
@@ -73,6 +74,7 @@ def run_row(
         "run_id": run_id,
         "window_start": first_day,
         "definition": settings.definition,
+        "key_id": reading.key_id,
         "revision": revision,
         "version": _version(),
         "method": estimate.method,

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+from collections.abc import Sequence
 from contextlib import nullcontext
 from dataclasses import dataclass
 from datetime import date
@@ -13,9 +14,9 @@ import polars as pl
 
 from isthmus.betweenness import Estimate
 from isthmus.store import File, Guard, Place, place
-from isthmus.tables import PARTIES, REFUSED, RUNS, SCORES, TIES, Table, conform
+from isthmus.tables import PARTIES, REFUSED, RUNS, SCORES, TABLES, TIES, Table, conform
 
-__all__ = ["Night", "publish"]
+__all__ = ["Night", "publish", "publish_without"]
 
 
 @dataclass(frozen=True)
@@ -83,10 +84,42 @@ def publish(
         (REFUSED, conform(refused.with_columns(marked), REFUSED)),
         (RUNS, conform(pl.DataFrame([run], schema=RUNS.schema), RUNS)),
     ]
-    sizes = more.setdefault("tables", {})
+    more.setdefault("tables", {})
     told = run | more
+    _put(night, frames, told, guard)
+    return scores
+
+
+def publish_without(night: Night, told: dict[str, Any], keys: Sequence[str], warning: str, guard: Guard) -> int:
+    """Publish a night again without the rows that hold one of `keys`: one revision more, a warning more.
+
+    All else stays as it is: other parties' scores, counts and ranks, and the run's id. `told`: the night's run.json.
+    Returns how many rows went; where there are none nothing is published. Raises StoreError, and TryAgain when the
+    lease was lost.
+    """
+    frames, gone = list[tuple[Table, pl.DataFrame]](), 0
+    for table in TABLES.values():
+        if (stored := night.fetch(table.name)) is not None:
+            frame = pl.read_parquet(stored)
+            sides = [name for name in ("party", "sender", "receiver") if name in frame.columns]
+            left = frame.filter(~pl.any_horizontal(pl.lit(False), *(pl.col(name).is_in(keys) for name in sides)))
+            gone += frame.height - left.height
+            frames.append((table, left))
+    if gone:
+        news = {
+            "revision": max(int(told.get("revision", 1)), 1) + 1,
+            "warnings": "; ".join(filter(None, (told.get("warnings"), warning))),
+        }
+        marked = [pl.lit(value).cast(RUNS.schema[name]).alias(name) for name, value in news.items()]
+        frames = [(table, frame.with_columns(marked) if table is RUNS else frame) for table, frame in frames]
+        _put(night, frames, told | news | {"tables": {}}, guard)
+    return gone
+
+
+def _put(night: Night, frames: list[tuple[Table, pl.DataFrame]], told: dict[str, Any], guard: Guard) -> None:
+    """Publish tables and run.json, to which the sizes of the tables are added while they are written."""
     files = [
-        *(_table_file(night, table, frame, sizes) for table, frame in frames),
+        *(_table_file(night, table, frame, told["tables"]) for table, frame in frames),
         File(
             night.path("runs", "run.json"),
             lambda path: path.write_text(
@@ -95,7 +128,6 @@ def publish(
         ),
     ]
     night.warehouse.publish(night.name, files, guard)
-    return scores
 
 
 def _known(parties: pl.DataFrame, keys: pl.Series) -> pl.DataFrame:

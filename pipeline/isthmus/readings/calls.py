@@ -59,6 +59,10 @@ class CallsReading:
         return True
 
     @property
+    def names(self) -> pl.Series:
+        return pl.Series(dtype=pl.String)
+
+    @property
     def left_out(self) -> frozenset[str]:
         return frozenset({"is withheld"})
 

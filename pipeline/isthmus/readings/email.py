@@ -63,6 +63,10 @@ class EmailReading:
         return True
 
     @property
+    def names(self) -> pl.Series:
+        return self.aliases.table["person"]
+
+    @property
     def left_out(self) -> frozenset[str]:
         return frozenset({UNDISCLOSED})
 
@@ -106,6 +110,7 @@ class EmailReading:
 
     def judge(self, contacts: pl.DataFrame, book: pl.DataFrame) -> Judged:
         contacts, book = self.aliases.apply(contacts, book)
+        book = book.with_columns(named=self._kind(pl.col("party")))
         book = book.with_columns(self._kinds_by_headers(contacts, book))
         hashes = book["party"].hash(seed=1)
         contacts = contacts.with_columns(
@@ -160,7 +165,7 @@ class EmailReading:
         """Which of FILTERS applies first."""
         rules = self.rules
         inside = book["side"] == "internal"
-        machine = book.select(self._kind(pl.col("party")) == "machine").to_series()
+        machine = book["named"] == "machine"
         from_inside, to_inside = (inside.gather(contacts[side]) for side in ("sender", "receiver"))
         from_machine, to_machine = (machine.gather(contacts[side]) for side in ("sender", "receiver"))
         applies = [
@@ -231,9 +236,7 @@ class EmailReading:
         left_out = [k for k, rule in (("bulk sender", rules.bulk), ("machine", rules.automatic)) if rule == "leave out"]
         sent = pl.col("party").is_in(ties["sender"].unique().implode())
         doubted = pl.col("kind").cast(pl.String).is_in(left_out) & sent
-        return parties.with_columns(
-            kind=pl.when(doubted).then(self._kind(pl.col("party").cast(pl.String))).otherwise("kind")
-        )
+        return parties.with_columns(kind=pl.when(doubted).then("named").otherwise("kind"))
 
 
 def _recipients(contacts: pl.DataFrame, least: int | None) -> pl.Series:

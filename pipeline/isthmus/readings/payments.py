@@ -73,6 +73,10 @@ class PaymentsReading:
         return True
 
     @property
+    def names(self) -> pl.Series:
+        return self.owners.names if self.rules.merge_owners else self.owners.names.clear()
+
+    @property
     def left_out(self) -> frozenset[str]:
         return frozenset()
 

@@ -73,8 +73,9 @@ class Owners:
             side="side",
             label="label",
         )
+        told = told.with_columns(named="kind").select(book.columns)
         known = book["party"].to_list()
-        whole = pl.concat([book.select("party", "kind", "side", "label"), told.filter(~pl.col("party").is_in(known))])
+        whole = pl.concat([book, told.filter(~pl.col("party").is_in(known))])
         place = pl.DataFrame({"party": self.names}).join(
             whole.with_row_index("place"), on="party", how="left", maintain_order="left"
         )["place"]

@@ -29,6 +29,10 @@ class PlainReading:
         return cls(bool(log.columns.amount), bool(log.columns.id))
 
     @property
+    def names(self) -> pl.Series:
+        return pl.Series(dtype=pl.String)
+
+    @property
     def settles(self) -> bool:
         return self.has_id
 

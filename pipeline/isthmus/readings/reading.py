@@ -84,6 +84,10 @@ class Reading(Protocol):
         """Whether `settle` is to be asked; else each part of the log can be added up by itself, which is quicker."""
 
     @property
+    def names(self) -> pl.Series:
+        """Parties (String) that only the user's tables name, such as persons and owners: no row of the log has them."""
+
+    @property
     def fingerprint(self) -> str:
         """Changes whenever the same rows may be read otherwise: with the code, the rules, or a table of the user's."""
 
@@ -106,8 +110,9 @@ class Reading(Protocol):
 
     def judge(self, contacts: pl.DataFrame, book: pl.DataFrame) -> Judged:
         """`contacts`: what `contacts` returned, `sender` and `receiver` as positions in the book (UInt32; null:
-        unusable). `book`: `party` (String, distinct), `kind`, `side`, `label`. Keys or times that are missing or
-        unusable, and contacts of a party with itself, are ingest's to judge, not the reading's."""
+        unusable). `book`: `party` (String, distinct), `kind`, `named` (the kind that the key tells), `side`, `label`.
+        Keys or times that are missing or unusable, and contacts of a party with itself, are ingest's to judge, not the
+        reading's."""
 
     def settle(self, rows: pl.LazyFrame) -> pl.DataFrame:
         """`rows`: the window's contacts that are still used: `part` and `at` (UInt32: which part, which place in it; in
@@ -117,8 +122,8 @@ class Reading(Protocol):
 
     def weigh(self, ties: pl.DataFrame, parties: pl.DataFrame) -> tuple[pl.DataFrame, pl.DataFrame, dict[str, int]]:
         """`ties`: sender and receiver (Enum over all keys), contacts, amount, days, first_seen, last_seen. `parties`:
-        party (the Enum), kind, side, label. Returned: the ties that stay, the parties as they are now known, and for
-        each filter's name how many contacts it took."""
+        party (the Enum; perhaps pseudonyms, so nothing can be read from it), kind, named, side, label. Returned: the
+        ties that stay, the parties as they are now known, and for each filter's name how many contacts it took."""
 
 
 def identity(*columns: pl.Expr, seed: int = 0) -> list[pl.Expr]:

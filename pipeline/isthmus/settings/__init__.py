@@ -24,6 +24,7 @@ from isthmus.settings.models import (
     Window,
 )
 from isthmus.settings.payments import PaymentsColumns, PaymentsLog, PaymentsRules
+from isthmus.settings.privacy import Privacy
 from isthmus.settings.section import types_of
 
 __all__ = [
@@ -45,6 +46,7 @@ __all__ = [
     "PaymentsRules",
     "PlainColumns",
     "PlainLog",
+    "Privacy",
     "Run",
     "Score",
     "Settings",

@@ -84,10 +84,11 @@ def _validated(path: Path, raw: dict[str, Any], of: str = "") -> Settings:
         update={key: _resolve(home, getattr(settings.run, key)) for key in ("warehouse", "work")}
     )
     log = _with_files(settings.log, home)
+    privacy = _with_files(settings.privacy, home)
     files = {key: value for key, value in settings.signals if value and (key, value) != ("log", "-")}
     signals = settings.signals.model_copy(update={key: _resolve(home, value) for key, value in files.items()})
     _apart(path, log.path, run)
-    return settings.model_copy(update={"run": run, "log": log, "signals": signals})
+    return settings.model_copy(update={"run": run, "log": log, "privacy": privacy, "signals": signals})
 
 
 def _apart(path: Path, log: str, run: Run) -> None:

@@ -12,6 +12,7 @@ from urllib.parse import urlsplit
 from pydantic import Field, model_validator
 
 from isthmus.settings.kinds import Log
+from isthmus.settings.privacy import Privacy
 from isthmus.settings.section import Section, files_of, key
 
 __all__ = [
@@ -189,6 +190,7 @@ class Settings(Section):
     graph: Graph = Field(default_factory=Graph)
     score: Score = Field(default_factory=Score)
     gates: Gates = Field(default_factory=Gates)
+    privacy: Privacy = Field(default_factory=Privacy)
     run: Run = Field(default_factory=Run)
     signals: Signals = Field(default_factory=Signals)
     definitions: dict[str, dict[str, Any]] = key(
@@ -239,8 +241,9 @@ class Settings(Section):
     @property
     def definition(self) -> str:
         """16 hex digits that name all settings that change results: not where it runs, not where files lie."""
-        told = self.model_dump(mode="json", exclude={"run", "gates", "signals", "log", "definitions"}) | {
-            "log": _without_files(self.log)
+        told = self.model_dump(mode="json", exclude={"run", "gates", "signals", "log", "definitions", "privacy"}) | {
+            "log": _without_files(self.log),
+            **self.privacy.meaning,
         }
         return hashlib.sha256(json.dumps(told, sort_keys=True).encode()).hexdigest()[:16]
 

@@ -12,7 +12,7 @@ from typing import Any
 from isthmus.settings import Settings
 from isthmus.signals.run import Run
 
-__all__ = ["signal"]
+__all__ = ["note", "signal"]
 
 LEVELS = {"warning": logging.WARNING, "stopped": logging.ERROR, "failed": logging.ERROR}
 GATES = {"warn": logging.WARNING, "stop": logging.ERROR}
@@ -27,6 +27,12 @@ def signal(settings: Settings) -> _Lines:
     return _Lines(settings.signals.log)
 
 
+def note(settings: Settings, event: str, **figures: Any) -> None:
+    """One line of what is no run, if lines are asked for. Unlike a run's signals it raises what goes wrong."""
+    if settings.signals.log:
+        signal(settings).write(logging.INFO, event, {"series": settings.series} | figures)
+
+
 class _Lines:
     def __init__(self, target: str) -> None:
         # not of the global tree of loggers: nobody else's settings change these lines, and they change nobody else's
@@ -38,7 +44,9 @@ class _Lines:
 
     def hear(self, event: str, run: Run, figures: dict[str, Any]) -> None:
         level = GATES.get(figures["state"], logging.INFO) if event == "gate" else LEVELS.get(event, logging.INFO)
-        told = run.key | figures | (_end(run) if event == run.state else {})
+        self.write(level, event, run.key | figures | (_end(run) if event == run.state else {}))
+
+    def write(self, level: int, event: str, told: dict[str, Any]) -> None:
         self._logger.log(level, event, extra={"told": told})
         self._handler.close()  # opened again by the next line, so that the file may be moved away in between
 

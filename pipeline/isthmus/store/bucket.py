@@ -114,6 +114,12 @@ class Bucket:
             return []
         return sorted({name.rstrip("/").rpartition("/")[2] for name in found})
 
+    def files(self) -> Iterator[str]:
+        with suppress(_Absent):
+            found = self._ask("list", "", lambda url: self._driver.find(url.rstrip("/")))
+            top = self._driver._strip_protocol(self._url)
+            yield from sorted(name.removeprefix(f"{top}/") for name in found)
+
     def register(self, name: str) -> ConditionalObject:
         return ConditionalObject(self, f".leases/{name}.json")
 
@@ -165,6 +171,23 @@ class Bucket:
             with guard():
                 self._ask("remove", marker, lambda url: self._driver.rm_file(url))
 
+    def remove(self, night: str, guard: Guard) -> None:
+        tables = [table for table in self.below("") if not table.startswith(".")]
+        copies = [f"{table}/{night}/{name}" for table in tables for name in self.below(f"{table}/{night}")]
+        for path in sorted(copies, key=lambda path: not path.endswith("/run.json")):
+            self._remove(path, guard)
+        for name in sorted(self.below(f".nights/{night}"), key=lambda name: name != _CURRENT):
+            self._remove(f".nights/{night}/{name}", guard)
+
+    def remove_earlier(self, night: str, guard: Guard) -> None:
+        home = f".nights/{night}"
+        if named := self._named(home):
+            self._forget_all_but(home, set(named.values()), guard)
+
+    def _remove(self, path: str, guard: Guard) -> None:
+        with guard(), suppress(_Absent):
+            self._ask("remove", path, lambda url: self._driver.rm_file(url))
+
     def _named(self, home: str) -> dict[str, str]:
         """The objects that make up the night as readers see it."""
         with suppress(ValueError, AttributeError):
@@ -173,8 +196,7 @@ class Bucket:
 
     def _forget_all_but(self, home: str, names: set[str], guard: Guard) -> None:
         for name in set(self.below(home)) - {_CURRENT, *names}:
-            with guard():
-                self._ask("remove", f"{home}/{name}", lambda url: self._driver.rm_file(url))
+            self._remove(f"{home}/{name}", guard)
 
     def _put(self, path: str, file: Path, guard: Guard) -> None:
         for _ in range(_TRIES):

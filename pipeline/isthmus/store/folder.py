@@ -90,6 +90,13 @@ class Folder:
             except (FileNotFoundError, NotADirectoryError):
                 return []
 
+    def files(self) -> Iterator[str]:
+        with story("list"):
+            for path in sorted(self.path.rglob("*")):
+                ours = path.is_symlink() and path.resolve().is_relative_to(self.path.resolve())
+                if path.is_file() and not ours:  # what a link of ours leads to comes by its own name
+                    yield str(path.relative_to(self.path))
+
     def register(self, name: str) -> LockedFile:
         return LockedFile(self.path / _LEASES / f"{name}.json")
 
@@ -132,6 +139,26 @@ class Folder:
         finally:
             for hidden in links.values():
                 forget(hidden)
+
+    def remove(self, night: str, guard: Guard) -> None:
+        home = self.path / _NIGHTS / night
+        with story("remove", self.path), guard():
+            folders = sorted(self.path.glob(f"[!.]*/{night}"), key=lambda folder: folder.parts[-3] != "runs")
+            for path in [self.path / "runs" / night / "run.json", *(p for folder in folders for p in folder.iterdir())]:
+                path.unlink(missing_ok=True)
+            if home.exists():
+                forget(home / _CURRENT)
+                shutil.rmtree(home)
+            for folder in folders:
+                folder.rmdir()
+
+    def remove_earlier(self, night: str, guard: Guard) -> None:
+        home = self.path / _NIGHTS / night
+        with story("remove", self.path), guard():
+            if current := _current(home):
+                for path in home.iterdir():
+                    if path.name not in (_CURRENT, current):
+                        shutil.rmtree(path)
 
 
 def _current(home: Path) -> str:

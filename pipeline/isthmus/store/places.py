@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Protocol
@@ -50,6 +50,9 @@ class Place(Protocol):
     def below(self, path: str) -> list[str]:
         """The names directly below a path, sorted; none where there is no such path. Raises StoreError."""
 
+    def files(self) -> Iterator[str]:
+        """The paths of all files below the place, hidden ones too, each once. Raises StoreError."""
+
     def register(self, name: str) -> Register:
         """The register of a lease."""
 
@@ -61,6 +64,13 @@ class Place(Protocol):
 
         Raises StoreError with what was there before still in place, and what `guard` raises.
         """
+
+    def remove(self, night: str, guard: Guard) -> None:
+        """Remove a night whole, run.json first; what a killed removal leaves the next one removes. Raises StoreError,
+        and what `guard` raises."""
+
+    def remove_earlier(self, night: str, guard: Guard) -> None:
+        """Remove what is kept of a night as it was before it was replaced. Raises the same."""
 
 
 def place(text: str | Path, scratch: Path | None = None) -> Place:
