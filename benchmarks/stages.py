@@ -32,9 +32,12 @@ from typing import Any
 import polars as pl
 import psutil
 
+from isthmus.cluster import open_door
+from isthmus.ingest import read_window, survey
 from isthmus.inventions import LAST_DAY, calls, email, payments
 from isthmus.inventions.plain import CONFIG, make_log
 from isthmus.settings import Settings, load, mapped
+from isthmus.watch import Watch
 from open_graphs import DATA, flights
 
 HERE = Path(__file__).parent
@@ -99,6 +102,7 @@ SOURCES = {
         lambda folder: payments.make_log(folder / "payments", LAST_DAY, days=WEEK, people=2_850_000),
     ),
 }
+ONLY_INGEST = ("email", "calls", "payments")  # of these logs
 # The columns of the two sides, by kind; a list of receivers is a row each.
 SIDES = {"plain": ("sender", "receiver"), "email": ("sender", "recipients"), "calls": ("sender", "receiver")}
 SIDES |= {"payments": ("debtor_account", "creditor_account")}
@@ -197,6 +201,18 @@ def group_by(settings: Settings, as_of: date) -> dict[str, Any]:
     return {"seconds": {"group-by": took}, "cpu_seconds": {"group-by": spent}, "ties": ties.height}
 
 
+def ingest(settings: Settings, as_of: date) -> dict[str, Any]:
+    """The stages of ingest alone, as a night runs them."""
+    work = settings.work
+    work.mkdir(parents=True)
+    watch = Watch()
+    with open_door(threads=settings.run.threads, scratch=str(work)) as door:
+        with watch.stage("survey"):
+            found = survey(settings.log, as_of - timedelta(days=settings.window.days - 1), as_of, door)
+        window = read_window(found, settings.ties, settings.reading, work, door, watch)
+    return {"seconds": watch.seconds, "rows_read": window.rows_read, "ties": window.ties.height}
+
+
 def measure(log: str, minutes: float, repeat: int) -> None:
     moment = datetime.now(UTC).isoformat(timespec="seconds")
     for turn in range(1, repeat + 1):
@@ -204,11 +220,16 @@ def measure(log: str, minutes: float, repeat: int) -> None:
         as_of = str(SOURCES[log].as_of)
         bare = [sys.executable, __file__, "--log", log, "--bare"]
         score = [sys.executable, "-m", "isthmus", "score", str(config), "--as-of", as_of, "--json"]
-        for what, command in (("group-by", bare), ("score", score)):
+        alone = [sys.executable, __file__, "--log", log, "--ingest"]
+        whole = ("ingest", alone) if log in ONLY_INGEST else ("score", score)
+        for what, command in (("group-by", bare), whole):
             told, seen = watched(command)
             if what == "group-by":  # one stage, and its own figures leave out what loading Polars took
                 seen.peak_bytes = {what: max(seen.peak_bytes.values())}
                 seen.cpu_seconds = told["cpu_seconds"]
+            elif what == "ingest":  # nobody says when a stage ends
+                seen.peak_bytes = dict.fromkeys(told["seconds"], max(seen.peak_bytes.values()))
+                seen.cpu_seconds = dict.fromkeys(told["seconds"], 0.0) | {"read": sum(seen.cpu_seconds.values())}
             line = {
                 "log": log,
                 "what": what,
@@ -262,10 +283,13 @@ def main() -> None:
     parser.add_argument("--repeat", type=int, default=3)
     parser.add_argument("--minutes", type=float, default=1.0, help="score.minutes of the run")
     parser.add_argument("--make", action="store_true", help=argparse.SUPPRESS)
+    parser.add_argument("--ingest", action="store_true", help=argparse.SUPPRESS)
     parser.add_argument("--bare", action="store_true", help=argparse.SUPPRESS)
     asked = parser.parse_args()
     if asked.make:
         SOURCES[asked.log].make(home(asked.log))
+    elif asked.ingest:
+        print(json.dumps(ingest(load(home(asked.log) / "isthmus.toml"), SOURCES[asked.log].as_of)))
     elif asked.bare:
         print(json.dumps(group_by(load(home(asked.log) / "isthmus.toml"), SOURCES[asked.log].as_of)))
     else:

@@ -16,7 +16,7 @@ __all__ = ["ABOUT", "code_sides", "shared_book"]
 ABOUT = ("kind", "named", "side", "label")
 SIDES = ("sender", "receiver")
 # What readings have told in this process, by their fingerprints: parts hold mostly the same keys.
-_MOST_KNOWN = 5_000_000
+_MOST_KNOWN = 1_000_000  # more would cost more to look through than to ask again
 _known: dict[str, pl.DataFrame] = {}
 
 
