@@ -8,7 +8,7 @@ import shutil
 import time
 from collections.abc import Iterator
 from contextlib import nullcontext
-from datetime import date, timedelta
+from datetime import UTC, date, datetime, timedelta
 from pathlib import Path
 
 import polars as pl
@@ -155,6 +155,48 @@ def test_a_party_goes_from_every_file(tmp_path: Path, monkeypatch: pytest.Monkey
     assert {night["state"] for night in history["nights"]} == {"published"}
     assert "without the party: none (0 rows)" in forgotten(monkeypatch, site, BETWEEN).err
     assert run_json(site)["revision"] == revision + 1
+
+
+def test_the_person_behind_an_address_goes(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Whoever had the address, on whatever days."""
+    day = datetime(2026, 3, 4, 12, tzinfo=UTC)
+    pairs = [("zeb@own.example", "bea@own.example"), ("bea@own.example", "cyd@own.example")]
+    (tmp_path / "log").mkdir()
+    pl.DataFrame({"from": [a for a, _ in pairs], "to": [b for _, b in pairs], "date": [day] * 2}).write_parquet(
+        tmp_path / "log" / "day.parquet"
+    )
+    (tmp_path / "aliases.csv").write_text("address,person,from,to\nzeb@own.example,Anneliese K.,,\n")
+    config = tmp_path / "c.toml"
+    config.write_text(
+        'series = "s"\n[log]\nkind = "email"\npath = "log"\n[log.columns]\nreceiver = "to"\n'
+        '[log.rules]\naliases = "aliases.csv"\n[window]\ndays = 1\n'
+    )
+    assert isthmus("score", config, "--as-of", day.date()).code == 0
+    monkeypatch.setattr("sys.stdin", io.StringIO("zeb@own.example\n"))
+    said = isthmus("forget", config, "--party")
+    assert said.code == 0, said.err
+    assert "1 rows" not in said.err
+    scores = pl.read_parquet(tmp_path / "warehouse" / "scores" / "*" / "*" / "scores.parquet")
+    assert set(scores["party"]) == {"bea@own.example", "cyd@own.example"}
+    assert "still has the party" in said.err
+
+
+def test_nights_of_another_secret_are_named(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    private = '[privacy]\npseudonyms = true\npurpose = "p"\nsecret_env = "ISTHMUS_TEST_SECRET"\n'
+    site = scored(tmp_path, private)
+    key_id = run_json(site)["key_id"]
+    monkeypatch.setenv("ISTHMUS_TEST_SECRET", "another secret of enough bytes")
+    said = forgotten(monkeypatch, site, BETWEEN)
+    assert said.code == 78
+    assert f"pseudonyms of another secret, key_id {key_id}" in said.err
+
+
+def test_a_series_that_is_no_longer_defined_is_told(tmp_path: Path) -> None:
+    site = Site(tmp_path, LENIENT + "[definitions.m.ties]\nmutual = true\n")
+    site.write(rows(AS_OF, [*PAIRS, *((two, one) for one, two in PAIRS)]), AS_OF)
+    assert site.score().code == 0
+    site.settings(LENIENT)
+    assert "also has s-m, which" in isthmus("forget", site.config, "--before", "2027-01-01").err
 
 
 def test_who_is_still_in_the_log_is_told_and_comes_back(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:

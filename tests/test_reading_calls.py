@@ -437,8 +437,13 @@ def test_durations_of_any_type_and_size(type_: Any, values: list[Any]) -> None:
 @pytest.mark.parametrize("name", ["duration", "service", "record_type", "call_reference", "disposition", *OPTIONAL])
 def test_a_log_may_lack_any_column_but_parties_and_time(name: str) -> None:
     found = tell(reading({name: ""}), frame(record()).drop(name))
-    unanswered = name == "duration"
-    assert found.counts["used"] == {"used": 0 if unanswered else 1}
+    assert found.counts["used"] == {"used": 1}
+
+
+def test_without_durations_only_the_disposition_tells_unanswered() -> None:
+    rows = frame(record(), record(disposition="no answer", receiver="07700900124")).drop("duration")
+    told = tell(reading({"duration": ""}), rows).counts
+    assert (told["used"], told["filtered"]) == ({"used": 1}, {"unanswered": 1})
 
 
 # Settings

@@ -19,9 +19,9 @@ import polars as pl
 
 from isthmus import store
 from isthmus.cluster import open_door
-from isthmus.errors import DataRefused, StoreError
+from isthmus.errors import DataRefused, SettingsError, StoreError
 from isthmus.ingest import parties_of, survey
-from isthmus.lookup import key_of
+from isthmus.lookup import parties_behind
 from isthmus.privacy import open_pseudonyms
 from isthmus.publish import Night, damaged, kept_nights, publish_without, record_of
 from isthmus.readings import open_reading
@@ -29,7 +29,7 @@ from isthmus.settings import Settings
 from isthmus.store import Guard, Place
 from isthmus.tables import LAYOUT
 
-__all__ = ["Forgotten", "forget_nights", "forget_party", "holding"]
+__all__ = ["Forgotten", "forget_nights", "forget_party", "holding", "unknown_series"]
 
 # Of the work folder, what tells of no party: leases, layout, how runs ended, plans.
 TELLS_OF_NOBODY = (".leases", store.LAYOUT_FILE, "endings", "plan.json")
@@ -73,6 +73,7 @@ def forget_party(every: Sequence[Settings], text: str, *, dry: bool) -> Forgotte
     `text`: its key, or its pseudonym. Only nights that hold it are published again. Raises TryAgain when a run is at
     work, StoreError, also when a file below run.work or run.warehouse still holds it afterwards.
     """
+    _one_secret(every)
     own = every[0]  # all series of a file have one log, one warehouse and one secret
     texts = _forms(own, text)
     changed, rows = set[date](), 0
@@ -90,6 +91,27 @@ def forget_party(every: Sequence[Settings], text: str, *, dry: bool) -> Forgotte
     return Forgotten(nights, rows, _proven(own, store.place(own.run.warehouse), texts), in_log)
 
 
+def _one_secret(every: Sequence[Settings]) -> None:
+    """Raises SettingsError when a night has the pseudonyms of another secret, among which the party is not found."""
+    pseudonyms = open_pseudonyms(every[0].privacy, every[0].log.kind)
+    mine = pseudonyms.key_id if pseudonyms else None
+    for settings in every:
+        for night in kept_nights(store.place(settings.run.warehouse), settings.series):
+            if (key_id := record_of(night).get("key_id")) not in (None, mine):
+                raise SettingsError(
+                    f"night {night.name} has pseudonyms of another secret, key_id {key_id}, and these settings have "
+                    f"{mine or 'none'}: forget with that secret and purpose, or the night as a whole with --before"
+                )
+
+
+def unknown_series(every: Sequence[Settings]) -> list[str]:
+    """Series in the warehouse whose names begin as this file's do, and which it no longer defines."""
+    own = every[0]
+    known = {settings.series for settings in every}
+    found = {name.removeprefix("series=") for name in store.place(own.run.warehouse).below("runs")}
+    return sorted(name for name in found - known if name.startswith(f"{own.series}-"))
+
+
 @contextmanager
 def _both_leases(settings: Settings) -> Iterator[tuple[Place, Guard]]:
     """As a night has them: the work folder and the series in the warehouse."""
@@ -105,21 +127,26 @@ def _both_leases(settings: Settings) -> Iterator[tuple[Place, Guard]]:
 
 def _empty(settings: Settings, before: date | None = None) -> None:
     """Remove what is kept; with `before` not the later days, nor how runs of later nights ended."""
-    days = settings.reading / "days"  # its folders are named by the day
+    readings = {settings.reading, settings.clear_reading}
+    days = [reading / "days" for reading in readings]  # its folders are named by the day
     with store.story("remove"):
-        dated = [*days.glob("*"), *(settings.work / "endings").glob("*")] if before else []
+        dated = (
+            [*(path for folder in days for path in folder.glob("*")), *(settings.work / "endings").glob("*")]
+            if before
+            else []
+        )
         others = [path for path in settings.work.glob("*") if path.name not in TELLS_OF_NOBODY]
-        others += [path for path in settings.reading.glob("*") if not (before and path == days)]
+        others += [path for reading in readings for path in reading.glob("*") if not (before and path in days)]
         for path in [*(path for path in dated if path.name[:10] < str(before)), *others]:
             shutil.rmtree(path) if path.is_dir() else path.unlink()
 
 
 def _forms(settings: Settings, text: str) -> list[str]:
-    """All that may stand for the party: the text as given, which may be a pseudonym, its key, its pseudonym."""
+    """All that may stand for the party: the text as given, which may be a pseudonym, its keys, their pseudonyms."""
     pseudonyms = open_pseudonyms(settings.privacy, settings.log.kind)
-    key = key_of(open_reading(settings.log), text) or text
-    made = pseudonyms.of(pl.Series([key])).to_list() if pseudonyms else []
-    return list(dict.fromkeys([text, key, *made]))
+    keys = parties_behind(open_reading(settings.log), text) or [text]
+    made = pseudonyms.of(pl.Series(keys)).to_list() if pseudonyms else []
+    return list(dict.fromkeys([text, *keys, *made]))
 
 
 def _rewritten(night: Night, texts: Sequence[str], guard: Guard) -> int:

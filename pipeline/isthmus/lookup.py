@@ -14,23 +14,25 @@ from isthmus.privacy import DIGITS, Pseudonyms, open_pseudonyms
 from isthmus.readings import Reading, open_reading
 from isthmus.settings import Settings
 
-__all__ = ["key_of", "key_within", "pseudonym_of"]
+__all__ = ["key_within", "parties_behind", "pseudonyms_of"]
 
 
-def key_of(reading: Reading, text: str) -> str | None:
-    """The party's key, as the log's reading writes it; None when the text is none."""
+def parties_behind(reading: Reading, text: str) -> list[str]:
+    """The parties that a text may be in published tables: whom the user's tables ever made of it (the persons who had
+    an address, the owners of an account), and its own key; none when it is no key of this kind of log."""
     if text in reading.names:
-        return text
+        return [text]
     key: str | None = reading.keys(pl.Series([text], dtype=pl.String))["key"].item()
-    return key
+    return [] if key is None else list(dict.fromkeys([*reading.stands_for(key), key]))
 
 
-def pseudonym_of(settings: Settings, text: str) -> str:
-    """The pseudonym of a party. Raises SettingsError, DataRefused when the text is no key of this kind of log."""
+def pseudonyms_of(settings: Settings, text: str) -> list[str]:
+    """The pseudonyms of the parties behind a text. Raises SettingsError, DataRefused when it is no key of this kind."""
     pseudonyms = _switched_on(settings)
-    if (key := key_of(open_reading(settings.log), text)) is None:
+    if not (parties := parties_behind(open_reading(settings.log), text)):
         raise DataRefused("what came on stdin is not the key of a party, as this kind of log has them; look for typos")
-    return str(pseudonyms.of(pl.Series([key])).item())
+    made: list[str] = pseudonyms.of(pl.Series(parties)).to_list()
+    return made
 
 
 def key_within(settings: Settings, pseudonym: str, first_day: date, last_day: date) -> str:

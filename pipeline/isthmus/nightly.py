@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import shutil
 from collections.abc import Sequence
 from dataclasses import dataclass
 from datetime import UTC, date, datetime, timedelta
@@ -188,4 +189,7 @@ def _measured_and_published(
             guard=held.guard,
         )
     checkpoint.clear()
+    if settings.privacy.pseudonyms:  # nothing in clear stays of the nights before the pseudonyms
+        shutil.rmtree(settings.clear_reading, ignore_errors=True)
+        night.warehouse.remove_earlier(night.name, held.guard)
     return Outcome(night, scores, row | more)

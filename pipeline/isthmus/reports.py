@@ -131,6 +131,9 @@ def forecast(console: Console, settings: Settings, seen: Forecast) -> dict[str, 
         )
     else:
         console.say(f"  {number(seen.sampled_rows)} rows were looked at; the rest is extrapolated")
+    told = {outcome: sum(reasons.values()) for outcome, reasons in seen.window.outcomes.items()}
+    parts = " + ".join(f"{number(rows)} {outcome}" for outcome, rows in told.items())
+    console.say(f"  contacts: {number(sum(told.values()))} = {parts}")
     _reasons(console, seen.window.outcomes)
     console.say(f"Graph: {about}{number(seen.parties)} parties, {about}{number(seen.ties)} ties")
     console.say(f"Method: {plan.method} (engine {plan.engine}). {_sentence(plan.reason)}")

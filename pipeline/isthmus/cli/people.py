@@ -23,15 +23,16 @@ def lookup(
 ) -> None:
     """The pseudonym of a party, or with --reverse whose one is. For who may hold the secret.
 
-    Reads one line from stdin and writes one to stdout. The other way round, the log's window is read for the key, and
-    nothing is kept. The log of signals is told that there was a lookup, and not of whom.
+    Reads one line from stdin and writes to stdout: a line for each party that a table of yours ever made of the key,
+    and one for the key itself. The other way round, the log's window is read for the key, and nothing is kept. The log
+    of signals is told that there was a lookup, and not of whom.
 
     \b
     Examples
       isthmus lookup configs/email.toml < key.txt
       isthmus lookup configs/email.toml --reverse --as-of 2026-11-30 < pseudonym.txt
     """
-    from isthmus.lookup import key_within, pseudonym_of
+    from isthmus.lookup import key_within, pseudonyms_of
     from isthmus.nightly import window_of, yesterday
     from isthmus.settings import load
     from isthmus.signals import examine, note
@@ -43,7 +44,7 @@ def lookup(
     if reverse:
         typer.echo(key_within(settings, text, *window_of(settings, as_of or yesterday())))
     else:
-        typer.echo(pseudonym_of(settings, text))
+        typer.echo("\n".join(pseudonyms_of(settings, text)))
 
 
 @app.command()
@@ -67,7 +68,7 @@ def forget(
       isthmus forget configs/email.toml --before 2026-09-01 --dry-run
       isthmus forget configs/email.toml --party < key.txt
     """
-    from isthmus.forget import forget_nights, forget_party
+    from isthmus.forget import forget_nights, forget_party, unknown_series
     from isthmus.signals import note
 
     if (before is not None) == party:
@@ -89,6 +90,11 @@ def forget(
         say("what was kept between nights is removed; the next night reads its window again")
     if party and not dry_run:
         say(f"{done.looked_at} files below run.work and run.warehouse searched: none holds the party")
+    if others := unknown_series(every):
+        say(
+            f"warning: the warehouse also has {', '.join(others)}, which these settings do not define; nothing there "
+            "was touched"
+        )
     if done.in_log:
         say("warning: the log still has the party; remove it there, or the next night publishes it again")
     if party and done.in_log is None:

@@ -58,6 +58,9 @@ class CallsReading:
     def settles(self) -> bool:
         return True
 
+    def stands_for(self, key: str) -> list[str]:
+        return []
+
     @property
     def names(self) -> pl.Series:
         return pl.Series(dtype=pl.String)
@@ -161,7 +164,8 @@ class CallsReading:
         forwarded = pl.col("forwarded")
         if rules.forwarded == "from forwarder":
             forwarded = forwarded & pl.col("nobody")
-        unanswered = call & ((cause == UNANSWERED) | (pl.col("seconds") < rules.least_seconds))
+        short = pl.col("seconds") < rules.least_seconds if self.log.columns.duration else pl.lit(False)
+        unanswered = call & ((cause == UNANSWERED) | short)
         filters = {
             "neither call nor text": service.is_null(),
             "call": call & (rules.count == "texts"),

@@ -62,6 +62,9 @@ class EmailReading:
     def settles(self) -> bool:
         return True
 
+    def stands_for(self, key: str) -> list[str]:
+        return self.aliases.table.filter(pl.col("address") == key)["person"].unique().sort().to_list()
+
     @property
     def names(self) -> pl.Series:
         return self.aliases.table["person"]

@@ -72,6 +72,9 @@ class PaymentsReading:
     def settles(self) -> bool:
         return True
 
+    def stands_for(self, key: str) -> list[str]:
+        return self.owners.of(key) if self.rules.merge_owners else []
+
     @property
     def names(self) -> pl.Series:
         return self.owners.names if self.rules.merge_owners else self.owners.names.clear()

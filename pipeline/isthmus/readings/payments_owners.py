@@ -44,6 +44,11 @@ class Owners:
         turn = pl.int_range(pl.len()).over("account")
         return cls(names, table.with_columns(turn=turn).partition_by("turn", include_key=False, maintain_order=True))
 
+    def of(self, account: str) -> list[str]:
+        """All owners that an account ever had."""
+        places = [period.filter(pl.col("account") == account)["owner"] for period in self.periods]
+        return self.names.gather(pl.concat(places)).to_list() if places else []
+
     def at(self, book: pl.DataFrame, code: pl.Series, day: pl.Series) -> pl.Series:
         """Owner (UInt32, place in `names`; null: not told) of the parties `code` of the book on each `day`."""
         owner = pl.Series([None], dtype=pl.UInt32).new_from_index(0, len(code))

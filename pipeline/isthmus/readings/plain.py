@@ -28,6 +28,9 @@ class PlainReading:
     def open(cls, log: PlainLog) -> Self:
         return cls(bool(log.columns.amount), bool(log.columns.id))
 
+    def stands_for(self, key: str) -> list[str]:
+        return []
+
     @property
     def names(self) -> pl.Series:
         return pl.Series(dtype=pl.String)

@@ -83,6 +83,9 @@ class Reading(Protocol):
     def settles(self) -> bool:
         """Whether `settle` is to be asked; else each part of the log can be added up by itself, which is quicker."""
 
+    def stands_for(self, key: str) -> list[str]:
+        """The parties that the user's tables make of a key, on whatever days."""
+
     @property
     def names(self) -> pl.Series:
         """Parties (String) that only the user's tables name, such as persons and owners: no row of the log has them."""

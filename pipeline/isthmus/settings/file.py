@@ -129,6 +129,7 @@ def _explain(path: Path, error: ValidationError, kind: str, of: str) -> str:
         if where[:1] == ["log"]:
             del where[1:2]  # the kind
         key = ".".join(where) or "settings"
+        given = "" if where[:1] == ["privacy"] else f" = {_show(fault['input'])}"  # which may be the secret itself
         if fault["type"] == "extra_forbidden":
             known = list(_section(where[:-1], kind).model_fields)
             others = [other for other in KINDS if where[0] == "log" and _knows(where, other)]
@@ -137,18 +138,18 @@ def _explain(path: Path, error: ValidationError, kind: str, of: str) -> str:
             if others:
                 told = " or ".join(f'"{other}"' for other in others)
                 hint = f'it belongs to log.kind = {told}, but the kind of this log is "{kind}"'
-            lines.append(f"{key} = {_show(fault['input'])}: unknown key; {hint}")
+            lines.append(f"{key}{given}: unknown key; {hint}")
         elif fault["type"] == "missing":
             lines.append(f"{key}: missing; {_wanted(where, kind)}")
         elif fault["type"] == "model_type":
-            lines.append(f"{key} = {_show(fault['input'])}: a section, not a value; write it as [{key}]")
+            lines.append(f"{key}{given}: a section, not a value; write it as [{key}]")
         elif fault["type"] == "union_tag_invalid":
             lines.append(f'log.kind = "{kind}": not known; one of {", ".join(KINDS)}')
         elif fault["type"] == "value_error":
             lines.append(str(fault["ctx"]["error"]))
         else:
             hint = _meaning(where, kind)
-            lines.append(f"{key} = {_show(fault['input'])}: {_lower(fault['msg'])}" + (f" ({hint})" if hint else ""))
+            lines.append(f"{key}{given}: {_lower(fault['msg'])}" + (f" ({hint})" if hint else ""))
     return f"settings {path}:\n" + "\n".join(f"  {of}{line}" for line in lines)
 
 

@@ -236,6 +236,11 @@ class Settings(Section):
     @property
     def reading(self) -> Path:
         """The folder of rows and days as they were read, which all series of a work folder share."""
+        return Path(self.run.work) / "reading-pseudonyms" if self.privacy.pseudonyms else self.clear_reading
+
+    @property
+    def clear_reading(self) -> Path:
+        """The same, of keys in clear: a night with pseudonyms leaves nothing there."""
         return Path(self.run.work) / "reading"
 
     @property
