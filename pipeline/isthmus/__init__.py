@@ -14,8 +14,9 @@ if _TYPE_CHECKING:
     from pathlib import Path
 
     from isthmus.nightly import Outcome
+    from isthmus.warehouse import Warehouse
 
-__all__ = ["Estimate", "Graph", "IsthmusError", "__version__", "betweenness", "score"]
+__all__ = ["Estimate", "Graph", "IsthmusError", "__version__", "betweenness", "read", "score"]
 
 __version__ = _version("isthmus")
 
@@ -34,3 +35,16 @@ def score(config: str | Path, as_of: str | date | None = None) -> Outcome:
 
     day = date.fromisoformat(as_of) if isinstance(as_of, str) else as_of
     return run_night(load(config), day or yesterday(), Watch())
+
+
+def read(warehouse: str | Path, *, series: str | None = None, as_of: date | str | None = None) -> Warehouse:
+    """The tables of a warehouse as lazy Polars frames: `.scores`, `.ties`, `.parties`, `.refused`, `.runs`.
+
+    `warehouse` is a folder, or the URL of an object store that the environment has credentials for. Of each series, or
+    of the one that is named: its latest night, or that of `as_of`, or with "all" every night. Frames have the columns
+    series and as_of first, and all frames of what is returned are of the same runs, whatever is published meanwhile.
+    Raises StoreError when there is no warehouse, no such series or no such night; AttributeError for an unknown table.
+    """
+    from isthmus.warehouse import read as read_warehouse
+
+    return read_warehouse(str(warehouse), series, as_of)

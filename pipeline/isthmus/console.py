@@ -83,12 +83,13 @@ class Console:
             yield Watch(tell=write, warn=lambda text: self.say(f"warning: {text}"))
 
 
-def printable(key: str) -> str:
+def printable(key: str, widest: int = WIDEST_KEY) -> str:
     """A party key on one line: control characters escaped, the middle of a long one left out."""
     shown = "".join(c if c.isprintable() else c.encode("unicode_escape").decode() for c in key)
-    if len(shown) <= WIDEST_KEY:
+    if len(shown) <= widest:
         return shown
-    return f"{shown[: WIDEST_KEY - 12]}…{shown[-11:]}"
+    tail = widest // 4 + 1
+    return f"{shown[: widest - tail - 1]}…{shown[-tail:]}"
 
 
 def number(value: float) -> str:

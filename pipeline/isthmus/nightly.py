@@ -29,6 +29,7 @@ from isthmus.publish import (
     publish,
     record_of,
     reference,
+    refresh_views,
     remember,
     revision_of,
     run_id_of,
@@ -188,6 +189,8 @@ def _measured_and_published(
             more=more,
             guard=held.guard,
         )
+        if trouble := refresh_views(night.warehouse):
+            watch.warning(trouble)
     checkpoint.clear()
     if settings.privacy.pseudonyms:  # nothing in clear stays of the nights before the pseudonyms
         shutil.rmtree(settings.clear_reading, ignore_errors=True)

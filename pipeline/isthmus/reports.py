@@ -18,14 +18,9 @@ from isthmus.nightly import Outcome, yesterday
 from isthmus.nights import Result
 from isthmus.publish.queries import top_brokers
 from isthmus.settings import Settings
-from isthmus.tables import PARTITION, Table
+from isthmus.tables import CAUTION, PARTITION, Table
 
 __all__ = ["dictionary", "forecast", "history", "how_to_go_on", "night", "planted"]
-
-CAUTION = (
-    "A score says who lies between others in this log. It is not a verdict on anyone: a person decides, and local law\n"
-    "and licensed practice rule."
-)
 
 
 def night(console: Console, outcome: Outcome, first: int = 10) -> None:
@@ -241,13 +236,5 @@ def dictionary(tables: list[Table], *, as_json: bool) -> None:
         print(f"{table.name}: {table.meaning}")
         for c in (*PARTITION, *table.columns):
             unit = f" [{c.unit}]" if c.unit else ""
-            print(
-                f"  {c.name:<20} {_sql_type(str(c.type)):<10} {c.meaning}{unit}{', may be null' if c.nullable else ''}"
-            )
+            print(f"  {c.name:<20} {c.kind:<10} {c.meaning}{unit}{', may be null' if c.nullable else ''}")
         print()
-
-
-def _sql_type(text: str) -> str:
-    if text.startswith("Datetime"):
-        return "timestamp"
-    return {"String": "string", "Int64": "int64", "Float64": "float64", "Date": "date"}.get(text, "list")

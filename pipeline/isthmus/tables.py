@@ -10,11 +10,25 @@ from dataclasses import dataclass
 
 import polars as pl
 
-__all__ = ["LAYOUT", "PARTITION", "TABLES", "Column", "Table", "conform"]
+__all__ = ["CAUTION", "LAYOUT", "PARTITION", "TABLES", "Column", "Table", "conform"]
 
 # The version of the warehouse folder's layout. Raise it when a reader of the old layout would be misled.
 LAYOUT = 1
 
+# Said wherever scores are shown to people.
+CAUTION = (
+    "A score says who lies between others in this log. It is not a verdict on anyone: a person decides, and local law\n"
+    "and licensed practice rule."
+)
+
+_KINDS: dict[type, str] = {
+    pl.String: "string",
+    pl.Int64: "int64",
+    pl.Float64: "float64",
+    pl.Boolean: "boolean",
+    pl.Date: "date",
+    pl.Datetime: "timestamp",
+}
 MOMENT = pl.Datetime("us", "UTC")
 
 
@@ -27,6 +41,11 @@ class Column:
     meaning: str
     unit: str = ""
     nullable: bool = False
+
+    @property
+    def kind(self) -> str:
+        """The type in a word that no library owns."""
+        return _KINDS.get(type(self.type), "list")
 
 
 @dataclass(frozen=True)

@@ -8,7 +8,7 @@ import sys
 
 import typer
 
-from isthmus.cli import nights, others, people  # noqa: F401  they name themselves to the app
+from isthmus.cli import nights, others, people, top  # noqa: F401  they name themselves to the app
 from isthmus.cli.app import app
 from isthmus.console import Console
 from isthmus.errors import INTERNAL, INTERRUPTED, AskedToStop, IsthmusError, StoreError, exit_code_of, places_of

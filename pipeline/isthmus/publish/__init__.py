@@ -15,6 +15,7 @@ from isthmus.publish.earlier import (
 from isthmus.publish.manifest import input_id_of, manifest, revision_of, run_id_of, run_row
 from isthmus.publish.night import Night, publish, publish_without
 from isthmus.publish.plans import checkpoint_key, plan_once, remember
+from isthmus.publish.views import refresh as refresh_views
 
 __all__ = [
     "Night",
@@ -32,6 +33,7 @@ __all__ = [
     "published",
     "record_of",
     "reference",
+    "refresh_views",
     "remember",
     "replaced",
     "revision_of",

@@ -120,6 +120,10 @@ class Bucket:
             top = self._driver._strip_protocol(self._url)
             yield from sorted(name.removeprefix(f"{top}/") for name in found)
 
+    def whole(self, night: str) -> dict[str, str]:
+        home = f".nights/{night}"
+        return {stem: f"{home}/{name}" for stem, name in self._named(home).items()}
+
     def register(self, name: str) -> ConditionalObject:
         return ConditionalObject(self, f".leases/{name}.json")
 

@@ -40,6 +40,7 @@ from isthmus.store.register import Guard, Moved, Seen
 __all__ = ["Folder"]
 
 _NIGHTS, _LEASES, _CURRENT, _BLANK = ".nights", ".leases", "current", "000000-blank"
+_LAST = "run"  # of run.json, without which a night is not whole
 _PATIENCE = 10.0  # seconds to wait for a lock that is normally held for milliseconds
 
 
@@ -96,6 +97,14 @@ class Folder:
                 ours = path.is_symlink() and path.resolve().is_relative_to(self.path.resolve())
                 if path.is_file() and not ours:  # what a link of ours leads to comes by its own name
                     yield str(path.relative_to(self.path))
+
+    def whole(self, night: str) -> dict[str, str]:
+        home = self.path / _NIGHTS / night
+        with story("list"):
+            generation = home / (_current(home) or _CURRENT)  # a copy that followed links has a folder of that name
+            found = list(generation.iterdir()) if generation.is_dir() else list(self.path.glob(f"[!.]*/{night}/*"))
+        named = {path.name.partition(".")[0]: str(path.relative_to(self.path)) for path in found if path.exists()}
+        return named if _LAST in named else {}
 
     def register(self, name: str) -> LockedFile:
         return LockedFile(self.path / _LEASES / f"{name}.json")

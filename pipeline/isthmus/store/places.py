@@ -53,6 +53,13 @@ class Place(Protocol):
     def files(self) -> Iterator[str]:
         """The paths of all files below the place, hidden ones too, each once. Raises StoreError."""
 
+    def whole(self, night: str) -> dict[str, str]:
+        """The files of a night as it is published now, all of one run: name without ending -> path below the place.
+
+        They stay until the night is published a second time from now. Empty where it is not there whole. Raises
+        StoreError.
+        """
+
     def register(self, name: str) -> Register:
         """The register of a lease."""
 
