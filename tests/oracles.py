@@ -251,3 +251,34 @@ def log_capital(blocks: list[tuple[list[float], float]], population: int, m: flo
         drawn += len(values)
         total += sum(values)
     return capital
+
+
+def harmonic(n: int, arcs: Iterable[Arc], directed: bool) -> list[float]:
+    """Mean over the others of 1/distance from each vertex, 0 where no path leads (Rochat 2009)."""
+    d = distances(adjacency(n, arcs, directed))
+    return [sum(1 / d[v][t] for t in range(n) if t != v) / (n - 1) for v in range(n)]
+
+
+def burt(n: int, contacts: dict[Arc, int]) -> tuple[list[float | None], list[float | None]]:
+    """Constraint and effective size as Burt (1992, ch. 2) defines them, word for word; None for isolates."""
+    z = [[contacts.get((i, j), 0) + contacts.get((j, i), 0) if i != j else 0 for j in range(n)] for i in range(n)]
+    constraint: list[float | None] = []
+    size: list[float | None] = []
+    for i in range(n):
+        contacts_of_i = [j for j in range(n) if z[i][j]]
+        if not contacts_of_i:
+            constraint.append(None)
+            size.append(None)
+            continue
+        held, worth = 0.0, 0.0
+        for j in contacts_of_i:
+            invested, redundant = z[i][j] / sum(z[i]), 0.0
+            for q in contacts_of_i:
+                if q != j:
+                    invested += z[i][q] / sum(z[i]) * z[q][j] / sum(z[q])
+                    redundant += z[i][q] / sum(z[i]) * z[j][q] / max(z[j])
+            held += invested**2
+            worth += 1 - redundant
+        constraint.append(held)
+        size.append(worth)
+    return constraint, size

@@ -6,6 +6,7 @@ from importlib.metadata import version as _version
 from typing import TYPE_CHECKING as _TYPE_CHECKING
 
 from isthmus.betweenness import Estimate, betweenness
+from isthmus.companions import companions
 from isthmus.errors import IsthmusError
 from isthmus.graph import Graph
 
@@ -16,7 +17,7 @@ if _TYPE_CHECKING:
     from isthmus.nightly import Outcome
     from isthmus.warehouse import Warehouse
 
-__all__ = ["Estimate", "Graph", "IsthmusError", "__version__", "betweenness", "read", "score"]
+__all__ = ["Estimate", "Graph", "IsthmusError", "__version__", "betweenness", "companions", "read", "score"]
 
 __version__ = _version("isthmus")
 

@@ -10,7 +10,7 @@ from dataclasses import dataclass
 
 import polars as pl
 
-__all__ = ["CAUTION", "LAYOUT", "PARTITION", "TABLES", "Column", "Table", "conform"]
+__all__ = ["CAUTION", "COMPANIONS", "LAYOUT", "PARTITION", "TABLES", "Column", "Table", "conform"]
 
 # The version of the warehouse folder's layout. Raise it when a reader of the old layout would be misled.
 LAYOUT = 1
@@ -147,6 +147,66 @@ PARTIES = Table(
             pl.Boolean(),
             "whether the log can hold all its contacts; false of external parties, whose betweenness reads low; null "
             "where nothing tells",
+            nullable=True,
+        ),
+        RUN_ID,
+    ),
+)
+
+COMPANIONS = Table(
+    "companions",
+    "one row per party of the window: other readings of its ties, to tell a broker from the merely busy",
+    ("party",),
+    (
+        _text("party", "the key after normalising"),
+        _count("strength_in", "contacts received from others", "log rows"),
+        _count("strength_out", "contacts sent to others", "log rows"),
+        _number(
+            "reciprocity", "share of counterparts that both send and receive; null without any", "0..1", nullable=True
+        ),
+        _number(
+            "closeness",
+            "harmonic closeness, how fast it reaches others: mean over the other parties of 1/hops from this one along "
+            "the ties' direction, 0 where no path leads",
+            "0..1",
+        ),
+        _number("closeness_lower", "lower end of the interval that holds for all parties' closeness at once", "0..1"),
+        _number("closeness_upper", "upper end of that interval; both ends equal closeness where it is exact", "0..1"),
+        _number(
+            "eigenvector",
+            "eigenvector centrality, contact either way, as a share of the highest; null when it did not settle",
+            "0..1",
+            nullable=True,
+        ),
+        _number("pagerank", "PageRank along the ties' direction, damping 0.85; all add up to 1", "0..1"),
+        _count("core_number", "largest k such that it is among parties with k counterparts each among them", "parties"),
+        Column("articulation_point", pl.Boolean(), "whether its component falls apart without it"),
+        _number(
+            "constraint",
+            "Burt's constraint, contacts both ways together: how far its contacts are one another's too; low = spans "
+            "holes; null without contacts",
+            nullable=True,
+        ),
+        _number(
+            "effective_size",
+            "Burt's effective size: counterparts less those that are redundant; null without contacts",
+            "parties",
+            nullable=True,
+        ),
+        _number("betweenness_percentile", "share of parties with less betweenness, equals counted half", "0..100"),
+        _number("degree_percentile", "share of parties with fewer counterparts, equals counted half", "0..100"),
+        _number(
+            "residual",
+            "log(1 + pairs) above its least-squares line on log(degree): betweenness that being busy does not explain; "
+            "null without counterparts",
+            "natural log",
+            nullable=True,
+        ),
+        _number(
+            "residual_z",
+            "residual over the spread usual at that degree, so that parties of few contacts do not fill the top; null "
+            "without counterparts",
+            "standard deviations",
             nullable=True,
         ),
         RUN_ID,
