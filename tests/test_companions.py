@@ -18,14 +18,13 @@ import pytest
 from scipy.stats import binom, rankdata
 
 import oracles
-from isthmus import demo
 from isthmus.companions import companions, walks
 from isthmus.companions import harmonic as near
 from isthmus.companions.position import percentile, residual, standardised
 from isthmus.companions.walks import eigenvector
 from isthmus.errors import DataRefused
 from isthmus.graph import Graph
-from isthmus.inventions import email, payments
+from isthmus.inventions import email, payments, plain
 from isthmus.tables import COMPANIONS, conform
 from nights import isthmus
 
@@ -398,8 +397,8 @@ LAST, DAYS = date(2026, 11, 30), 14
 def _log_of(name: str, folder: Path) -> tuple[str, tuple[str, ...]]:
     """The settings and the brokers of an invented log in `folder`."""
     if name == "demo":
-        truth = demo.make_log(folder / "payments", rows=100_000, parties=5_000, days=DAYS, last_day=LAST)
-        return demo.CONFIG, truth.brokers
+        truth = plain.make_log(folder / "plain", LAST, DAYS, 5_000, rows=100_000)
+        return plain.CONFIG, truth.brokers
     module = {"email": email, "payments": payments}[name]
     return module.CONFIG, module.make_log(folder / name, LAST, days=DAYS, people=1000).brokers
 
