@@ -52,7 +52,7 @@ names = {n for n, v in vars(isthmus).items() if not isinstance(v, types.ModuleTy
 print(sorted(n for n in names if not n.startswith("_")))
 """
     ran = run(sys.executable, "-c", code)
-    declared = ["Estimate", "Graph", "IsthmusError", "betweenness", "read", "score"]
+    declared = ["Estimate", "Graph", "IsthmusError", "betweenness", "companions", "read", "score"]
     assert ran.stdout.strip() == str(declared), ran.stderr
     isthmus = importlib.import_module("isthmus")
     assert sorted(isthmus.__all__) == sorted([*declared, "__version__"])

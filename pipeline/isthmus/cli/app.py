@@ -93,7 +93,9 @@ Accept = Annotated[
         "--accept", metavar="GATE", parser=gate_of, help="publish although this gate stops the night; may be repeated"
     ),
 ]
-Json = Annotated[bool, typer.Option("--json", help="put one JSON object on stdout")]
+Json = Annotated[
+    bool, typer.Option("--json", help="put JSON on stdout: one object, or a list where the file defines several series")
+]
 
 
 def named(error: IsthmusError, what: str) -> IsthmusError:

@@ -134,7 +134,7 @@ def again(isles: Isles, pool: pl.DataFrame, people: int, told: Told) -> list[pl.
         if name == "nothing":
             told.use(isles, some)
         else:
-            told.counts["duplicate", "duplicate"] += len(some)
+            told.counts["duplicate", "delivered again"] += len(some)
         found.append(some)
     return found
 
@@ -142,7 +142,7 @@ def again(isles: Isles, pool: pl.DataFrame, people: int, told: Told) -> list[pl.
 def taken_back(isles: Isles, rows: pl.DataFrame, day: date, people: int, told: Told) -> list[pl.DataFrame]:
     """Returns of yesterday's payments, and yesterday's payments delivered again."""
     late = rows.filter(_known_by("uetr")).head(max(1, round(people * LATE)))
-    told.counts["duplicate", "duplicate"] += len(late)
+    told.counts["duplicate", "delivered again"] += len(late)
     found = [late]
     left = rows.join(late, on="seq", how="anti", maintain_order="left")
     for turn, (way, share) in enumerate(RETURNS.items()):
@@ -159,7 +159,7 @@ def taken_back(isles: Isles, rows: pl.DataFrame, day: date, people: int, told: T
             told.amount -= Decimal(int(parts[0]["minor"].sum())) / 100
             if way == "part delivered twice":
                 parts *= 2
-                told.counts["duplicate", "duplicate"] += len(back)
+                told.counts["duplicate", "delivered again"] += len(back)
             told.counts["filtered", "return of a payment in the window"] += len(back)
         else:
             parts = [back]

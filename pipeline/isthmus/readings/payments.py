@@ -31,6 +31,7 @@ _DIRECTION = "direction is neither CRDT nor DBIT"
 _STATUS = "not booked"
 _OWN = "own account"
 _ZERO = "amount is zero"
+_AGAIN = "delivered again"
 _LOST = "return without an id of its payment"
 
 
@@ -181,7 +182,7 @@ class PaymentsReading:
 
     def settle(self, rows: pl.LazyFrame) -> pl.DataFrame:
         """Deliveries repeated, then returns against their payments."""
-        again = repeated(rows)
+        again = repeated(rows, _AGAIN)
         if not self._references:
             return again
         return pl.concat([again, returns.netted(rows, again, self._references, self.money.places)])

@@ -25,11 +25,11 @@ def normalised(raw: pl.Series, iban_only: bool) -> pl.DataFrame:
     """`raw`: texts, none null. Returned: `key` (null: unusable) and `fault` (null: none, or nothing there at all).
 
     What looks like an IBAN of a country that the registry lists is written without blanks, hyphens and dots, in
-    capitals, and must pass; all other ids stay as they are, without the blanks around them. National check digits
-    inside an IBAN are not looked at: ISO 13616 does not know them.
+    capitals, without the word IBAN that forms print before it, and must pass; all other ids stay as they are, without
+    the blanks around them. National check digits inside an IBAN are not looked at: ISO 13616 does not know them.
     """
     text = raw.str.strip_chars().alias("text")
-    table = pl.DataFrame({"text": text, "iban": _compact(text)})
+    table = pl.DataFrame({"text": text, "iban": _compact(text).str.replace("^IBAN:?", "")})
     looks = table["iban"].str.contains(_SHAPE) & table["iban"].str.slice(0, 2).is_in(list(_forms()))
     fault = pl.Series("fault", [NO_IBAN if iban_only else None], pl.String).new_from_index(0, raw.len())
     if looks.any():
@@ -90,12 +90,10 @@ def _forms() -> dict[str, str]:
 
 def _fault(value: str) -> str | None:
     from stdnum import iban
-    from stdnum.exceptions import InvalidChecksum, ValidationError
+    from stdnum.exceptions import ValidationError
 
     try:
         iban.validate(value, check_country=False)
-    except InvalidChecksum:
-        return WRONG_DIGIT
-    except ValidationError:
-        return WRONG_FORM
+    except ValidationError:  # the library looks at the digits first, but of a wrong form they tell nothing
+        return WRONG_DIGIT if re.fullmatch(_forms()[value[:2]], value[4:]) else WRONG_FORM
     return None

@@ -36,6 +36,7 @@ NULL, NOT_FINITE, NEGATIVE, LARGE, NO_CURRENCY, UNKNOWN, NO_UNIT, DECIMALS, NO_R
 )
 
 _WHOLE = pl.Int128()
+_NOISE = 1e-6  # minor units by which a sum of floats may be off, beside 4 units in the last place
 _RATE_PLACES = 15  # 10^18 x 10^4 minor units x 10^15 fits into 128 bits
 _LARGEST_RATE = Decimal(10) ** 12
 _RATES = {"currency": pl.String(), "day": pl.Int32(), "rate": _WHOLE}
@@ -117,15 +118,16 @@ class Money:
             value, type_ = pl.lit(None, pl.Float64), pl.Float64()
         rough = value.cast(pl.Float64)
         limit = LARGEST * 10.0**places if self.minor else float(LARGEST)
-        # a share of a minor unit that a decimal column states is a mistake, in a float it is noise
+        # a share of a minor unit is a mistake, unless it is a float's noise
         excess: pl.Expr = pl.lit(False)
         if type_.is_float():
             sound = pl.when(rough.is_finite() & (rough.abs() <= limit)).then(rough)
-            # exact beyond 2^53, too: the float's own whole part, an even number so that halves stay what they are
-            base = (sound / 2).floor() * 2
+            base = sound.floor()  # apart, so that it is exact beyond 2^53, too
             power = pl.lit(0) if self.minor else places
-            rest = ((sound - base) * 10.0**power).round(mode="half_to_even").cast(_WHOLE)
-            whole = base.cast(_WHOLE) * _power(power) + rest
+            rest = (sound - base) * 10.0**power
+            whole = base.cast(_WHOLE) * _power(power) + rest.round().cast(_WHOLE)
+            ulps = 4 * sound.abs() * 10.0**power * (2.0**-23 if type_ == pl.Float32() else 2.0**-52)
+            excess = (rest - rest.round()).abs() > _NOISE + ulps
         else:
             scale = type_.scale if isinstance(type_, pl.Decimal) else 0
             stated = value.to_physical().cast(_WHOLE) if scale else value.cast(_WHOLE, strict=False)

@@ -1,7 +1,7 @@
 """What identifies a payment, and how returns and reversals are set against the payment they take back.
 
-References in their order: UETR, then TxId, which both are unique; then EndToEndId, which its payer chose and may use
-again, so that it counts only together with the two accounts.
+References in their order: UETR, which is unique; then TxId, which a bank chose, and EndToEndId, which the payer chose
+and may use again. Two banks or payers may choose the same, so that both count only together with the two accounts.
 """
 
 from __future__ import annotations
@@ -16,7 +16,7 @@ from isthmus.readings.reading import AMOUNT, FILTERED
 __all__ = ["REFERENCES", "netted", "own_identity", "references"]
 
 REFERENCES = ("uetr", "tx_id", "end_to_end_id")
-UNIQUE = REFERENCES[:2]
+AT_ONCE = 200  # returns that are set beside all payments of their id, which may be many
 
 IN_FULL = "returned in full"
 IN_WINDOW = "return of a payment in the window"
@@ -39,7 +39,7 @@ def references(contacts: pl.DataFrame, keys: pl.Series, known: list[str], placeh
         text = text.to_frame().select(_cleaned(name, placeholders))[name]
         for turn, ending in enumerate(("", "_2")):
             value = text.hash(2 * REFERENCES.index(of) + turn + 1)
-            if of not in UNIQUE:
+            if of != "uetr":
                 value = value ^ both
             value = value.set(text.is_null(), None)
             if places is not None:
@@ -64,12 +64,15 @@ def own_identity(rows: pl.DataFrame, known: list[str]) -> list[pl.Series]:
     may carry the ids of its original, as reversals in a statement do, and one payment may be returned in parts: so
     returns are the same only when the accounts, the amount and the day are the same, too.
     """
-    own = [name for name in known if name in UNIQUE]
     result = []
     for turn, ending in enumerate(("", "_2")):
         identity = pl.Series([None], dtype=pl.UInt64).new_from_index(0, len(rows))
-        for name in own:
-            identity = identity.zip_with(identity.is_not_null(), rows[f"{name}{ending}"])
+        if "uetr" in known:
+            identity = rows[f"uetr{ending}"]
+        if "tx_id" in known:  # its hash knows the two accounts, but not which of them paid
+            directed = pl.struct(f"tx_id{ending}", "sender", "receiver").hash(turn + 21)
+            directed = pl.when(pl.col(f"tx_id{ending}").is_not_null()).then(directed).alias("tx_id")
+            identity = identity.zip_with(identity.is_not_null(), rows.select(directed)["tx_id"])
         weak = rows["back"]
         if "end_to_end_id" in known:
             weak |= identity.is_null() & rows["end_to_end_id"].is_not_null()
@@ -101,8 +104,10 @@ def netted(rows: pl.LazyFrame, gone: pl.DataFrame, known: list[str], places: int
     for name in known:
         asked = left[name].drop_nulls().unique()
         originals = rows.filter(~pl.col("back") & pl.col(name).is_in(asked.implode())).select(*wanted, name).collect()
-        originals = originals.join(gone, on=here, how="anti").sort("time", "part", "at")
-        match = _matched(left.filter(pl.col(name).is_not_null()), originals, name)
+        originals = originals.join(gone, on=here, how="anti")
+        named = originals.rename({column: f"{column}_original" for column in wanted})
+        slices = [left.clear(), *left.filter(pl.col(name).is_not_null()).iter_slices(AT_ONCE)]
+        match = pl.concat([_matched(some, named, name) for some in slices])
         found.append(match.select(*wanted, *(f"{column}_original" for column in wanted)))
         left = left.join(match, on=here, how="anti")
     outside = left.select(*here, outcome=pl.lit(FILTERED), reason=pl.lit(OUTSIDE), amount="amount")
@@ -110,15 +115,16 @@ def netted(rows: pl.LazyFrame, gone: pl.DataFrame, known: list[str], places: int
 
 
 def _matched(returns: pl.DataFrame, originals: pl.DataFrame, name: str) -> pl.DataFrame:
-    named = originals.rename({column: f"{column}_original" for column in originals.columns if column != name})
-    if name in UNIQUE:
-        return returns.join(named.unique(name, keep="first", maintain_order=True), on=name)
-    # an id that its payer used again: the last such payment before the return
-    return (
-        returns.sort("time")
-        .join_asof(named, left_on="time", right_on="time_original", by=name, coalesce=False, check_sortedness=False)
-        .filter(pl.col("at_original").is_not_null())
-    )
+    """Each return with the one payment, among those of its id, that it most likely takes back: made before it (by
+    EndToEndId surely); of its amount, else of no less in its currency; and the latest of those."""
+    before = pl.col("time_original") <= pl.col("time")
+    amount = "paid" if "paid" in returns.columns else "amount"
+    same = pl.col("currency") == pl.col("currency_original") if amount == "paid" else pl.lit(True)
+    equal = same & (pl.col(f"{amount}_original") == pl.col(amount))
+    enough = same & (pl.col(f"{amount}_original") >= pl.col(amount))
+    pairs = returns.join(originals, on=name).filter(before | pl.lit(name != "end_to_end_id"))
+    pairs = pairs.sort(before, equal, enough, "time_original", "part_original", "at_original")
+    return pairs.unique(["part", "at"], keep="last", maintain_order=True)
 
 
 def _set_against(pairs: pl.DataFrame, several: bool, places: int) -> list[pl.DataFrame]:
