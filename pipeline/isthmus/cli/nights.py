@@ -124,10 +124,12 @@ def check(
     from isthmus.nightly import window_of, yesterday
 
     told, stops = [], []
-    for settings in all_series(config):
+    every = all_series(config)
+    for settings in every:
         forecast = foresee(settings, *window_of(settings, as_of or yesterday()))
         told.append(reports.forecast(console, settings, forecast))
-        stops += [forecast.stopped] if forecast.stopped else []
+        of = f"series {settings.series}: " if every[1:] else ""
+        stops += [of + forecast.stopped] if forecast.stopped else []
     console.answer(told if told[1:] else told[0])
     if stops:
         raise GateStopped("\n".join(stops))

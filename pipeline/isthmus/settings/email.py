@@ -58,7 +58,8 @@ class EmailRules(Section):
         50, "a message to more recipients is an announcement and left out; 0: no limit", "recipients", ge=0
     )
     worth: Literal["message", "share"] = key(
-        "message", "what a contact adds to its tie: message = 1; share = 1 / the message's recipients"
+        "message",
+        "what a contact adds to its tie: message = 1; share = 1 / its readable recipients, the sender not among them",
     )
     content_hash: bool = key(
         True,
