@@ -109,7 +109,8 @@ class Site:
         return {
             str(path.relative_to(self.warehouse)): path.read_bytes()
             for path in sorted(self.warehouse.rglob("*"))
-            if path.is_file() and path.relative_to(self.warehouse).parts[0] not in (".nights", ".leases")
+            if path.is_file()
+            and path.relative_to(self.warehouse).parts[0] not in (".nights", ".leases", "isthmus.duckdb")
         }
 
     def tree(self) -> dict[str, tuple[Any, ...]]:

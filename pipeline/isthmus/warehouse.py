@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import io
 import json
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Iterator, Sequence
 from contextlib import suppress
 from dataclasses import dataclass, field
 from datetime import date
@@ -16,7 +16,6 @@ from html import escape
 from typing import Any
 
 import polars as pl
-from polars.io.plugins import register_io_source
 
 from isthmus.errors import StoreError
 from isthmus.store import LAYOUT_FILE, Folder, Place, layout_in, place
@@ -45,7 +44,7 @@ class WholeNight:
 class Warehouse:
     """One attribute per published table, such as `.scores`: a LazyFrame over `nights`, columns series and as_of first.
 
-    In a folder a frame is scanned as any Parquet is; of an object store a query fetches whole tables, one at a time.
+    In a folder a frame is scanned as any Parquet is; of an object store the attribute fetches the table, whole.
     """
 
     place: Place
@@ -144,29 +143,7 @@ def _frame(from_: Place, table: str, nights: list[WholeNight]) -> pl.LazyFrame:
 
     if not nights:
         return pl.LazyFrame(schema=partition | schema)
-    if isinstance(from_, Folder):
-        return pl.concat([scan(night) for night in nights])
-    return register_io_source(_one_by_one(nights, scan), schema=partition | schema)
-
-
-def _one_by_one(nights: list[WholeNight], scan: Callable[[WholeNight], pl.LazyFrame]) -> Any:
-    """Objects are fetched when a query runs, a night at a time: never a year of them in memory at once."""
-
-    def frames(
-        columns: list[str] | None, predicate: pl.Expr | None, n_rows: int | None, batch_size: int | None
-    ) -> Iterator[pl.DataFrame]:
-        for night in nights:
-            if n_rows == 0:
-                return
-            lazy = scan(night)
-            if n_rows is not None:
-                lazy = lazy.head(n_rows)  # of the rows before the predicate, as Polars asks
-            frame = lazy.collect()
-            n_rows = None if n_rows is None else n_rows - frame.height
-            frame = frame if predicate is None else frame.filter(predicate)
-            yield frame if columns is None else frame.select(columns)
-
-    return frames
+    return pl.concat([scan(night) for night in nights])
 
 
 def _bytes(from_: Place, path: str) -> bytes:
