@@ -12,6 +12,7 @@ from typing import Any
 import polars as pl
 
 from isthmus.cli import exit_code
+from isthmus.settings import load
 
 AS_OF = date(2026, 3, 4)
 FIRST = date(2026, 3, 1)
@@ -112,6 +113,11 @@ class Site:
             if path.is_file()
             and path.relative_to(self.warehouse).parts[0] not in (".nights", ".leases", "isthmus.duckdb")
         }
+
+    @property
+    def reading(self) -> Path:
+        """Where the log's rows and days are kept between nights."""
+        return load(self.config).reading
 
     def tree(self) -> dict[str, tuple[Any, ...]]:
         """Everything below the root: size and time of the last change of each file and folder."""

@@ -61,7 +61,7 @@ def take_from_the_log(site: Site, party: str = BETWEEN) -> None:
 
 def test_old_nights_and_what_was_kept_of_their_days_go(tmp_path: Path) -> None:
     site = scored(tmp_path)
-    work, reading = site.work / "series=s", site.work / "reading"
+    work, reading = site.work / "series=s", site.reading
     (work / "endings").mkdir(exist_ok=True)
     for night in NIGHTS:
         (work / "endings" / f"{night}.json").write_text("{}")

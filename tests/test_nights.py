@@ -127,13 +127,13 @@ def test_what_was_damaged_is_made_anew(site: Site, read: Counter[str], kind: str
     """The last day's table has to be made again, from a part of which a file is not what was kept."""
     assert night(site, AS_OF).code == 0
     before = tables(site)
-    day = next((site.work / "reading" / "days").glob(f"{DAYS[3]}-*"))
+    day = next((site.reading / "days").glob(f"{DAYS[3]}-*"))
     if kind == "days":
         harmed = day / "ties.arrow"
     else:
         shutil.rmtree(day)
         number = (DAYS[3] - date(1970, 1, 1)).days
-        harmed = next((site.work / "reading" / "parts").glob(f"*/ties-{number}.arrow"))
+        harmed = next((site.reading / "parts").glob(f"*/ties-{number}.arrow"))
     raw = harmed.read_bytes()
     if harm == "gone":
         harmed.unlink()
@@ -147,10 +147,10 @@ def test_what_was_damaged_is_made_anew(site: Site, read: Counter[str], kind: str
 
 def test_what_is_not_used_for_long_goes(site: Site) -> None:
     assert night(site, AS_OF).code == 0
-    kept = list((site.work / "reading").glob("*/*/contents.json"))
+    kept = list((site.reading).glob("*/*/contents.json"))
     assert len(kept) == 8
     old = time.time() - 11 * 86_400
-    stray = site.work / "reading" / "parts" / "stray"
+    stray = site.reading / "parts" / "stray"
     stray.mkdir()
     (stray / "contents.json").write_text('{"facts": {}, "files": {}}')
     for path in [*kept, stray / "contents.json"]:

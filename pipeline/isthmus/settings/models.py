@@ -235,13 +235,14 @@ class Settings(Section):
 
     @property
     def reading(self) -> Path:
-        """The folder of rows and days as they were read, which all series of a work folder share."""
-        return Path(self.run.work) / "reading-pseudonyms" if self.privacy.pseudonyms else self.clear_reading
+        """The folder of rows and days as they were read, which all series of this log share in a work folder."""
+        clear = self.clear_reading
+        return clear.with_name(f"{clear.name}-pseudonyms") if self.privacy.pseudonyms else clear
 
     @property
     def clear_reading(self) -> Path:
         """The same, of keys in clear: a night with pseudonyms leaves nothing there."""
-        return Path(self.run.work) / "reading"
+        return Path(self.run.work) / f"log={hashlib.sha256(self.log.path.encode()).hexdigest()[:16]}"
 
     @property
     def definition(self) -> str:
